@@ -1,0 +1,1 @@
+"""Benchmarks of streambasis: ``python -m bench [QUESTION ...]``."""

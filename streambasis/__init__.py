@@ -1,0 +1,35 @@
+"""streambasis: an orthonormal basis of what a multi-channel feed has shown, kept up to date.
+
+The names below are loaded when first used, so that importing the package costs nothing but this
+file. The product is advisory: it is not a protective or safety-instrumented function.
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+from streambasis._version import __version__
+
+if TYPE_CHECKING:
+    from streambasis.basis import StreamBasis
+    from streambasis.errors import StreambasisError
+
+_HOMES = {
+    "StreamBasis": "streambasis.basis",
+    "StreambasisError": "streambasis.errors",
+}
+
+__all__ = ["StreamBasis", "StreambasisError", "__version__"]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOMES:
+        value = getattr(importlib.import_module(_HOMES[name]), name)
+        globals()[name] = value
+        return value
+    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted({*globals(), *_HOMES})

@@ -1,0 +1,263 @@
+"""StreamBasis: an orthonormal basis of what a feed has shown, one sample at a time."""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Iterable
+from typing import Any, Self
+
+import numpy as np
+from numpy.typing import ArrayLike, DTypeLike, NDArray
+
+from streambasis.audit import Audit, orthogonality
+from streambasis.decisions import REASONS, Decision, Decisions
+from streambasis.errors import SettingError
+from streambasis.growth import Growth
+from streambasis.inner import Inner
+from streambasis.kernels import growth as kernels
+from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
+from streambasis.state import State
+
+ROUNDING_FLOOR = 8.0
+"""A relative tolerance below this many machine epsilons acts as that: one Gram-Schmidt pass leaves
+a dependent sample with a residual of a few epsilons, which is rounding and no direction."""
+
+POLICIES = {
+    "criterion": kernels.CRITERION,
+    "never": kernels.NEVER,
+    "always": kernels.ALWAYS,
+}
+
+_new = tuple.__new__
+
+
+class StreamBasis:
+    """An orthonormal basis that grows by the samples that do not fit it.
+
+    Parameters
+    ----------
+    channels : int or sequence of str
+        How many channels, or their distinct names.
+    rtol, atol : float
+        A sample grows the basis when ``|residual| > max(atol, rtol·|sample|)``. ``rtol=None`` is
+        the square root of the machine epsilon; a value below 8 epsilons acts as 8 epsilons.
+    capacity : int, optional
+        Most directions kept; the number of channels where not given.
+    dtype : str or dtype
+        float32, float64, complex64 or complex128.
+    inner : None, (n,) positive weights or (n, n) Hermitian positive definite matrix
+        The inner product.
+
+    Raises
+    ------
+    SettingError
+        For a setting outside its range.
+
+    Examples
+    --------
+    >>> from streambasis import StreamBasis
+    >>> basis = StreamBasis(3)
+    >>> basis.push([1.0, 1.0, 0.0]).grew, basis.push([2.0, 2.0, 0.0]).grew
+    (True, False)
+    """
+
+    __slots__ = ("_arrays", "_channels", "_core", "_inner", "_lock", "_sample", "_shape")
+
+    def __init__(
+        self,
+        channels: int | Iterable[str],
+        *,
+        rtol: float | None = None,
+        atol: float = 0.0,
+        capacity: int | None = None,
+        dtype: DTypeLike = "float64",
+        inner: ArrayLike | None = None,
+        reorthogonalize: str = "criterion",
+    ) -> None:
+        self._channels = Channels(channels)
+        count = self._channels.count
+        kind = checked_dtype(dtype)
+        epsilon = float(np.finfo(kind).eps)
+        rtol = epsilon**0.5 if rtol is None else float(rtol)
+        if not 0.0 <= rtol < 1.0:
+            raise SettingError(f"rtol={rtol}: a relative tolerance is at least 0 and below 1")
+        if not 0.0 <= atol < np.inf:
+            raise SettingError(f"atol={atol}: an absolute tolerance is at least 0 and finite")
+        if capacity is None:
+            capacity = count
+        elif not 1 <= capacity <= count:
+            raise SettingError(f"capacity={capacity}: from 1 to the number of channels ({count})")
+        if reorthogonalize not in POLICIES:
+            raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
+        self._inner = Inner(inner, count, kind)
+        self._core = Growth(
+            count,
+            int(capacity),
+            max(rtol, ROUNDING_FLOOR * epsilon),
+            float(atol),
+            POLICIES[reorthogonalize],
+            kind,
+        )
+        self._lock = threading.Lock()
+        self._sample = self._core.sample
+        self._shape = (count,)
+        self._arrays = self._core.arrays
+
+    @property
+    def channels(self) -> tuple[str, ...]:
+        """Names of the channels."""
+        return self._channels.names
+
+    @property
+    def dtype(self) -> np.dtype[Any]:
+        """Type of the samples and directions."""
+        dtype: np.dtype[Any] = self._sample.dtype
+        return dtype
+
+    @property
+    def rank(self) -> int:
+        """Directions held."""
+        return self._core.rank
+
+    @property
+    def count(self) -> int:
+        """Samples seen."""
+        return self._core.count
+
+    @property
+    def vectors(self) -> NDArray[Any]:
+        """The directions in channel units, (rank, n), read-only."""
+        with self._lock:
+            out = self._inner.leave(self._core.directions.copy())
+        out.setflags(write=False)
+        return out
+
+    @property
+    def pivots(self) -> NDArray[np.int64]:
+        """Number of the pivot sample of each direction, (rank,)."""
+        with self._lock:
+            return self._core.pivots
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes held."""
+        return self._core.nbytes
+
+    def push(self, sample: ArrayLike) -> Decision:
+        """Take one sample, shape (n,), and decide whether it adds a direction."""
+        with self._lock:
+            if (
+                sample.__class__ is np.ndarray
+                and sample.dtype is self._sample.dtype
+                and sample.shape == self._shape
+                and self._inner.kind == "euclidean"
+            ):
+                self._sample[:] = sample
+            else:
+                checked = one_sample(sample, self._channels, self.dtype, number=self.count)
+                self._sample[:] = self._inner.enter(checked)
+            return self._take(sample)
+
+    def _take(self, sample: Any) -> Decision:
+        while True:
+            number, norm, residual, tolerance, grew, reason, rank, passes, expired, dropped = (
+                self._core.kernel(*self._arrays)
+            )
+            if reason >= 0:
+                return _new(
+                    Decision,
+                    (
+                        number,
+                        norm,
+                        residual,
+                        tolerance,
+                        grew,
+                        REASONS[reason],
+                        rank,
+                        passes,
+                        expired,
+                        dropped,
+                    ),
+                )
+            if reason == kernels.NOT_FINITE:
+                one_sample(sample, self._channels, self.dtype, number=self.count)
+                raise SettingError(
+                    f"sample {self.count}: its norm in the inner product is beyond {self.dtype}"
+                )
+            self._core.make_room()
+            self._arrays = self._core.arrays
+
+    def push_many(self, samples: Any) -> Decisions:
+        """Take a batch, (m, n) or Arrow, as if pushed one at a time."""
+        with self._lock:
+            checked = many_samples(samples, self._channels, self.dtype, first=self.count)
+            records = []
+            for row, entered in zip(checked, self._inner.enter(checked), strict=True):
+                self._sample[:] = entered
+                records.append(self._take(row))
+        columns = list(zip(*records, strict=True)) or [()] * len(Decision._fields)
+        kinds = [np.int64, float, float, float, bool, np.str_, *[np.int64] * 4]
+        return Decisions(*(np.array(c, k) for c, k in zip(columns, kinds, strict=True)))
+
+    def coordinates(self, x: ArrayLike) -> NDArray[Any]:
+        """Return the inner products of x, (n,) or (m, n), with the directions."""
+        return self._split(x)[0]
+
+    def project(self, x: ArrayLike) -> NDArray[Any]:
+        """Return the part of x inside the basis."""
+        coordinates, _ = self._split(x)
+        with self._lock:
+            return self._inner.leave(coordinates @ self._core.directions)
+
+    def residual(self, x: ArrayLike) -> NDArray[Any]:
+        """Return the part of x outside the basis."""
+        return self._inner.leave(self._split(x)[1])
+
+    def _split(self, x: ArrayLike) -> tuple[NDArray[Any], NDArray[Any]]:
+        array = np.asarray(x)
+        check = one_sample if array.ndim == 1 else many_samples
+        entered = self._inner.enter(check(array, self._channels, self.dtype))
+        with self._lock:
+            directions = self._core.directions
+            first = entered @ directions.conj().T
+            rest = entered - first @ directions
+            second = rest @ directions.conj().T
+            return first + second, rest - second @ directions
+
+    def audit(self) -> Audit:
+        """Measure the orthonormality and the condition of the basis."""
+        with self._lock:
+            core = self._core
+            k = core.rank
+            condition = 1.0
+            if k:
+                factor = core.factor[:k, :k]
+                scaled = factor / np.linalg.norm(factor, axis=1)[:, None]
+                condition = float(np.linalg.cond(scaled))
+            return Audit(orthogonality(core.directions), np.nan, condition, 0, k, core.count)
+
+    def to_state(self) -> State:
+        """Hand over everything needed to go on."""
+        with self._lock:
+            facts = {
+                "channels": list(self._channels.names),
+                "named": self._channels.named,
+                "dtype": self.dtype.name,
+                "inner": self._inner.kind,
+            }
+            arrays = {} if self._inner.given is None else {"inner": self._inner.given}
+            return State("StreamBasis", facts, arrays, {"core": self._core.to_state()})
+
+    @classmethod
+    def from_state(cls, state: State) -> Self:
+        """Build a basis that goes on where the state was taken."""
+        facts = state.facts
+        names = facts["channels"]
+        basis = cls(
+            names if facts["named"] else len(names),
+            dtype=facts["dtype"],
+            inner=state.arrays.get("inner"),
+        )
+        basis._core.set_state(state.parts["core"])
+        basis._arrays = basis._core.arrays
+        return basis

@@ -1,0 +1,111 @@
+"""Inner products, applied at the door so that one set of kernels serves them all.
+
+With a Hermitian positive definite ``M = L Lᴴ`` the inner product of channel-unit vectors is
+``<a, b> = aᴴ M b = (Lᴴ a)ᴴ (Lᴴ b)``: ``y = Lᴴ x`` enters the Euclidean world in which every kernel
+works, and ``x = L⁻ᴴ y`` leaves it again. Weights are the diagonal case.
+"""
+
+from __future__ import annotations
+
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from streambasis.errors import SettingError
+
+
+class Inner:
+    """An inner product on the channels, as a pair of linear maps.
+
+    Parameters
+    ----------
+    inner : None, array_like of shape (n,) or (n, n)
+        None for the Euclidean inner product, positive weights, or a Hermitian positive definite
+        matrix.
+    count : int
+        Number of channels n.
+    dtype : numpy.dtype
+        Type of the samples. A complex matrix needs a complex dtype.
+
+    Raises
+    ------
+    SettingError
+        If the shape is neither, a weight is not positive and finite, or the matrix is not
+        Hermitian positive definite.
+
+    Notes
+    -----
+    The Cholesky factor and its inverse are taken once in double precision; each passage of m
+    samples costs 2·m·n² flops with a matrix, m·n with weights and nothing without.
+    """
+
+    __slots__ = ("_into", "_out", "dtype", "given", "kind")
+
+    def __init__(self, inner: ArrayLike | None, count: int, dtype: np.dtype[Any]) -> None:
+        self.dtype: Final = dtype
+        self.given: NDArray[Any] | None = None
+        if inner is None:
+            self.kind = "euclidean"
+            return
+        array = np.array(inner)
+        if array.dtype.kind not in "biufc" or not np.isfinite(array).all():
+            raise SettingError("inner: weights or matrix entries must be finite numbers")
+        if array.shape == (count,):
+            self.kind = "weights"
+            if array.dtype.kind == "c" or not (array > 0).all():
+                channel = int(np.argmax(~(array.real > 0)))
+                raise SettingError(
+                    f"inner: weight {array[channel]} of channel {channel}; weights are positive"
+                )
+            roots = np.sqrt(array.astype(np.float64))
+            self._into, self._out = self._typed(roots), self._typed(1.0 / roots)
+        elif array.shape == (count, count):
+            self.kind = "matrix"
+            if array.dtype.kind == "c" and dtype.kind != "c":
+                raise SettingError(f"inner: a complex matrix needs a complex dtype, not {dtype}")
+            wide = array.astype(np.complex128 if array.dtype.kind == "c" else np.float64)
+            gap = np.abs(wide - wide.conj().T).max()
+            if gap > 64 * np.finfo(np.float64).eps * np.abs(wide).max():
+                raise SettingError(
+                    f"inner: the matrix differs from its conjugate transpose by {gap:.3g}; "
+                    "give a Hermitian one, such as (M + M.conj().T) / 2"
+                )
+            try:
+                lower = np.linalg.cholesky(wide)
+            except np.linalg.LinAlgError:
+                least = float(np.linalg.eigvalsh(wide)[0])
+                raise SettingError(
+                    f"inner: the matrix is not positive definite (least eigenvalue {least:.3g})"
+                ) from None
+            # samples are rows here: (Lᴴ x)ᵀ = xᵀ conj(L)
+            rows = np.ascontiguousarray(lower.conj())
+            self._into, self._out = self._typed(rows), self._typed(np.linalg.inv(rows))
+        else:
+            raise SettingError(
+                f"inner: shape {array.shape}, expected None, ({count},) or ({count}, {count})"
+            )
+        self.given = array
+        self.given.setflags(write=False)
+
+    def _typed(self, array: NDArray[Any]) -> NDArray[Any]:
+        if array.dtype.kind != "c" and self.kind == "weights":
+            return array.astype(np.finfo(self.dtype).dtype)
+        return array.astype(self.dtype)
+
+    def enter(self, samples: NDArray[Any]) -> NDArray[Any]:
+        """Take channel-unit samples, (n,) or (m, n), into Euclidean coordinates."""
+        if self.kind == "euclidean":
+            return samples
+        out: NDArray[Any]
+        with np.errstate(over="ignore", invalid="ignore"):  # the kernels refuse what overflows
+            out = samples * self._into if self.kind == "weights" else samples @ self._into
+        return out
+
+    def leave(self, vectors: NDArray[Any]) -> NDArray[Any]:
+        """Take Euclidean vectors, (n,) or (m, n), back into channel units."""
+        if self.kind == "euclidean":
+            return vectors
+        out: NDArray[Any]
+        out = vectors * self._out if self.kind == "weights" else vectors @ self._out
+        return out

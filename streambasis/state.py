@@ -1,0 +1,56 @@
+"""The plain state that objects hand over and take back.
+
+A state is data alone: scalars, text, arrays and the states of parts. Objects build one and are
+built from one; :mod:`streambasis.snapshot` writes one to an Arrow file. Neither knows the other.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any, Protocol, Self, runtime_checkable
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+@dataclass(slots=True)
+class State:
+    """Everything an object needs to go on as if it had never stopped.
+
+    Attributes
+    ----------
+    kind : str
+        Which object this is the state of, such as ``"StreamBasis"``. A kind never changes meaning.
+    facts : dict
+        Scalars, text, None, and lists or dicts of these: whatever JSON holds exactly. Integers
+        beyond 2**53 and floats (by ``repr``) survive.
+    arrays : dict of str to ndarray
+        Arrays of at most two dimensions; float32, float64, complex64, complex128, int64, int32
+        or bool.
+    parts : dict of str to State
+        The states of the objects that this one owns.
+    """
+
+    kind: str
+    facts: dict[str, Any] = field(default_factory=dict)
+    arrays: dict[str, NDArray[Any]] = field(default_factory=dict)
+    parts: dict[str, State] = field(default_factory=dict)
+
+
+@runtime_checkable
+class Stateful(Protocol):
+    """An object that can hand over its state and be built from it."""
+
+    def to_state(self) -> State:
+        """Return a state that shares no memory that later updates change."""
+        ...
+
+    @classmethod
+    def from_state(cls, state: State) -> Self:
+        """Build an object that goes on exactly where ``state`` was taken."""
+        ...
+
+
+def owned(array: NDArray[Any]) -> NDArray[Any]:
+    """Return a contiguous copy that nobody else writes to."""
+    return np.array(array, order="C", copy=True)
