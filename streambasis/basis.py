@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike, DTypeLike, NDArray
 
 from streambasis.audit import Audit, orthogonality
 from streambasis.decisions import REASONS, Decision, Decisions
-from streambasis.errors import SettingError
+from streambasis.errors import SampleError, SettingError
 from streambasis.growth import Growth
 from streambasis.inner import Inner
 from streambasis.kernels import growth as kernels
@@ -43,6 +43,10 @@ class StreamBasis:
         the square root of the machine epsilon; a value below 8 epsilons acts as 8 epsilons.
     capacity : int, optional
         Most directions kept; the number of channels where not given.
+    window : int, optional
+        Samples kept; None keeps what was learned for ever.
+    span : float, datetime.timedelta or numpy.timedelta64, optional
+        Length of time kept; None for no limit.
     dtype : str or dtype
         float32, float64, complex64 or complex128.
     inner : None, (n,) positive weights or (n, n) Hermitian positive definite matrix
@@ -61,7 +65,17 @@ class StreamBasis:
     (True, False)
     """
 
-    __slots__ = ("_arrays", "_channels", "_core", "_inner", "_lock", "_sample", "_shape")
+    __slots__ = (
+        "_arrays",
+        "_channels",
+        "_core",
+        "_dtype",
+        "_inner",
+        "_kernel",
+        "_lock",
+        "_plain",
+        "_shape",
+    )
 
     def __init__(
         self,
@@ -70,6 +84,8 @@ class StreamBasis:
         rtol: float | None = None,
         atol: float = 0.0,
         capacity: int | None = None,
+        window: int | None = None,
+        span: Any = None,
         dtype: DTypeLike = "float64",
         inner: ArrayLike | None = None,
         reorthogonalize: str = "criterion",
@@ -89,6 +105,8 @@ class StreamBasis:
             raise SettingError(f"capacity={capacity}: from 1 to the number of channels ({count})")
         if reorthogonalize not in POLICIES:
             raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
+        if window is not None or span is not None:
+            raise SettingError(f"window={window}, span={span}: a window is not supported yet")
         self._inner = Inner(inner, count, kind)
         self._core = Growth(
             count,
@@ -99,8 +117,13 @@ class StreamBasis:
             kind,
         )
         self._lock = threading.Lock()
-        self._sample = self._core.sample
+        self._dtype = kind
         self._shape = (count,)
+        self._plain = self._inner.kind == "euclidean"
+        self._bind()
+
+    def _bind(self) -> None:
+        self._kernel = self._core.kernel
         self._arrays = self._core.arrays
 
     @property
@@ -111,8 +134,7 @@ class StreamBasis:
     @property
     def dtype(self) -> np.dtype[Any]:
         """Type of the samples and directions."""
-        dtype: np.dtype[Any] = self._sample.dtype
-        return dtype
+        return self._dtype
 
     @property
     def rank(self) -> int:
@@ -136,68 +158,80 @@ class StreamBasis:
     def pivots(self) -> NDArray[np.int64]:
         """Number of the pivot sample of each direction, (rank,)."""
         with self._lock:
-            return self._core.pivots
+            return self._core.pivots.copy()
 
     @property
     def nbytes(self) -> int:
         """Bytes held."""
         return self._core.nbytes
 
-    def push(self, sample: ArrayLike) -> Decision:
+    def push(self, sample: ArrayLike, at: Any = None) -> Decision:
         """Take one sample, shape (n,), and decide whether it adds a direction."""
         with self._lock:
-            if (
+            if at is not None:
+                self._core.stamp(at)
+            if not (
                 sample.__class__ is np.ndarray
-                and sample.dtype is self._sample.dtype
+                and sample.dtype is self._dtype
                 and sample.shape == self._shape
-                and self._inner.kind == "euclidean"
+                and sample.flags.carray
+                and self._plain
             ):
-                self._sample[:] = sample
-            else:
-                checked = one_sample(sample, self._channels, self.dtype, number=self.count)
-                self._sample[:] = self._inner.enter(checked)
-            return self._take(sample)
-
-    def _take(self, sample: Any) -> Decision:
-        while True:
+                sample = self._entered(sample)
             number, norm, residual, tolerance, grew, reason, rank, passes, expired, dropped = (
-                self._core.kernel(*self._arrays)
+                self._kernel(sample, *self._arrays)
             )
-            if reason >= 0:
-                return _new(
-                    Decision,
-                    (
-                        number,
-                        norm,
-                        residual,
-                        tolerance,
-                        grew,
-                        REASONS[reason],
-                        rank,
-                        passes,
-                        expired,
-                        dropped,
-                    ),
-                )
-            if reason == kernels.NOT_FINITE:
-                one_sample(sample, self._channels, self.dtype, number=self.count)
-                raise SettingError(
-                    f"sample {self.count}: its norm in the inner product is beyond {self.dtype}"
-                )
-            self._core.make_room()
-            self._arrays = self._core.arrays
+            if reason < 0:
+                return self._again(sample, reason)
+            return _new(
+                Decision,
+                (
+                    number,
+                    norm,
+                    residual,
+                    tolerance,
+                    grew,
+                    REASONS[reason],
+                    rank,
+                    passes,
+                    expired,
+                    dropped,
+                ),
+            )
 
-    def push_many(self, samples: Any) -> Decisions:
+    def _entered(self, sample: ArrayLike) -> NDArray[Any]:
+        checked = one_sample(sample, self._channels, self._dtype, number=self._core.count)
+        entered = np.ascontiguousarray(self._inner.enter(checked))
+        if not np.isfinite(entered).all():
+            raise SampleError(self._beyond(self._core.count))
+        return entered
+
+    def _beyond(self, number: int) -> str:
+        return f"sample {number}: its size in the inner product is beyond {self._dtype}"
+
+    def _again(self, sample: NDArray[Any], reason: int) -> Decision:
+        """Answer a kernel that changed nothing: refuse the sample, or make room and repeat."""
+        if reason == kernels.NOT_FINITE:
+            one_sample(sample, self._channels, self._dtype, number=self._core.count)
+        self._core.make_room()
+        self._bind()
+        record = self._kernel(sample, *self._arrays)
+        return _new(Decision, (*record[:5], REASONS[record[5]], *record[6:]))
+
+    def push_many(self, samples: Any, at: Any = None) -> Decisions:
         """Take a batch, (m, n) or Arrow, as if pushed one at a time."""
         with self._lock:
-            checked = many_samples(samples, self._channels, self.dtype, first=self.count)
-            records = []
-            for row, entered in zip(checked, self._inner.enter(checked), strict=True):
-                self._sample[:] = entered
-                records.append(self._take(row))
-        columns = list(zip(*records, strict=True)) or [()] * len(Decision._fields)
-        kinds = [np.int64, float, float, float, bool, np.str_, *[np.int64] * 4]
-        return Decisions(*(np.array(c, k) for c, k in zip(columns, kinds, strict=True)))
+            first = self._core.count
+            checked = many_samples(samples, self._channels, self._dtype, first=first)
+            entered = np.ascontiguousarray(self._inner.enter(checked))
+            if not self._plain:
+                fine = np.isfinite(entered).all(axis=1)
+                if not fine.all():
+                    raise SampleError(self._beyond(first + int(np.argmin(fine))))
+            try:
+                return self._core.push_block(entered, at)
+            finally:
+                self._bind()
 
     def coordinates(self, x: ArrayLike) -> NDArray[Any]:
         """Return the inner products of x, (n,) or (m, n), with the directions."""
@@ -231,7 +265,7 @@ class StreamBasis:
             k = core.rank
             condition = 1.0
             if k:
-                factor = core.factor[:k, :k]
+                factor = core.factor
                 scaled = factor / np.linalg.norm(factor, axis=1)[:, None]
                 condition = float(np.linalg.cond(scaled))
             return Audit(orthogonality(core.directions), np.nan, condition, 0, k, core.count)
@@ -259,5 +293,5 @@ class StreamBasis:
             inner=state.arrays.get("inner"),
         )
         basis._core.set_state(state.parts["core"])
-        basis._arrays = basis._core.arrays
+        basis._bind()
         return basis

@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.decisions import Decision, Decisions, reason_names
 from streambasis.kernels import growth as kernels
 from streambasis.state import State, owned
 
@@ -20,74 +21,51 @@ class Growth:
     -----
     A basis of rank k holds V (k, n) row by row and the lower triangular factor L (k, k) with
     ``pivot samples = L V``, each pivot sample scaled by its own power of two. Rows are allocated
-    as they are needed, at most doubling, never beyond the capacity.
+    as they are needed, at most doubling, never beyond the capacity and one: the row after the last
+    direction is where the next residual is computed, so that a growth copies nothing.
     """
 
-    __slots__ = (
-        "arrays",
-        "directions_held",
-        "exponents",
-        "factor",
-        "header",
-        "pivots_held",
-        "reals",
-        "sample",
-    )
-
-    kernel = staticmethod(kernels.push_growing)
+    __slots__ = ("arrays", "directions_held", "factor_held", "integers", "kernel", "reals")
 
     def __init__(
         self, count: int, capacity: int, rtol: float, atol: float, policy: int, dtype: np.dtype[Any]
     ) -> None:
-        rows = min(FIRST_ROWS, capacity)
-        self.sample = np.zeros(count, dtype)
+        self.kernel = kernels.push_growing
+        rows = min(FIRST_ROWS, capacity + 1)
         self.directions_held = np.zeros((rows, count), dtype)
-        self.factor = np.zeros((rows, rows), dtype)
-        self.pivots_held = np.zeros(rows, np.int64)
-        self.exponents = np.zeros(rows, np.int64)
-        self.header = np.zeros(kernels.HEADER, np.int64)
-        self.header[kernels.CAPACITY] = capacity
-        self.header[kernels.POLICY] = policy
+        self.factor_held = np.zeros((rows, rows), dtype)
+        self.integers = np.zeros(kernels.HEADER + 2 * rows, np.int64)
+        self.integers[kernels.CAPACITY] = capacity
+        self.integers[kernels.POLICY] = policy
         self.reals = np.array([rtol, atol])
         self._bind()
 
     def _bind(self) -> None:
-        rows, count = self.directions_held.shape
-        dtype = self.sample.dtype
-        self.arrays = (
-            self.sample,
-            np.zeros(count, dtype),
-            np.zeros(rows, dtype),
-            self.directions_held,
-            self.factor,
-            self.pivots_held,
-            self.exponents,
-            self.header,
-            self.reals,
-        )
+        self.arrays = (self.directions_held, self.factor_held, self.integers, self.reals)
 
     def make_room(self) -> None:
         """Allocate more rows; everything held stays as it is."""
         rows = self.directions_held.shape[0]
-        more = min(2 * rows, int(self.header[kernels.CAPACITY]))
-        directions = np.zeros((more, self.sample.shape[0]), self.sample.dtype)
+        more = min(2 * rows, int(self.integers[kernels.CAPACITY]) + 1)
+        directions = np.zeros((more, self.directions_held.shape[1]), self.directions_held.dtype)
         directions[:rows] = self.directions_held
-        factor = np.zeros((more, more), self.sample.dtype)
-        factor[:rows, :rows] = self.factor
-        self.directions_held, self.factor = directions, factor
-        self.pivots_held = np.concatenate([self.pivots_held, np.zeros(more - rows, np.int64)])
-        self.exponents = np.concatenate([self.exponents, np.zeros(more - rows, np.int64)])
+        factor = np.zeros((more, more), directions.dtype)
+        factor[:rows, :rows] = self.factor_held
+        integers = np.zeros(kernels.HEADER + 2 * more, np.int64)
+        integers[: kernels.HEADER + rows] = self.integers[: kernels.HEADER + rows]
+        integers[kernels.HEADER + more :][:rows] = self.integers[kernels.HEADER + rows :]
+        self.directions_held, self.factor_held, self.integers = directions, factor, integers
         self._bind()
 
     @property
     def count(self) -> int:
         """Samples seen."""
-        return int(self.header[kernels.COUNT])
+        return int(self.integers[kernels.COUNT])
 
     @property
     def rank(self) -> int:
         """Directions held."""
-        return int(self.header[kernels.RANK])
+        return int(self.integers[kernels.RANK])
 
     @property
     def directions(self) -> NDArray[Any]:
@@ -95,26 +73,53 @@ class Growth:
         return self.directions_held[: self.rank]
 
     @property
+    def factor(self) -> NDArray[Any]:
+        """The lower triangular factor, (rank, rank), of the scaled pivot samples, a view."""
+        return self.factor_held[: self.rank, : self.rank]
+
+    @property
     def pivots(self) -> NDArray[np.int64]:
-        """Numbers of the pivot samples, one per direction."""
-        return self.pivots_held[: self.rank].copy()
+        """Numbers of the pivot samples, one per direction, a view."""
+        return self.integers[kernels.HEADER :][: self.rank]
+
+    @property
+    def exponents(self) -> NDArray[np.int64]:
+        """Exponents of two by which the pivot samples were divided, a view."""
+        return self.integers[kernels.HEADER + len(self.directions_held) :][: self.rank]
 
     @property
     def nbytes(self) -> int:
         """Bytes of all arrays."""
         return sum(array.nbytes for array in self.arrays)
 
+    def stamp(self, at: Any) -> None:
+        """Take note of the time of the next sample; a basis that never forgets has no use."""
+
+    def push_block(self, samples: NDArray[Any], _at: Any = None) -> Decisions:
+        """Take Euclidean samples that are known to be finite, (m, n), one after another."""
+        records = []
+        for sample in samples:
+            record = self.kernel(sample, *self.arrays)
+            while record[5] == kernels.NEEDS_ROOM:
+                self.make_room()
+                record = self.kernel(sample, *self.arrays)
+            records.append(record)
+        columns = list(zip(*records, strict=True)) or [()] * len(Decision._fields)
+        kinds = [np.int64, float, float, float, bool, *[np.int64] * 5]
+        out = [np.array(c, k) for c, k in zip(columns, kinds, strict=True)]
+        out[5] = reason_names(out[5])
+        return Decisions(*out)
+
     def to_state(self) -> State:
         """Hand over the arrays as far as they are in use."""
-        k = self.rank
         return State(
             "Growth",
             arrays={
                 "vectors": owned(self.directions),
-                "factor": owned(self.factor[:k, :k]),
-                "pivots": self.pivots,
-                "exponents": owned(self.exponents[:k]),
-                "header": owned(self.header),
+                "factor": owned(self.factor),
+                "pivots": owned(self.pivots),
+                "exponents": owned(self.exponents),
+                "header": owned(self.integers[: kernels.HEADER]),
                 "reals": owned(self.reals),
             },
         )
@@ -123,11 +128,11 @@ class Growth:
         """Take over the arrays of a state made with the same channels and dtype."""
         arrays = state.arrays
         k = arrays["vectors"].shape[0]
-        self.header[:] = arrays["header"]
+        self.integers[: kernels.HEADER] = arrays["header"]
         self.reals[:] = arrays["reals"]
-        while self.directions_held.shape[0] < k:
+        while self.directions_held.shape[0] < min(k + 1, self.integers[kernels.CAPACITY] + 1):
             self.make_room()
-        self.directions_held[:k] = arrays["vectors"]
-        self.factor[:k, :k] = arrays["factor"]
-        self.pivots_held[:k] = arrays["pivots"]
-        self.exponents[:k] = arrays["exponents"]
+        self.directions[:] = arrays["vectors"]
+        self.factor[:] = arrays["factor"]
+        self.pivots[:] = arrays["pivots"]
+        self.exponents[:] = arrays["exponents"]

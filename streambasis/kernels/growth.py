@@ -110,47 +110,49 @@ def orthogonalize(directions, rank, residual, coefficients, tolerance, policy):
 
 
 @kernel()
-def push_growing(
-    sample, residual, coefficients, directions, factor, pivots, exponents, header, reals
-):
+def push_growing(sample, directions, factor, integers, reals):
     """Push one sample to a basis without a window.
 
+    The residual is computed in the row of ``directions`` after the last direction, its
+    coefficients in that row of ``factor``: where they stay if the sample grows the basis.
+    ``integers`` is the header, then the pivot samples, then their exponents.
+
     Returns ``(sample number, norm, residual, tolerance, grew, reason, rank, passes, 0, 0)``; a
-    negative reason says that nothing was changed: NOT_FINITE (with the position in place of the
-    sample number) or NEEDS_ROOM.
+    negative reason says that nothing was changed: NOT_FINITE or NEEDS_ROOM.
     """
-    rank = header[RANK]
+    rank = integers[RANK]
+    number = integers[COUNT]
+    rows = directions.shape[0]
+    if rank >= rows:
+        return number, 0.0, 0.0, 0.0, False, NEEDS_ROOM, rank, 0, 0, 0
+    residual = directions[rank]
+    coefficients = factor[rank]
     position, exponent = scaled_copy(sample, residual)
     if position >= 0:
-        return position, 0.0, 0.0, 0.0, False, NOT_FINITE, rank, 0, 0, 0
+        return number, 0.0, 0.0, 0.0, False, NOT_FINITE, rank, 0, 0, 0
     length = norm(residual)
     tolerance = max(reals[RTOL] * length, math.ldexp(reals[ATOL], -exponent))
     left, passes = orthogonalize(
-        directions, rank, residual, coefficients, tolerance, header[POLICY]
+        directions, rank, residual, coefficients, tolerance, integers[POLICY]
     )
     grew = False
     if length == 0.0:
         reason = ZERO
     elif left <= tolerance:
         reason = DEPENDENT
-    elif rank >= header[CAPACITY]:
+    elif rank >= integers[CAPACITY]:
         reason = FULL
-    elif rank >= directions.shape[0]:
-        return header[COUNT], 0.0, 0.0, 0.0, False, NEEDS_ROOM, rank, 0, 0, 0
     else:
         reason = INDEPENDENT
         grew = True
         for i in range(residual.shape[0]):
-            directions[rank, i] = residual[i] / left
-        for j in range(rank):
-            factor[rank, j] = coefficients[j]
-        factor[rank, rank] = left
-        pivots[rank] = header[COUNT]
-        exponents[rank] = exponent
+            residual[i] = residual[i] / left
+        coefficients[rank] = left
+        integers[HEADER + rank] = number
+        integers[HEADER + rows + rank] = exponent
         rank += 1
-        header[RANK] = rank
-    number = header[COUNT]
-    header[COUNT] = number + 1
+        integers[RANK] = rank
+    integers[COUNT] = number + 1
     return (
         number,
         math.ldexp(length, exponent),
