@@ -14,13 +14,26 @@ from streambasis._version import __version__
 if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
     from streambasis.errors import StreambasisError
+    from streambasis.snapshot import from_bytes, load, save, to_bytes
 
 _HOMES = {
     "StreamBasis": "streambasis.basis",
     "StreambasisError": "streambasis.errors",
+    "from_bytes": "streambasis.snapshot",
+    "load": "streambasis.snapshot",
+    "save": "streambasis.snapshot",
+    "to_bytes": "streambasis.snapshot",
 }
 
-__all__ = ["StreamBasis", "StreambasisError", "__version__"]
+__all__ = [
+    "StreamBasis",
+    "StreambasisError",
+    "__version__",
+    "from_bytes",
+    "load",
+    "save",
+    "to_bytes",
+]
 
 
 def __getattr__(name: str) -> Any:

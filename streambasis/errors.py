@@ -39,5 +39,27 @@ class SnapshotError(StreambasisError, ValueError):
     """A snapshot that cannot be trusted; the message names the file and what is wrong."""
 
 
+class SnapshotFileError(SnapshotError, OSError):
+    """A snapshot that the operating system would not read or write; the old file is untouched.
+
+    Parameters
+    ----------
+    errno, strerror, filename
+        As of an OSError.
+    """
+
+    def __init__(self, errno: int | None, strerror: str, filename: str) -> None:
+        # ValueError comes before OSError among the bases and would leave these three unset
+        super().__init__(errno, strerror, filename)
+        self.errno, self.strerror, self.filename = errno, strerror, filename
+
+    def __str__(self) -> str:
+        return f"{self.filename}: {self.strerror}"
+
+
+class SnapshotMissingError(SnapshotFileError, FileNotFoundError):
+    """A snapshot that is not there."""
+
+
 class FeedError(StreambasisError, ValueError):
     """A feed that cannot be read; the message names the file, the column or the row."""

@@ -27,14 +27,39 @@ class State:
     arrays : dict of str to ndarray
         Arrays of at most two dimensions; float32, float64, complex64, complex128, int64, int32
         or bool.
+        By convention ``vectors`` holds directions: orthonormal rows, in the Euclidean coordinates
+        behind the inner product. A snapshot that is loaded is refused where they are not.
     parts : dict of str to State
         The states of the objects that this one owns.
+    given : bool
+        Whether the arrays belong to whoever takes them (:meth:`take`).
     """
 
     kind: str
     facts: dict[str, Any] = field(default_factory=dict)
     arrays: dict[str, NDArray[Any]] = field(default_factory=dict)
     parts: dict[str, State] = field(default_factory=dict)
+    given: bool = False
+
+    def take(self, name: str) -> NDArray[Any]:
+        """Return an array that nobody else writes to: C-contiguous, writable, aligned.
+
+        Parameters
+        ----------
+        name : str
+            Name of the array; a KeyError where there is none.
+
+        Notes
+        -----
+        The state that a snapshot file was read into gives its arrays away as they are: they are
+        private pages of the file, copied by the system when and where they are first written to,
+        so a large object is there at once. Any other state is copied from.
+        """
+        array = self.arrays[name]
+        flags = array.flags
+        if self.given and flags.c_contiguous and flags.writeable and flags.aligned:
+            return array
+        return owned(array)
 
 
 @runtime_checkable

@@ -16,7 +16,7 @@ LAYERS = [
     {"kernels"},
     {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "growth",
      "window", "basis", "principal", "compare"},
-    {"snapshot"},
+    {"files", "seal", "layout", "snapshot"},
     {"feeds"},
     {"monitor"},
     {"watch", "report", "fleet"},
