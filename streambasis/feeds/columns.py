@@ -1,0 +1,209 @@
+"""Which columns of a feed are its channels and which one is its time."""
+
+from __future__ import annotations
+
+import difflib
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from streambasis.errors import FeedError, SampleError
+from streambasis.times import many_nanoseconds
+
+UNITS = {"s": 1.0, "sec": 1.0, "ms": 1e-3, "us": 1e-6, "ns": 1e-9}
+"""What one unit is in seconds; the name of a time column may end in one, as in ``time_ms``."""
+
+_TIME_NAME = re.compile(
+    r"(?:time|timestamp|time[ _]?stamp|date|date[ _]?time|utc|epoch|unix[ _]?time)"
+    r"(?:[ _]*[(\[]?(s|sec|ms|us|ns)[)\]]?)?",
+    re.IGNORECASE,
+)
+SHOWN_NAMES = 12
+
+
+@dataclass(frozen=True, slots=True)
+class Columns:
+    """The choice made.
+
+    Attributes
+    ----------
+    channels : tuple of str
+        Names of the channels, in the order in which their values come.
+    time : str or None
+        Name of the time column.
+    unit : float or None
+        Seconds per unit where the time column holds numbers; None where it holds timestamps.
+    """
+
+    channels: tuple[str, ...]
+    time: str | None
+    unit: float | None
+
+
+def choose(
+    source: str, schema: pa.Schema, channels: Sequence[str] | None, time: str | None
+) -> Columns:
+    """Choose the time column and the channels among the columns of a feed.
+
+    Parameters
+    ----------
+    source : str
+        What the feed is called in messages.
+    schema : pyarrow.Schema
+        Names and types of the columns; text is a column that could not be read as numbers.
+    channels : sequence of str or None
+        The channels asked for; None takes every column but the time.
+    time : str or None
+        The time column asked for; None looks for the one obvious candidate.
+
+    Raises
+    ------
+    FeedError
+        If a column asked for is unknown or comes twice, a channel is not numeric, several columns
+        could be the time, or no channel is left.
+
+    Notes
+    -----
+    A column of timestamps or dates is a candidate for the time; failing that, one that is named
+    like one (``time``, ``timestamp``, ``date``, ``epoch``, ..., with a unit or without). Columns
+    named among ``channels`` are never candidates.
+    """
+    names: list[str] = schema.names
+    wanted = list(channels) if channels is not None else None
+    if wanted is not None:
+        for name in wanted:
+            _require(source, names, name)
+        for name in wanted:
+            if wanted.count(name) > 1:
+                raise FeedError(f"{source}: channel {name!r} is asked for twice")
+    if time is None:
+        time = _find_time(source, schema, wanted or [])
+    else:
+        _require(source, names, time)
+    if wanted is None:
+        wanted = [name for name in names if name != time]
+        for position, name in enumerate(names):
+            if not name:
+                raise FeedError(
+                    f"{source}: column {position + 1} has no name; give it one, or choose the "
+                    "channels by name"
+                )
+            _require(source, names, name)
+    elif time in wanted:
+        raise FeedError(f"{source}: column {time!r} is the time and cannot also be a channel")
+    if not wanted:
+        raise FeedError(f"{source}: no channel beside the time column {time!r}")
+    for name in wanted:
+        kind = schema.field(name).type
+        if not _numeric(kind):
+            raise FeedError(
+                f"{source}: column {name!r} is not numeric ({_described(kind)}); leave it out by "
+                "choosing the channels by name"
+            )
+    return Columns(tuple(wanted), time, _unit(source, schema, time))
+
+
+def _require(source: str, names: list[str], name: str) -> None:
+    found = names.count(name)
+    if found > 1:
+        raise FeedError(f"{source}: {found} columns are named {name!r}; names must be distinct")
+    if found == 0:
+        near = difflib.get_close_matches(name, names, n=1, cutoff=0.5)
+        hint = f" (did you mean {near[0]!r}?)" if near else ""
+        more = f" and {len(names) - SHOWN_NAMES} more" if len(names) > SHOWN_NAMES else ""
+        listed = ", ".join(names[:SHOWN_NAMES]) + more
+        raise FeedError(f"{source}: no column {name!r}{hint}; it has {listed}")
+
+
+def _find_time(source: str, schema: pa.Schema, taken: list[str]) -> str | None:
+    fields = [f for f in schema if f.name not in taken]
+    moments: list[str] = [
+        f.name for f in fields if pa.types.is_timestamp(f.type) or pa.types.is_date(f.type)
+    ]
+    named = [f.name for f in fields if _TIME_NAME.fullmatch(f.name)]
+    both = [name for name in moments if name in named]
+    for candidates in (both, moments, named):
+        if len(candidates) == 1:
+            return candidates[0]
+        if candidates:
+            listed = ", ".join(candidates)
+            raise FeedError(f"{source}: several columns could be the time ({listed}): name one")
+    return None
+
+
+def _unit(source: str, schema: pa.Schema, time: str | None) -> float | None:
+    if time is None:
+        return None
+    kind = schema.field(time).type
+    if _is_moment(kind):
+        return None
+    if not _numeric(kind):
+        raise FeedError(
+            f"{source}: time column {time!r} cannot be read ({_described(kind)}); write times as "
+            "2026-03-02T14:05:00 (with a fraction or a zone if need be) or as seconds"
+        )
+    match = _TIME_NAME.fullmatch(time)
+    return UNITS[(match.group(1) or "s").lower()] if match else 1.0
+
+
+def _is_moment(kind: pa.DataType) -> bool:
+    return bool(pa.types.is_timestamp(kind) or pa.types.is_date(kind))
+
+
+def _numeric(kind: pa.DataType) -> bool:
+    types = pa.types
+    return bool(
+        types.is_integer(kind)
+        or types.is_floating(kind)
+        or types.is_boolean(kind)
+        or types.is_decimal(kind)
+        or types.is_null(kind)
+    )
+
+
+def _described(kind: pa.DataType) -> str:
+    return "text" if pa.types.is_string(kind) or pa.types.is_large_string(kind) else str(kind)
+
+
+def values_of(batch: pa.RecordBatch, columns: Columns, out: NDArray[np.float64]) -> None:
+    """Write the channels of an Arrow batch to ``out``, float64 (m, n); a null becomes NaN."""
+    for position, name in enumerate(columns.channels):
+        column = batch.column(name)
+        if not pa.types.is_float64(column.type):
+            column = column.cast(pa.float64(), safe=False)
+        out[:, position] = column.to_numpy(zero_copy_only=False)
+
+
+def times_of(source: str, batch: pa.RecordBatch, columns: Columns, first: int) -> NDArray[np.int64]:
+    """Return the times of an Arrow batch in nanoseconds, int64 (m,).
+
+    Raises
+    ------
+    FeedError
+        If a time is missing or out of range; the message names the sample.
+    """
+    column = batch.column(columns.time)
+    if column.null_count:
+        row = first + int(np.argmax(column.is_null().to_numpy(zero_copy_only=False)))
+        raise FeedError(f"{source}: the time of sample {row} is missing (column {columns.time!r})")
+    given: Any
+    if columns.unit is None:
+        try:
+            given = column.cast(pa.timestamp("ns")).to_numpy(zero_copy_only=False)
+        except pa.ArrowInvalid as error:
+            raise FeedError(f"{source}: column {columns.time!r}: {error}") from None
+    else:
+        given = column.to_numpy(zero_copy_only=False)
+        if pa.types.is_decimal(column.type) or columns.unit != 1.0:
+            given = given.astype(np.float64) * columns.unit
+    try:
+        return many_nanoseconds(given, len(batch))
+    except SampleError as error:
+        raise FeedError(
+            f"{source}: column {columns.time!r}, samples from {first}: {error}"
+        ) from None
