@@ -14,9 +14,11 @@ from streambasis._version import __version__
 if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
     from streambasis.errors import StreambasisError
+    from streambasis.principal import PrincipalBasis
     from streambasis.snapshot import from_bytes, load, save, to_bytes
 
 _HOMES = {
+    "PrincipalBasis": "streambasis.principal",
     "StreamBasis": "streambasis.basis",
     "StreambasisError": "streambasis.errors",
     "from_bytes": "streambasis.snapshot",
@@ -26,6 +28,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "PrincipalBasis",
     "StreamBasis",
     "StreambasisError",
     "__version__",

@@ -15,7 +15,7 @@ PACKAGE = Path(__file__).parent.parent / "streambasis"
 LAYERS = [
     {"kernels"},
     {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "growth",
-     "window", "basis", "principal", "compare"},
+     "window", "basis", "ranks", "folding", "gaps", "principal", "compare"},
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
     {"monitor"},

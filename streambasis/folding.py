@@ -1,0 +1,373 @@
+"""The principal subspace in Euclidean coordinates, and how a block of samples is folded into it.
+
+The subspace stands for a matrix diag(s)·U whose scatter is that of all samples so far, weighted
+and, where a mean is kept, taken about it. Folding stacks the weighted samples of a block below
+it and takes the singular value decomposition again, through a core matrix that is as small as
+the directions held and the block together (Levy & Lindenbaum 2000; Brand 2006).
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from streambasis.kernels import principal as kernels
+from streambasis.ranks import Spectrum
+from streambasis.state import State, owned
+
+ROUNDING_FLOOR = 16.0
+"""A residual below this many machine epsilons of its sample is rounding: projecting by matrix
+products leaves a dependent sample with one or a few epsilons."""
+RENEWAL_LIMIT = 1.0
+"""Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
+made orthonormal again."""
+GRAM_RANGE = 1e-4
+"""Least ratio of the energies kept at which the Gram matrix of the core serves for its singular
+value decomposition. Forming it costs an error of one epsilon of the largest energy, so the least
+energy kept stays right to 1e-12 at each fold, and to 1e-10 over the thousands that it takes for
+rounding to build up."""
+GRAM_RANGE_CUT = 1e-8
+"""The same where directions are being cut: what the cut takes away from the least direction kept
+is far above that error."""
+
+
+class Subspace:
+    """The arrays of a principal subspace, and the fold.
+
+    Parameters
+    ----------
+    count : int
+        Number of channels n.
+    limit : int
+        Most directions held.
+    block : int
+        Most samples of one fold.
+    forget : float
+        Forgetting factor: the weight of a sample falls by it with each later sample.
+    centred : bool
+        Whether a running mean is kept and the scatter taken about it.
+    dtype : numpy.dtype
+        Type of samples and directions. The core is computed in double precision for all.
+
+    Notes
+    -----
+    Singular values, ``outside`` and ``power`` are held in units of 2**exponent, which is 1
+    unless the samples are so large or small that their squares leave the range of the type.
+
+    References
+    ----------
+    A. Levy and M. Lindenbaum (2000), Sequential Karhunen-Loeve basis extraction, IEEE Trans.
+    Image Processing 9. M. Brand (2006), Fast low-rank modifications of the thin singular value
+    decomposition, Linear Algebra and its Applications 415. D. A. Ross, J. Lim, R.-S. Lin and
+    M.-H. Yang (2008), Incremental learning for robust visual tracking, Int. J. Computer Vision
+    77.
+    """
+
+    __slots__ = (
+        "centred",
+        "coefficients",
+        "directions",
+        "exponent",
+        "forget",
+        "limit",
+        "mean",
+        "outside",
+        "power",
+        "renewals",
+        "residual",
+        "safe",
+        "singular",
+        "stack",
+        "weight",
+        "weight_squares",
+    )
+
+    def __init__(
+        self,
+        count: int,
+        limit: int,
+        block: int,
+        forget: float,
+        centred: bool,
+        dtype: np.dtype[Any],
+    ) -> None:
+        self.limit, self.forget, self.centred = limit, forget, centred
+        self.directions = np.zeros((0, count), dtype)
+        self.singular = np.zeros(0)
+        self.mean = np.zeros(count, dtype)
+        self.weight = self.weight_squares = 0.0
+        self.outside = self.power = 0.0
+        self.exponent = self.renewals = 0
+        # workspace: the directions, then the rows of a block outside them
+        self.stack = np.zeros((limit + block, count), dtype)
+        self.residual = np.zeros(count, dtype)
+        self.coefficients = np.zeros(limit + block, dtype)
+        reach = 2.0 ** (0.8 * np.finfo(dtype).maxexp)
+        self.safe = (1.0 / reach, reach)
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes of all arrays."""
+        arrays = (
+            self.directions,
+            self.singular,
+            self.mean,
+            self.stack,
+            self.residual,
+            self.coefficients,
+        )
+        return sum(array.nbytes for array in arrays)
+
+    @property
+    def effective(self) -> float:
+        """Effective number of samples, (Σw)²/Σw², less one where a mean is kept."""
+        if self.weight_squares == 0.0:
+            return 0.0
+        return self.weight**2 / self.weight_squares - (1.0 if self.centred else 0.0)
+
+    def spectrum(self) -> Spectrum:
+        """Return what the rank rules read, in units of 4**exponent."""
+        weight = self.weight or 1.0
+        return Spectrum(
+            self.singular**2 / weight,
+            self.outside / weight,
+            self.directions.shape[1],
+            self.effective,
+            self.directions.dtype.kind == "c",
+        )
+
+    def spreads(self, rank: int) -> NDArray[np.float64]:
+        """Return the standard deviations along the first directions, in units of 2**exponent."""
+        return self.singular[:rank] / math.sqrt(self.weight or 1.0)
+
+    def split(self, deviations: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
+        """Return coordinates along all directions held, and what lies outside, (m, n).
+
+        What lies outside is a view of the workspace, valid until the next call; it has no rows
+        where the directions span the whole space.
+        """
+        held, count = self.directions.shape
+        coordinates = deviations @ self.directions.conj().T
+        rest = self.stack[held : held + (len(deviations) if held < count else 0)]
+        if len(rest):
+            np.matmul(coordinates, self.directions, out=rest)
+            np.subtract(deviations, rest, out=rest)
+        return coordinates, rest
+
+    def fold(self, block: NDArray[Any], coordinates: NDArray[Any] | None = None) -> None:
+        """Fold samples, (m, n), into the subspace.
+
+        Parameters
+        ----------
+        block : ndarray, shape (m, n)
+            Finite samples in Euclidean coordinates, oldest first.
+        coordinates : ndarray, shape (m, held), optional
+            What :meth:`split` has just returned for the same samples less the mean; its second
+            result is then taken from the workspace.
+
+        Notes
+        -----
+        For m samples, k directions held and n channels: 2n(2km + m²/2 + k(k + m) + 2k²) flops in
+        matrix products and about 10(k + m)³ in the core. The scatter about the new mean is that
+        about the old one less the mean shift counted W times; with v the square roots of the
+        weights, this is the scatter of (I - g·vvᵀ) times the weighted rows, g = (1 - √(Wa/W))/Wb,
+        with Wa, Wb and W the weights before, of the block and after. (Ross et al. 2008 append the
+        shift as one more row; the scatter is the same.)
+        """
+        m, count = block.shape
+        ages = np.arange(m - 1, -1, -1)
+        roots = math.sqrt(self.forget) ** ages
+        typed = roots.astype(np.finfo(block.dtype).dtype)[:, None]
+        decay = self.forget**m
+        before, added = decay * self.weight, float((roots**2).sum())
+        total = before + added
+
+        squares = np.empty(m)
+        status = kernels.row_squares(block, *self.safe, squares)
+        scaled = self._fit_exponent(block, status)
+        if self.exponent != 0 or scaled:
+            block = _times_power(block, -self.exponent)
+            kernels.row_squares(block, 0.0, np.inf, squares)
+            coordinates = None
+        deviations = block - _times_power(self.mean, -self.exponent) if self.centred else block
+        if coordinates is None:
+            coordinates, rest = self.split(deviations)
+        else:
+            held = len(self.directions)
+            rest = self.stack[held : held + (m if held < count else 0)]
+
+        wide = np.complex128 if block.dtype.kind == "c" else np.float64
+        coordinates = coordinates.astype(wide) * roots[:, None]
+        rest *= typed[: len(rest)]
+        floors = ROUNDING_FLOOR * np.finfo(block.dtype).eps * np.sqrt(squares) * roots
+        if self.centred:
+            shift = (typed**2).T @ deviations / total
+            factor = (1.0 - math.sqrt(before / total)) / added
+            coordinates -= factor * np.outer(roots, roots @ coordinates)
+            if len(rest):
+                rest -= (factor * typed) * (typed.T @ rest)
+            self.mean += _times_power(shift[0].astype(block.dtype), self.exponent)
+        self.weight = total
+        self.weight_squares = decay**2 * self.weight_squares + float((roots**4).sum())
+        self.power = decay * self.power + float(roots**2 @ squares)
+        self.outside *= decay
+        self._refactor(math.sqrt(decay), coordinates, rest, floors)
+        least = np.finfo(block.dtype)
+        if len(self.singular) and (
+            math.frexp(self.singular[0])[1] + self.exponent < least.minexp - least.nmant
+        ):
+            # silence under forgetting has brought every direction below the smallest number
+            self.directions, self.singular = self.directions[:0], self.singular[:0]
+            self.outside = self.power = 0.0
+            self.exponent = 0
+
+    def _fit_exponent(self, block: NDArray[Any], status: int) -> bool:
+        """Choose the unit so that neither the block nor the spectrum leaves the range."""
+        top = self.singular[0] if len(self.singular) else 0.0
+        level = math.frexp(top)[1] + self.exponent if top else None
+        reach = 0.4 * np.finfo(block.dtype).maxexp
+        if status == kernels.USUAL and (level is None or abs(level) < reach):
+            wanted = 0
+        else:
+            largest = float(max(abs(block.real).max(), abs(block.imag).max(), 0.0))
+            levels = [math.frexp(largest)[1]] if largest else []
+            wanted = max(levels + ([] if level is None else [level]), default=0)
+        change = self.exponent - wanted
+        if change:
+            self.singular = np.ldexp(self.singular, change)
+            self.outside = math.ldexp(self.outside, 2 * change)
+            self.power = math.ldexp(self.power, 2 * change)
+            self.exponent = wanted
+        return wanted != 0
+
+    def _refactor(
+        self,
+        decay: float,
+        coordinates: NDArray[Any],
+        rest: NDArray[Any],
+        floors: NDArray[np.float64],
+    ) -> None:
+        """Take the SVD of the old factor, decayed, with the rows of the block below it."""
+        held, count = self.directions.shape
+        m = len(coordinates)
+        factor, basis_change, width = self._factor_rest(coordinates, rest, floors)
+        core = np.zeros((held + m, held + width), coordinates.dtype)
+        core[np.arange(held), np.arange(held)] = decay * self.singular
+        core[held:, :held] = coordinates
+        core[held:, held:] = factor
+        singular, vectors = _spectrum(core, self.singular, self.limit, count)
+        floor = ROUNDING_FLOOR * np.finfo(self.directions.dtype).eps * math.sqrt(self.power)
+        keep = min(self.limit, int(np.count_nonzero(singular > floor)))
+        self.outside += float((singular[keep:] ** 2).sum())
+        rotation = vectors[:keep]
+        if basis_change is not None:
+            rotation = np.concatenate(
+                [rotation[:, :held], rotation[:, held:] @ basis_change], axis=1
+            )
+        self.stack[:held] = self.directions
+        rows = held + (width if basis_change is None else m)
+        self.directions = rotation.astype(self.directions.dtype) @ self.stack[:rows]
+        self.singular = singular[:keep].copy()
+        self._renew()
+
+    def _factor_rest(
+        self, coordinates: NDArray[Any], rest: NDArray[Any], floors: NDArray[np.float64]
+    ) -> tuple[NDArray[Any], NDArray[Any] | None, int]:
+        """Write the rows outside the directions as factor times orthonormal rows.
+
+        Returns the factor, the matrix that turns ``rest`` into the orthonormal rows (None where
+        they have replaced it in the workspace) and their number.
+        """
+        m = len(coordinates)
+        if not len(rest):
+            return np.zeros((m, 0)), None, 0
+        squares = np.empty(m)
+        kernels.row_squares(rest, 0.0, np.inf, squares)
+        if (squares <= floors**2).all():
+            return np.zeros((m, 0)), None, 0
+        gram = (rest @ rest.conj().T).astype(coordinates.dtype)
+        # Cholesky-QR loses orthogonality by epsilon times the condition number squared: fourth
+        # root of epsilon (and no worse than 1e-2) leaves a loss that one renewal step removes
+        narrowest = max(float(np.finfo(rest.dtype).eps) ** 0.25, 1e-2)
+        try:
+            factor = np.linalg.cholesky(gram)
+        except np.linalg.LinAlgError:
+            factor = None
+        if factor is not None:
+            diagonal = factor.diagonal().real
+            if diagonal.min() > narrowest * diagonal.max():
+                return factor, np.linalg.inv(factor), m
+        held = len(self.directions)
+        self.stack[:held] = self.directions
+        factor = np.zeros((m, m), rest.dtype)
+        typed = coordinates.astype(rest.dtype) * 0
+        width = kernels.orthonormal_rows(
+            rest.copy(), floors, self.stack, held, typed, factor, self.residual, self.coefficients
+        )
+        coordinates += typed
+        return factor[:, :width].astype(coordinates.dtype), None, width
+
+    def _renew(self) -> None:
+        """Make the directions orthonormal again where the last step cost too much of it.
+
+        The nearest orthonormal rows to U are (UUᴴ)^(-1/2) U; one step of its Newton iteration,
+        U - (UUᴴ - I)U/2, squares the loss.
+        """
+        held, count = self.directions.shape
+        unit = float(np.finfo(self.directions.dtype).eps) / 2
+        for _ in range(3):
+            loss = self.directions @ self.directions.conj().T
+            loss[np.arange(held), np.arange(held)] -= 1
+            if not held or np.abs(loss).sum(axis=0).max() <= RENEWAL_LIMIT * max(count, 16) * unit:
+                break
+            self.directions -= (loss / 2) @ self.directions
+            self.renewals += 1
+
+    def to_state(self) -> State:
+        """Hand over everything needed to go on."""
+        return State(
+            "Subspace",
+            {"exponent": self.exponent, "renewals": self.renewals},
+            {
+                "vectors": owned(self.directions),
+                "singular": owned(self.singular),
+                "mean": owned(self.mean),
+                "sums": np.array([self.weight, self.weight_squares, self.outside, self.power]),
+            },
+        )
+
+    def set_state(self, state: State) -> None:
+        """Take over a state made with the same settings."""
+        self.exponent, self.renewals = state.facts["exponent"], state.facts["renewals"]
+        self.directions = owned(state.arrays["vectors"])
+        self.singular = owned(state.arrays["singular"])
+        self.mean = owned(state.arrays["mean"])
+        self.weight, self.weight_squares, self.outside, self.power = (
+            float(value) for value in state.arrays["sums"]
+        )
+
+
+def _spectrum(
+    core: NDArray[Any], before: NDArray[np.float64], limit: int, count: int
+) -> tuple[NDArray[np.float64], NDArray[Any]]:
+    """Return singular values, descending, and right singular vectors as rows."""
+    wide = GRAM_RANGE_CUT if limit < count else GRAM_RANGE
+    if len(before) == limit and before[-1] ** 2 > wide * before[0] ** 2:
+        energies, columns = np.linalg.eigh(core.conj().T @ core)
+        if energies[-limit] > wide * energies[-1]:
+            singular = np.sqrt(np.maximum(energies[::-1], 0.0))
+            return singular, columns[:, ::-1].conj().T
+    _, singular, rows = np.linalg.svd(core, full_matrices=False)
+    return singular, rows
+
+
+def _times_power(values: NDArray[Any], exponent: int) -> NDArray[Any]:
+    """Return values times 2**exponent, exactly where they stay in range."""
+    if exponent == 0:
+        return values
+    real = np.ldexp(values.view(np.finfo(values.dtype).dtype), exponent)
+    out: NDArray[Any] = real.view(values.dtype)
+    return out

@@ -1,0 +1,149 @@
+"""Scoring samples against a principal subspace, and orthonormalizing the rows it is folded with.
+
+Reordered sums are sound here for the reason given in :mod:`streambasis.kernels.growth`.
+"""
+
+from __future__ import annotations
+
+import math
+
+from streambasis.kernels._jit import kernel
+from streambasis.kernels.growth import CRITERION, mgs_pass, norm, orthogonalize, scaled_copy
+
+# entries of the integer header
+COUNT, RANK, FILL, EXPONENT, CENTRED = range(5)
+HEADER = 5
+# statuses: a sample that was scored, the position of a bad value, rows beyond the safe range
+SCORED = 0
+USUAL, UNUSUAL = 0, 1
+
+
+@kernel(reassociate=True)
+def score_sample(sample, mean, directions, spreads, header, residual, coefficients):
+    """Score one sample against the first ``header[RANK]`` directions; nothing held is changed.
+
+    ``spreads`` are the standard deviations along the directions in units of 2**EXPONENT. Returns
+    ``(norm, residual, spe, t2, position)``: the position of the first value that is not finite,
+    or -1. Values beyond the range of a double come back as infinity, never as NaN.
+    """
+    if header[CENTRED]:
+        for i in range(sample.shape[0]):
+            # a value within a quarter of the range has a finite distance from any mean of such
+            twice = sample[i] + sample[i]
+            residual[i] = twice + twice
+        position, _ = scaled_copy(residual, residual)
+        if position >= 0:
+            return 0.0, 0.0, 0.0, 0.0, position
+        for i in range(sample.shape[0]):
+            residual[i] = sample[i] - mean[i]
+        position, exponent = scaled_copy(residual, residual)
+    else:
+        position, exponent = scaled_copy(sample, residual)
+    if position >= 0:
+        return 0.0, 0.0, 0.0, 0.0, position
+    rank = header[RANK]
+    length = norm(residual)
+    for j in range(rank):
+        coefficients[j] = 0
+    mgs_pass(directions, rank, residual, coefficients)
+    left = norm(residual)
+    t2 = 0.0
+    for j in range(rank):
+        ratio = math.ldexp(abs(coefficients[j]) / spreads[j], exponent - header[EXPONENT])
+        t2 += ratio * ratio
+    return (
+        math.ldexp(length, exponent),
+        math.ldexp(left, exponent),
+        math.ldexp(left * left, 2 * exponent),
+        t2,
+        -1,
+    )
+
+
+@kernel()
+def push_principal(sample, mean, directions, spreads, header, residual, coefficients, block):
+    """Score one sample, put it into the block and count it.
+
+    Returns ``(sample number, norm, residual, spe, t2, rank, position)``; with a position that is
+    not negative nothing was changed. The caller folds a block that is full.
+    """
+    length, left, spe, t2, position = score_sample(
+        sample, mean, directions, spreads, header, residual, coefficients
+    )
+    number = header[COUNT]
+    if position < 0:
+        fill = header[FILL]
+        for i in range(sample.shape[0]):
+            block[fill, i] = sample[i]
+        header[FILL] = fill + 1
+        header[COUNT] = number + 1
+    return number, length, left, spe, t2, header[RANK], position
+
+
+@kernel(reassociate=True)
+def row_squares(rows, least, most, out):
+    """Write the squared norm of each row to ``out``.
+
+    Returns USUAL when every squared norm is zero for a zero row or strictly between ``least`` and
+    ``most``, so that products of the rows neither overflow nor underflow; UNUSUAL otherwise.
+    """
+    status = USUAL
+    for i in range(rows.shape[0]):
+        row = rows[i]
+        total = 0.0
+        for j in range(row.shape[0]):
+            total += row[j].real * row[j].real + row[j].imag * row[j].imag
+        out[i] = total
+        if not least < total < most:
+            for j in range(row.shape[0]):
+                if row[j] != 0:
+                    status = UNUSUAL
+    return status
+
+
+@kernel()
+def score_rows(coordinates, spreads, rank, outside, residuals, spes, t2s):
+    """Turn coordinates along all directions held into residual, SPE and T², row by row.
+
+    ``outside`` are the squared norms of what lies outside all of them. Directions beyond ``rank``
+    are held but not reported: what lies along them is residual, added as a sum of squares, so
+    that nothing cancels.
+    """
+    for i in range(coordinates.shape[0]):
+        spe = outside[i]
+        t2 = 0.0
+        for j in range(rank):
+            ratio = abs(coordinates[i, j]) / spreads[j]
+            t2 += ratio * ratio
+        for j in range(rank, coordinates.shape[1]):
+            part = abs(coordinates[i, j])
+            spe += part * part
+        spes[i] = spe
+        residuals[i] = math.sqrt(spe)
+        t2s[i] = t2
+
+
+@kernel()
+def orthonormal_rows(rows, floors, stack, held, coordinates, factor, residual, coefficients):
+    """Orthonormalize rows against the first ``held`` rows of ``stack`` and one another.
+
+    Row i of ``rows`` equals the change of ``coordinates[i]`` times the held rows plus
+    ``factor[i]`` times the appended ones; a row whose residual is at most ``floors[i]`` appends
+    none. Returns the number of rows appended.
+    """
+    added = 0
+    for i in range(rows.shape[0]):
+        total = held + added
+        for j in range(rows.shape[1]):
+            residual[j] = rows[i, j]
+        left, _ = orthogonalize(stack, total, residual, coefficients, floors[i], CRITERION)
+        for j in range(held):
+            coordinates[i, j] += coefficients[j]
+        for j in range(added):
+            factor[i, j] = coefficients[held + j]
+        if left > floors[i] and total < min(stack.shape[0], stack.shape[1]):
+            for j in range(rows.shape[1]):
+                stack[total, j] = residual[j] / left
+            factor[i, added] = left
+            added += 1
+    return added

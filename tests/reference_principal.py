@@ -1,0 +1,54 @@
+"""Batch twins of the principal basis: what a tracked subspace must equal, in plain NumPy."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+
+def normal(rng: np.random.Generator, shape: tuple[int, ...], dtype: str) -> NDArray[Any]:
+    """Return standard normal values of a dtype; complex ones have variance 1 in all."""
+    kind = np.dtype(dtype)
+    if kind.kind == "c":
+        both = rng.standard_normal((2, *shape)) / np.sqrt(2)
+        return (both[0] + 1j * both[1]).astype(kind)
+    return rng.standard_normal(shape).astype(kind)
+
+
+def noisy_feed(
+    rng: np.random.Generator,
+    samples: int,
+    channels: int,
+    sources: int,
+    noise: float,
+    dtype: str = "float64",
+) -> tuple[NDArray[Any], NDArray[Any]]:
+    """Return a feed of independent sources in white noise, and the sources' subspace as rows.
+
+    The sources have variances 1, 1/2, 1/3, ... times the number of channels, so that their order
+    is clear; ``noise`` is the standard deviation of the noise per channel.
+    """
+    rows = np.linalg.qr(normal(rng, (channels, sources), dtype))[0].T
+    amplitudes = np.sqrt(channels / np.arange(1.0, sources + 1))
+    feed = (normal(rng, (samples, sources), dtype) * amplitudes) @ rows
+    feed = feed + noise * normal(rng, (samples, channels), dtype)
+    return feed.astype(dtype), rows
+
+
+def batch(
+    samples: NDArray[Any], forget: float = 1.0, centre: bool = False
+) -> tuple[NDArray[Any], NDArray[Any], NDArray[Any]]:
+    """Return energies, directions as rows, and mean of weighted samples by one SVD of them all."""
+    wide = samples.astype(np.complex128 if samples.dtype.kind == "c" else np.float64)
+    weights = forget ** np.arange(len(wide) - 1, -1, -1.0)
+    mean = weights @ wide / weights.sum() if centre else np.zeros(wide.shape[1])
+    rows = np.sqrt(weights)[:, None] * (wide - mean)
+    _, singular, vectors = np.linalg.svd(rows, full_matrices=False)
+    return singular**2 / weights.sum(), vectors, mean
+
+
+def sine(a: NDArray[Any], b: NDArray[Any]) -> float:
+    """Return the sine of the largest principal angle between the spans of orthonormal rows."""
+    return float(np.linalg.norm(b - (b @ a.conj().T) @ a, 2))
