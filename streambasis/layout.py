@@ -52,6 +52,9 @@ _OUTLINE_KEYS = {"kind", "facts", "arrays", "parts"}
 _ARRAY_KEYS = {"column", "dtype", "shape"}
 _DEEPEST = 64
 
+# pyarrow reports a bad file as any of these, depending on where it stumbles
+_ARROW_REFUSES = (pa.ArrowException, OSError, ValueError, LookupError, TypeError, MemoryError)
+
 Claim = tuple[np.dtype[Any], tuple[int, ...]]
 """Dtype and shape of an array, as the metadata has it."""
 
@@ -145,8 +148,8 @@ def read_arrow(memory: memoryview) -> State:
                     view = _view(memory, base.address, batch.column(name), stored_type)
                     found[name] = _restored(view, name, dtype, shape)
         state = _state(outline, claims, found)
-    except pa.ArrowException as error:
-        raise Flaw(f"Arrow cannot read it ({str(error).splitlines()[0]})") from error
+    except _ARROW_REFUSES as error:
+        raise Flaw(f"Arrow cannot read it ({type(error).__name__}: {error})") from error
     except RecursionError as error:
         raise Flaw("its metadata is nested too deeply") from error
     return state
