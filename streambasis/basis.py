@@ -13,7 +13,7 @@ from streambasis.audit import Audit, orthogonality
 from streambasis.decisions import REASONS, Decision, Decisions
 from streambasis.errors import SampleError, SettingError
 from streambasis.growth import Growth
-from streambasis.inner import Inner
+from streambasis.inner import Inner, inner_of
 from streambasis.kernels import growth as kernels
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import State
@@ -290,7 +290,7 @@ class StreamBasis:
         basis = cls(
             names if facts["named"] else len(names),
             dtype=facts["dtype"],
-            inner=state.arrays.get("inner"),
+            inner=inner_of(state),
         )
         basis._core.set_state(state.parts["core"])
         basis._bind()

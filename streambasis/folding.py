@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.errors import SnapshotError
 from streambasis.kernels import principal as kernels
 from streambasis.ranks import Spectrum
 from streambasis.state import State, owned
@@ -334,6 +335,8 @@ class Subspace:
             {
                 "vectors": owned(self.directions),
                 "singular": owned(self.singular),
+                # for readers of a snapshot; it follows from the others
+                "energies": np.ldexp(self.singular**2 / (self.weight or 1.0), 2 * self.exponent),
                 "mean": owned(self.mean),
                 "sums": np.array([self.weight, self.weight_squares, self.outside, self.power]),
             },
@@ -341,13 +344,17 @@ class Subspace:
 
     def set_state(self, state: State) -> None:
         """Take over a state made with the same settings."""
-        self.exponent, self.renewals = state.facts["exponent"], state.facts["renewals"]
-        self.directions = owned(state.arrays["vectors"])
-        self.singular = owned(state.arrays["singular"])
-        self.mean = owned(state.arrays["mean"])
-        self.weight, self.weight_squares, self.outside, self.power = (
-            float(value) for value in state.arrays["sums"]
-        )
+        dtype, count = self.directions.dtype, self.directions.shape[1]
+        directions = state.take("vectors", dtype, (None, count))
+        if len(directions) > self.limit:
+            raise SnapshotError(f"{len(directions)} directions where at most {self.limit} are held")
+        singular = state.take("singular", np.float64, (len(directions),))
+        state.take("energies", np.float64, singular.shape)
+        mean = state.take("mean", dtype, (count,))
+        sums = state.take("sums", np.float64, (4,))
+        self.exponent, self.renewals = int(state.facts["exponent"]), int(state.facts["renewals"])
+        self.directions, self.singular, self.mean = directions, singular, mean
+        self.weight, self.weight_squares, self.outside, self.power = sums.tolist()
 
 
 def _spectrum(

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.decisions import Decision, Decisions, reason_names
+from streambasis.errors import SnapshotError
 from streambasis.kernels import growth as kernels
 from streambasis.state import State, owned
 
@@ -125,14 +126,32 @@ class Growth:
         )
 
     def set_state(self, state: State) -> None:
-        """Take over the arrays of a state made with the same channels and dtype."""
-        arrays = state.arrays
-        k = arrays["vectors"].shape[0]
-        self.integers[: kernels.HEADER] = arrays["header"]
-        self.reals[:] = arrays["reals"]
-        while self.directions_held.shape[0] < min(k + 1, self.integers[kernels.CAPACITY] + 1):
-            self.make_room()
-        self.directions[:] = arrays["vectors"]
-        self.factor[:] = arrays["factor"]
-        self.pivots[:] = arrays["pivots"]
-        self.exponents[:] = arrays["exponents"]
+        """Take over the arrays of a state made with the same channels and dtype.
+
+        Raises
+        ------
+        SnapshotError
+            If they do not fit each other.
+        """
+        dtype, channels = self.directions_held.dtype, self.directions_held.shape[1]
+        header = state.take("header", np.int64, (kernels.HEADER,))
+        k = int(header[kernels.RANK])
+        vectors = state.take("vectors", dtype, (k, channels))
+        factor = state.take("factor", dtype, (k, k))
+        pivots = state.take("pivots", np.int64, (k,))
+        exponents = state.take("exponents", np.int64, (k,))
+        reals = state.take("reals", np.float64, self.reals.shape)
+        if not k <= header[kernels.CAPACITY] <= channels or not k <= header[kernels.COUNT]:
+            raise SnapshotError(
+                f"{k} directions of {header[kernels.COUNT]} samples on {channels} channels, where "
+                f"at most {header[kernels.CAPACITY]} are kept"
+            )
+        if k:
+            # without a spare row, so that the first push makes room: until then a large basis
+            # stays the page of the file that it was read from
+            self.directions_held, self.factor_held = vectors, factor
+            self.integers = np.concatenate([header, pivots, exponents])
+        else:
+            self.integers[: kernels.HEADER] = header
+        self.reals = reals
+        self._bind()

@@ -12,7 +12,8 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from streambasis.errors import SettingError
+from streambasis.errors import SettingError, SnapshotError
+from streambasis.state import State
 
 
 class Inner:
@@ -51,6 +52,7 @@ class Inner:
         array = np.array(inner)
         if array.dtype.kind not in "biufc" or not np.isfinite(array).all():
             raise SettingError("inner: weights or matrix entries must be finite numbers")
+        array = array.astype(np.complex128 if array.dtype.kind == "c" else np.float64)
         if array.shape == (count,):
             self.kind = "weights"
             if array.dtype.kind == "c" or not (array > 0).all():
@@ -58,23 +60,22 @@ class Inner:
                 raise SettingError(
                     f"inner: weight {array[channel]} of channel {channel}; weights are positive"
                 )
-            roots = np.sqrt(array.astype(np.float64))
+            roots = np.sqrt(array)
             self._into, self._out = self._typed(roots), self._typed(1.0 / roots)
         elif array.shape == (count, count):
             self.kind = "matrix"
             if array.dtype.kind == "c" and dtype.kind != "c":
                 raise SettingError(f"inner: a complex matrix needs a complex dtype, not {dtype}")
-            wide = array.astype(np.complex128 if array.dtype.kind == "c" else np.float64)
-            gap = np.abs(wide - wide.conj().T).max()
-            if gap > 64 * np.finfo(np.float64).eps * np.abs(wide).max():
+            gap = np.abs(array - array.conj().T).max()
+            if gap > 64 * np.finfo(np.float64).eps * np.abs(array).max():
                 raise SettingError(
                     f"inner: the matrix differs from its conjugate transpose by {gap:.3g}; "
                     "give a Hermitian one, such as (M + M.conj().T) / 2"
                 )
             try:
-                lower = np.linalg.cholesky(wide)
+                lower = np.linalg.cholesky(array)
             except np.linalg.LinAlgError:
-                least = float(np.linalg.eigvalsh(wide)[0])
+                least = float(np.linalg.eigvalsh(array)[0])
                 raise SettingError(
                     f"inner: the matrix is not positive definite (least eigenvalue {least:.3g})"
                 ) from None
@@ -109,3 +110,18 @@ class Inner:
         out: NDArray[Any]
         out = vectors * self._out if self.kind == "weights" else vectors @ self._out
         return out
+
+
+def inner_of(state: State) -> NDArray[Any] | None:
+    """Return the weights or the matrix that a state with the fact ``inner`` holds, or None.
+
+    Raises
+    ------
+    SnapshotError
+        If the fact and the array disagree.
+    """
+    dimensions = {"euclidean": 0, "weights": 1, "matrix": 2}
+    given = state.arrays.get("inner")
+    if dimensions.get(state.facts["inner"]) != (0 if given is None else given.ndim):
+        raise SnapshotError(f"the inner product of a {state.kind} is not as its facts say")
+    return given

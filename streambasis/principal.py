@@ -12,10 +12,10 @@ from numpy.typing import ArrayLike, DTypeLike, NDArray
 
 from streambasis.audit import Audit, orthogonality
 from streambasis.decisions import Score, Scores
-from streambasis.errors import SampleError, SettingError
+from streambasis.errors import SampleError, SettingError, SnapshotError
 from streambasis.folding import Subspace
 from streambasis.gaps import Gaps
-from streambasis.inner import Inner
+from streambasis.inner import Inner, inner_of
 from streambasis.kernels import principal as kernels
 from streambasis.ranks import rank_by_mdl, rank_by_noise
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
@@ -486,6 +486,7 @@ class PrincipalBasis:
                 "channels": list(self._channels.names),
                 "named": self._channels.named,
                 "dtype": self.dtype.name,
+                "inner": self._inner.kind,
                 "rank": self._rule,
                 "max_rank": self._most,
                 "forget": core.forget,
@@ -496,7 +497,7 @@ class PrincipalBasis:
             arrays = {"block": owned(self._block[: int(self._header[kernels.FILL])])}
             if self._inner.given is not None:
                 arrays["inner"] = owned(self._inner.given)
-            return State("PrincipalBasis", facts, arrays, {"subspace": core.to_state()})
+            return State("PrincipalBasis", facts, arrays, {"core": core.to_state()})
 
     @classmethod
     def from_state(cls, state: State) -> Self:
@@ -506,11 +507,14 @@ class PrincipalBasis:
         settings = {
             key: facts[key] for key in ("rank", "max_rank", "forget", "block", "centre", "dtype")
         }
-        basis = cls(
-            names if facts["named"] else len(names), inner=state.arrays.get("inner"), **settings
-        )
-        basis._core.set_state(state.parts["subspace"])
-        waiting = state.arrays["block"]
+        basis = cls(names if facts["named"] else len(names), inner=inner_of(state), **settings)
+        basis._core.set_state(state.parts["core"])
+        waiting = state.take("block", basis.dtype, (None, len(names)))
+        if not len(waiting) < len(basis._block) or not len(waiting) <= facts["count"]:
+            raise SnapshotError(
+                f"{len(waiting)} of {facts['count']} samples wait for a block of "
+                f"{len(basis._block)} to fill"
+            )
         basis._block[: len(waiting)] = waiting
         basis._header[kernels.FILL] = len(waiting)
         basis._header[kernels.COUNT] = facts["count"]

@@ -10,7 +10,9 @@ from dataclasses import dataclass, field
 from typing import Any, Protocol, Self, runtime_checkable
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import DTypeLike, NDArray
+
+from streambasis.errors import SnapshotError
 
 
 @dataclass(slots=True)
@@ -41,13 +43,27 @@ class State:
     parts: dict[str, State] = field(default_factory=dict)
     given: bool = False
 
-    def take(self, name: str) -> NDArray[Any]:
+    def take(
+        self,
+        name: str,
+        dtype: DTypeLike | None = None,
+        shape: tuple[int | None, ...] | None = None,
+    ) -> NDArray[Any]:
         """Return an array that nobody else writes to: C-contiguous, writable, aligned.
 
         Parameters
         ----------
         name : str
-            Name of the array; a KeyError where there is none.
+            Name of the array.
+        dtype : dtype, optional
+            What its type must be.
+        shape : tuple, optional
+            What its shape must be; None for a length that may be any.
+
+        Raises
+        ------
+        SnapshotError
+            If there is no such array or it is of another type or shape.
 
         Notes
         -----
@@ -55,7 +71,19 @@ class State:
         private pages of the file, copied by the system when and where they are first written to,
         so a large object is there at once. Any other state is copied from.
         """
+        if name not in self.arrays:
+            raise SnapshotError(f"a state of {self.kind} without its array {name!r}")
         array = self.arrays[name]
+        if dtype is not None and array.dtype != dtype:
+            raise SnapshotError(f"{name!r} of {self.kind} is {array.dtype}, not {np.dtype(dtype)}")
+        if shape is not None and (
+            array.ndim != len(shape)
+            or any(
+                length not in (None, has) for has, length in zip(array.shape, shape, strict=True)
+            )
+        ):
+            expected = ", ".join("any" if length is None else str(length) for length in shape)
+            raise SnapshotError(f"{name!r} of {self.kind} is {array.shape}, not ({expected})")
         flags = array.flags
         if self.given and flags.c_contiguous and flags.writeable and flags.aligned:
             return array

@@ -1,0 +1,232 @@
+"""Restart is invisible: an object that was saved and loaded goes on as if it never stopped."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from numpy.typing import NDArray
+
+import streambasis
+from streambasis.errors import SnapshotError
+from streambasis.snapshot import from_bytes, load, save, state_from_bytes, to_bytes
+from streambasis.state import State
+
+CHANNELS = 6
+ANY_LENGTH = {"block"}
+"""Arrays that may hold as many rows as they like: samples that wait for their block to fill."""
+Samples = NDArray[Any]
+
+
+def deterministic(rng: np.random.Generator, count: int, dtype: str) -> Samples:
+    """Return samples of a rank that changes, with exact repeats, zeros and every size."""
+    complex_valued = np.dtype(dtype).kind == "c"
+    directions = rng.normal(size=(CHANNELS, CHANNELS))
+    if complex_valued:
+        directions = directions + 1j * rng.normal(size=(CHANNELS, CHANNELS))
+    rank = rng.integers(1, CHANNELS + 1, size=count)
+    out = np.zeros((count, CHANNELS), dtype)
+    for i in range(count):
+        if i and rng.random() < 0.2:
+            out[i] = out[rng.integers(i)]
+        elif rng.random() < 0.95:
+            out[i] = rng.normal(size=rank[i]) @ directions[: rank[i]] * 10.0 ** rng.integers(-8, 8)
+    return out
+
+
+def noisy(rng: np.random.Generator, count: int, dtype: str) -> Samples:
+    """Return two sources and noise."""
+    samples = rng.normal(size=(count, 2)) @ rng.normal(size=(2, CHANNELS)) * 5
+    samples = samples + rng.normal(size=(count, CHANNELS)) + 3
+    if np.dtype(dtype).kind == "c":
+        samples = samples * np.exp(1j * rng.normal(size=(count, 1)))
+    return samples.astype(dtype)
+
+
+def stream_basis(rng: np.random.Generator, dtype: str) -> Any:
+    """Return a basis without a window, with settings drawn at random."""
+    inner = [None, rng.uniform(0.5, 2, CHANNELS), np.eye(CHANNELS) + 0.1][rng.integers(3)]
+    return streambasis.StreamBasis(
+        [CHANNELS, [f"ch {i}" for i in range(CHANNELS)]][rng.integers(2)],
+        rtol=[None, 1e-3][rng.integers(2)],
+        capacity=[None, 3][rng.integers(2)],
+        dtype=dtype,
+        inner=inner,
+    )
+
+
+def principal_basis(rng: np.random.Generator, dtype: str) -> Any:
+    """Return a principal basis with settings drawn at random."""
+    return streambasis.PrincipalBasis(
+        CHANNELS,
+        rank=["noise", "mdl", 2][rng.integers(3)],
+        forget=[1.0, 0.99][rng.integers(2)],
+        block=[None, 7][rng.integers(2)],
+        centre=bool(rng.integers(2)),
+        dtype=dtype,
+    )
+
+
+OBJECTS: dict[str, tuple[Callable[..., Any], Callable[..., Samples]]] = {
+    "StreamBasis": (stream_basis, deterministic),
+    "PrincipalBasis": (principal_basis, noisy),
+}
+DTYPES = ("float32", "float64", "complex64", "complex128")
+
+
+def fed(obj: Any, samples: Samples, sizes: list[int]) -> list[str]:
+    """Push samples one by one and in batches; return all that was answered, bit for bit."""
+    answers = []
+    at = 0
+    for size in sizes:
+        if size == 0:
+            answer = obj.push(samples[at])
+            at += 1
+            answers.append("|".join(repr(value) for value in answer))
+        else:
+            table = obj.push_many(samples[at : at + size])
+            at += size
+            for name in table.__slots__:
+                answers.append(f"{name} {np.asarray(getattr(table, name)).tobytes().hex()}")
+    return answers
+
+
+@pytest.mark.parametrize("name", OBJECTS)
+@given(data=st.data())
+def test_restart_is_invisible(name: str, data: st.DataObject) -> None:
+    """At any point of any schedule, save + load + go on gives the same decisions and vectors.
+
+    Every later snapshot is the same to the last byte as well.
+    """
+    make, draw = OBJECTS[name]
+    seed = data.draw(st.integers(0, 2**32 - 1), "seed")
+    dtype = data.draw(st.sampled_from(DTYPES), "dtype")
+    # 0 is one sample by push, more is a batch by push_many
+    sizes = data.draw(st.lists(st.integers(0, 12), min_size=1, max_size=12), "sizes")
+    stops = data.draw(st.lists(st.integers(0, len(sizes)), max_size=3), "stops")
+    samples = draw(np.random.default_rng(seed), sum(max(size, 1) for size in sizes), dtype)
+    straight = make(np.random.default_rng(seed), dtype)
+    expected = fed(straight, samples, sizes)
+
+    obj = make(np.random.default_rng(seed), dtype)
+    actual: list[str] = []
+    at = done = 0
+    with tempfile.TemporaryDirectory() as folder:
+        path = os.path.join(folder, "state.arrow")
+        for stop in [*sorted(stops), len(sizes)]:
+            actual += fed(obj, samples[at:], sizes[done:stop])
+            at += sum(max(size, 1) for size in sizes[done:stop])
+            done = stop
+            save(obj, path)
+            obj = load(path)
+    assert actual == expected
+    assert obj.vectors.tobytes() == straight.vectors.tobytes()
+    assert to_bytes(obj) == to_bytes(straight)
+
+
+@pytest.mark.parametrize("name", OBJECTS)
+def test_an_object_may_be_pushed_to_after_it_was_saved(name: str) -> None:
+    """A state shares nothing with its object, nor with a second object made from it."""
+    make, draw = OBJECTS[name]
+    samples = draw(np.random.default_rng(2), 60, "float64")
+    obj = make(np.random.default_rng(1), "float64")
+    obj.push_many(samples[:30])
+    state = obj.to_state()
+    before = to_bytes(state)
+    one, two = (type(obj).from_state(state) for _ in range(2))
+    for each in (obj, one):
+        each.push_many(samples[30:])
+    assert to_bytes(state) == before
+    assert to_bytes(two) == before
+    assert to_bytes(one) == to_bytes(obj)
+
+
+@pytest.mark.parametrize("name", OBJECTS)
+@pytest.mark.parametrize("dtype", DTYPES)
+def test_a_state_that_does_not_fit_together_is_refused(name: str, dtype: str) -> None:
+    """An array or fact that is missing, longer or of another type is refused, not crashed on."""
+    make, draw = OBJECTS[name]
+    obj = make(np.random.default_rng(4), dtype)
+    obj.push_many(draw(np.random.default_rng(5), 40, dtype))
+    good = to_bytes(obj)
+    spoiled = 0
+    for spoil in (drop, lengthen, shorten, retype):
+        for number in range(100):
+            state = state_from_bytes(good)
+            if not spoil(state, number):
+                break
+            with pytest.raises(SnapshotError):
+                from_bytes(to_bytes(state), verify=False)
+            spoiled += 1
+    assert spoiled > 10
+
+
+def arrays_of(state: State) -> list[tuple[State, str]]:
+    """Return every array with its state, parts included."""
+    found = [(state, name) for name in state.arrays]
+    for part in state.parts.values():
+        found += arrays_of(part)
+    return found
+
+
+def drop(state: State, number: int) -> bool:
+    """Leave out the n-th array."""
+    found = arrays_of(state)
+    if number >= len(found):
+        return False
+    owner, name = found[number]
+    del owner.arrays[name]
+    return True
+
+
+def resize(state: State, number: int, change: int) -> bool:
+    """Give the n-th array that has rows more or fewer of them."""
+    found = [(o, n) for o, n in arrays_of(state) if o.arrays[n].size and n not in ANY_LENGTH]
+    if number >= len(found):
+        return False
+    owner, name = found[number]
+    array = owner.arrays[name]
+    owner.arrays[name] = np.resize(array, (len(array) + change, *array.shape[1:]))
+    return True
+
+
+def lengthen(state: State, number: int) -> bool:
+    """Give the n-th array one row more."""
+    return resize(state, number, 1)
+
+
+def shorten(state: State, number: int) -> bool:
+    """Take one row from the n-th array."""
+    return resize(state, number, -1)
+
+
+def retype(state: State, number: int) -> bool:
+    """Make truth values of the n-th array, which only an inner product may be."""
+    found = [(owner, name) for owner, name in arrays_of(state) if name != "inner"]
+    if number >= len(found):
+        return False
+    owner, name = found[number]
+    owner.arrays[name] = owner.arrays[name] != 0
+    return True
+
+
+@pytest.mark.parametrize("kind", ["int8", "float16", "longdouble", "bool"])
+def test_weights_of_any_kind_of_number_are_saved(kind: str) -> None:
+    """An inner product given in a type that snapshots do not hold survives as doubles."""
+    basis = streambasis.StreamBasis(3, inner=np.array([1, 1, 1], kind))
+    basis.push([1.0, 2.0, 3.0])
+    assert np.array_equal(from_bytes(to_bytes(basis)).vectors, basis.vectors)
+
+
+def test_an_inner_product_that_was_lost_is_missed() -> None:
+    """A basis in an inner product is never taken for a Euclidean one."""
+    state = streambasis.StreamBasis(3, inner=[1.0, 2.0, 3.0]).to_state()
+    for change in ({}, {"inner": np.eye(3)}):
+        with pytest.raises(SnapshotError, match="inner product"):
+            from_bytes(to_bytes(State(state.kind, state.facts, change, state.parts)))
