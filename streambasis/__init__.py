@@ -14,10 +14,12 @@ from streambasis._version import __version__
 if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
     from streambasis.errors import StreambasisError
+    from streambasis.monitor import NoveltyMonitor
     from streambasis.principal import PrincipalBasis
     from streambasis.snapshot import from_bytes, load, save, to_bytes
 
 _HOMES = {
+    "NoveltyMonitor": "streambasis.monitor",
     "PrincipalBasis": "streambasis.principal",
     "StreamBasis": "streambasis.basis",
     "StreambasisError": "streambasis.errors",
@@ -28,6 +30,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "NoveltyMonitor",
     "PrincipalBasis",
     "StreamBasis",
     "StreambasisError",

@@ -1,0 +1,152 @@
+"""Scoring against fixed directions, and the walk from one event transition to the next."""
+
+import math
+
+from streambasis.kernels._jit import kernel
+
+NOTHING, OPENED, COLLECTED, CLOSED = 0, 1, 2, 3
+
+REACH = 1e8
+"""A value further than this many noise standard deviations is scored as if it stood there: no
+answer depends on more, and no sum of squares can overflow."""
+
+
+@kernel(reassociate=True)
+def standardize(samples, centre, inverse, out):
+    """Write samples about their centre and in noise units to ``out``; NaN stays NaN."""
+    for i in range(samples.shape[0]):
+        for j in range(samples.shape[1]):
+            value = (samples[i, j] - centre[j]) * inverse[j]
+            if value > REACH:
+                value = REACH
+            elif value < -REACH:
+                value = -REACH
+            out[i, j] = value
+
+
+@kernel(reassociate=True)
+def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe, rest, t2):
+    """Split rows over orthonormal directions, one row after the other.
+
+    A row is never combined with another, so that its results do not depend on how the rows were
+    cut into batches. Reordered sums change a result by a few roundings only, as the error bound of
+    a dot product allows.
+
+    Parameters
+    ----------
+    z, mean : (m, n), (n,)
+        Samples in noise units and what is taken off each; NaN counts as nothing left.
+    directions : (q, n)
+        Orthonormal rows; the first ``first`` make the squared prediction error, the others are
+        those of open events. A direction no longer visible is a row of zeros.
+    whitening : (r, first)
+        Maps coordinates to whitened coordinates, of which T² is the sum of squares.
+    residual : (n,)
+        Workspace.
+    coordinates : (m, q)
+        Filled.
+    spe, rest, t2 : (m,)
+        Filled: squared norm of what the first directions leave, of what all leave, Hotelling's T².
+    """
+    count = directions.shape[0]
+    n = z.shape[1]
+    for i in range(z.shape[0]):
+        row = z[i]
+        for j in range(n):
+            value = row[j] - mean[j]
+            residual[j] = 0.0 if math.isnan(value) else value
+        for k in range(count):
+            direction = directions[k]
+            c = 0.0
+            for j in range(n):
+                c += direction[j] * residual[j]
+            coordinates[i, k] = c
+            for j in range(n):
+                residual[j] -= c * direction[j]
+        left = 0.0
+        for j in range(n):
+            left += residual[j] * residual[j]
+        rest[i] = left
+        for k in range(first, count):
+            left += coordinates[i, k] * coordinates[i, k]
+        spe[i] = left
+        total = 0.0
+        for k in range(whitening.shape[0]):
+            c = 0.0
+            for j in range(first):
+                c += whitening[k, j] * coordinates[i, j]
+            total += c * c
+        t2[i] = total
+
+
+@kernel()
+def take_off(rows, coordinates, directions, start, stop):
+    """Take the parts along directions ``start`` to ``stop`` out of rows, in place."""
+    for i in range(rows.shape[0]):
+        for k in range(start, stop):
+            c = coordinates[i, k]
+            for j in range(rows.shape[1]):
+                rows[i, j] -= c * directions[k, j]
+
+
+@kernel()
+def walk(first, judged, beyond, shows, ring, counters, last, quiet, taken, settings):
+    """Go on from one sample to the next up to the first one that changes an event.
+
+    Parameters
+    ----------
+    first : int
+        Number of the sample in row 0.
+    judged, beyond : (m,) bool
+        Whether the sample could be judged, and whether it is beyond the limit even with the open
+        events taken off.
+    shows : (m, open) bool
+        Whether each standing event shows in the sample; not looked at for a forming one.
+    ring : (window,) bool
+        Which of the last judged samples were beyond.
+    counters : (4,) int64
+        Position in the ring, samples beyond in it, open events, whether the last is forming.
+    last, quiet, taken : (most open,) int64
+        Of each open event: number of the last sample that shows it, judged samples since then,
+        samples collected for its directions.
+    settings : (4,) int64
+        Samples beyond that open an event, quiet run that closes one, samples collected between
+        updates of the directions, most open events.
+
+    Returns
+    -------
+    (row, what, event)
+        Row of the sample after which something is due, NOTHING at the end of the rows; the
+        position of the event concerned.
+    """
+    opens, run, collect, most = settings[0], settings[1], settings[2], settings[3]
+    window = ring.shape[0]
+    for i in range(judged.shape[0]):
+        if not judged[i]:
+            continue
+        standing = counters[2] - counters[3]
+        due = -1
+        for j in range(counters[2]):
+            shown = shows[i, j] if j < standing else beyond[i]
+            if shown:
+                last[j] = first + i
+                quiet[j] = 0
+                if j >= standing or not beyond[i]:
+                    taken[j] += 1
+                    if taken[j] % collect == 0 and due < 0:
+                        due = j
+            else:
+                quiet[j] += 1
+        for j in range(counters[2]):
+            if quiet[j] >= run:
+                return i, CLOSED, j
+        if due >= 0:
+            return i, COLLECTED, due
+        if counters[3] == 0 and counters[2] < most:
+            position = counters[0]
+            counters[1] += int(beyond[i]) - int(ring[position])
+            ring[position] = beyond[i]
+            counters[0] = (position + 1) % window
+            if counters[1] >= opens:
+                return i, OPENED, counters[2]
+    return judged.shape[0], NOTHING, -1

@@ -1,0 +1,110 @@
+"""What a monitor learns from its baseline, limits included, before it judges anything."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+from typing import Any, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from streambasis.monitor.scaling import MOST_COVARIANCE, Scaling, fit_scaling
+
+FOLDS = 5
+"""The baseline is judged fifth by fifth, each by a basis fitted on the other four."""
+
+
+class Learnt(NamedTuple):
+    """What a baseline teaches.
+
+    Attributes
+    ----------
+    scaling : Scaling
+        Centre, noise and rank.
+    z : ndarray of float64, shape (m, n)
+        The baseline about its centre and in noise units, outliers drawn in, gaps filled.
+    spe : ndarray of float64
+        Squared prediction errors of its complete samples by cross-fitting, in order of time.
+    roots : ndarray of float64
+        Eigenvalues of the covariance that the basis leaves out.
+    """
+
+    scaling: Scaling
+    z: NDArray[np.float64]
+    spe: NDArray[np.float64]
+    roots: NDArray[np.float64]
+
+
+def learn(samples: NDArray[np.float64], rank: int | None, most: int | None) -> Learnt:
+    """Learn from ordinary running.
+
+    Parameters
+    ----------
+    samples : ndarray of float64, shape (m, n)
+        The baseline; NaN marks a missing value.
+    rank : int, optional
+        Number of directions where it is known.
+    most : int, optional
+        Most directions.
+
+    Returns
+    -------
+    Learnt
+        As described there.
+
+    Notes
+    -----
+    The limits must come from samples that the basis was not fitted on: in-sample SPE is too small
+    by the degrees of freedom that the fit took. Folds are runs of consecutive samples, so that
+    correlation over time does not leak from one to the other. Missing values are filled in with
+    what the first fit expects, and everything is fitted once more.
+    """
+    gaps = np.isnan(samples)
+    scaling, z = fit_scaling(samples, rank=rank, most=most)
+    if gaps.any():
+        mean, vectors = principal(z, scaling.rank)
+        filled = samples.copy()
+        expected = scaling.centre + scaling.scale * _expected(z, gaps, mean, vectors)
+        filled[gaps] = expected[gaps]
+        scaling, z = fit_scaling(filled, rank=rank, most=most)
+    raw = (samples - scaling.centre) / scaling.scale
+    complete = ~gaps.any(axis=1)
+    edges = np.linspace(0, len(z), FOLDS + 1).astype(int)
+    spe = np.empty(len(z))
+    for start, stop in pairwise(edges.tolist()):
+        rest = np.concatenate([z[:start], z[stop:]])
+        mean, vectors = principal(rest, scaling.rank)
+        spe[start:stop] = _errors(np.nan_to_num(raw[start:stop]), mean, vectors)
+    values = np.linalg.svd(z - z.mean(axis=0), compute_uv=False) ** 2 / len(z)
+    return Learnt(scaling, z, spe[complete], values[scaling.rank :])
+
+
+def principal(z: NDArray[Any], rank: int) -> tuple[NDArray[Any], NDArray[Any]]:
+    """Return the mean of rows and their leading directions about it."""
+    mean = z.mean(axis=0)
+    deviations = z - mean
+    m, n = deviations.shape
+    if n <= min(m, MOST_COVARIANCE):
+        _, columns = np.linalg.eigh(deviations.T @ deviations)
+        return mean, np.ascontiguousarray(columns.T[::-1][:rank])
+    values, columns = np.linalg.eigh(deviations @ deviations.T)
+    leading = columns.T[::-1][:rank] @ deviations
+    return mean, leading / np.sqrt(np.maximum(values[::-1][:rank], np.finfo(float).tiny))[:, None]
+
+
+def _errors(z: NDArray[Any], mean: NDArray[Any], vectors: NDArray[Any]) -> NDArray[Any]:
+    deviations = z - mean
+    deviations -= (deviations @ vectors.T) @ vectors
+    return np.asarray(np.einsum("ij,ij->i", deviations, deviations))
+
+
+def _expected(
+    z: NDArray[Any], gaps: NDArray[np.bool_], mean: NDArray[Any], vectors: NDArray[Any]
+) -> NDArray[np.float64]:
+    """Return what the directions expect of rows with gaps, by least squares on the rest."""
+    out = np.zeros_like(z)
+    for i in np.flatnonzero(gaps.any(axis=1)):
+        seen = ~gaps[i]
+        a = np.linalg.lstsq(vectors[:, seen].T, (z[i] - mean)[seen], rcond=1e-6)[0]
+        out[i] = mean + a @ vectors
+    return out

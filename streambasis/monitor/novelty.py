@@ -1,0 +1,350 @@
+"""NoveltyMonitor: is this sample explained by what the feed has shown, and if not, what is new."""
+
+from __future__ import annotations
+
+import math
+import threading
+from collections.abc import Iterable
+from dataclasses import asdict
+from typing import TYPE_CHECKING, Any, Self
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from streambasis.basis import StreamBasis
+from streambasis.errors import SampleError, SettingError
+from streambasis.monitor.events import Event
+from streambasis.monitor.judging import Judge, Settings
+from streambasis.monitor.learning import learn
+from streambasis.monitor.limits import METHODS
+from streambasis.monitor.verdict import Columns, Verdict
+from streambasis.principal import PrincipalBasis
+from streambasis.samples import Channels, many_samples, one_sample
+from streambasis.state import State, owned
+from streambasis.times import many_nanoseconds, nanoseconds
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+LEAST_BASELINE = 32
+"""Fewer samples give no tail to fit a limit to."""
+
+BLOCK = 256
+"""Samples between two refinements: few enough to follow any half-life of 1,000 samples or more."""
+
+FLOAT64 = np.dtype(np.float64)
+
+
+class NoveltyMonitor:
+    """Novelty of each sample of a feed, the events it makes, and which earlier ones they repeat.
+
+    Parameters
+    ----------
+    channels : int or sequence of str
+        How many channels, or their distinct names.
+    baseline : int
+        The first samples, which set centre and noise of each channel, the basis and the limits;
+        they should show ordinary running. A sample with fewer than half of its channels is not
+        counted.
+    false_alarm : float
+        Probability with which an ordinary sample exceeds a limit.
+    limits : {"tail", "box", "jackson-mudholkar"}
+        How the limit of the squared prediction error is set.
+    rank : int, optional
+        Directions of the basis; found from the baseline where not given.
+    max_rank : int, optional
+        Most directions that are found.
+    half_life : float, optional
+        Samples after which what the basis has learnt counts half; by default it never forgets.
+    persistence : (int, int)
+        An event opens when so many of so many consecutive samples are beyond the limit.
+    quiet : int
+        An event closes after so many consecutive samples that do not show it.
+    same : float
+        Least cosine of the angle between directions of events that count as the same.
+
+    Raises
+    ------
+    SettingError
+        For a setting outside its range.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from streambasis import NoveltyMonitor
+    >>> rng = np.random.default_rng(0)
+    >>> feed = rng.normal(size=(3000, 2)) @ rng.normal(size=(2, 8)) + rng.normal(size=(3000, 8))
+    >>> feed[2500:2600, 3] += 8.0
+    >>> monitor = NoveltyMonitor(8, baseline=2000)
+    >>> table = monitor.push_many(feed)
+    >>> [(e["start"], e["end"], e["channels"]) for e in monitor.events]
+    [(2500, 2599, ['3'])]
+    """
+
+    def __init__(
+        self,
+        channels: int | Iterable[str],
+        *,
+        baseline: int = 2000,
+        false_alarm: float = 1e-4,
+        limits: str = "tail",
+        rank: int | None = None,
+        max_rank: int | None = None,
+        half_life: float | None = None,
+        persistence: tuple[int, int] = (4, 8),
+        quiet: int = 100,
+        same: float = 0.8,
+    ) -> None:
+        self._channels = Channels(channels)
+        n = self._channels.count
+        if not isinstance(baseline, int | np.integer) or baseline < LEAST_BASELINE:
+            raise SettingError(f"baseline={baseline!r}: a whole number of samples, at least 32")
+        if not 0.0 < false_alarm <= 0.2:
+            raise SettingError(f"false_alarm={false_alarm}: a probability above 0 and up to 0.2")
+        if limits not in METHODS:
+            raise SettingError(f"limits={limits!r}: one of {', '.join(METHODS)}")
+        for name, value in (("rank", rank), ("max_rank", max_rank)):
+            if value is not None and not 0 <= value < n:
+                raise SettingError(
+                    f"{name}={value}: from 0 to the number of channels less one ({n - 1}); "
+                    "with as many directions as channels nothing is ever new"
+                )
+        opens, window = persistence
+        if not 1 <= opens <= window:
+            raise SettingError(f"persistence={persistence}: m of n samples with 1 <= m <= n")
+        if quiet < 1:
+            raise SettingError(f"quiet={quiet}: at least one sample")
+        if not 0.0 < same <= 1.0:
+            raise SettingError(f"same={same}: a cosine above 0 and up to 1")
+        if half_life is not None and not 1.0 <= half_life < math.inf:
+            raise SettingError(f"half_life={half_life}: at least one sample, or None")
+        block = BLOCK if half_life is None else int(min(BLOCK, max(window, half_life // 4)))
+        self._settings = Settings(
+            float(false_alarm), limits, half_life, opens, window, quiet, float(same), block
+        )
+        self._baseline, self._rank, self._most = int(baseline), rank, max_rank
+        self._first = np.zeros((0, n))
+        self._count = 0
+        self._judge: Judge | None = None
+        self._lock = threading.Lock()
+
+    @property
+    def channels(self) -> tuple[str, ...]:
+        """Names of the channels."""
+        return self._channels.names
+
+    @property
+    def baseline(self) -> int:
+        """Samples of the baseline."""
+        return self._baseline
+
+    @property
+    def baseline_done(self) -> bool:
+        """Whether the baseline is complete and samples are judged."""
+        return self._judge is not None
+
+    @property
+    def count(self) -> int:
+        """Samples seen."""
+        return self._count
+
+    @property
+    def rank(self) -> int:
+        """Directions of the basis; 0 during the baseline."""
+        return self._judge.rank if self._judge else 0
+
+    @property
+    def noise(self) -> float:
+        """Variance per residual dimension in units of each channel's noise; NaN at first."""
+        return self._judge.basis.noise if self._judge else math.nan
+
+    @property
+    def drift(self) -> float:
+        """Largest principal angle between the baseline's subspace and today's, in radians."""
+        with self._lock:
+            if self._judge is None or self._judge.rank == 0:
+                return 0.0
+            return _largest_angle(self._judge.first_vectors, self._judge.vectors)
+
+    @property
+    def basis(self) -> PrincipalBasis:
+        """The basis, in channel units and orthonormal in units of each channel's noise."""
+        return self._need().basis
+
+    @property
+    def known(self) -> StreamBasis:
+        """The basis of adopted behaviour, in the same units."""
+        return self._need().known
+
+    @property
+    def events(self) -> list[Event]:
+        """The events so far, by number, open ones included."""
+        with self._lock:
+            if self._judge is None:
+                return []
+            judge = self._judge
+            still = [judge.event(which, open=True) for which in range(len(judge.open))]
+            return sorted([*judge.history.events.values(), *still], key=lambda e: int(e["event"]))
+
+    def push(self, sample: ArrayLike, at: Any = None) -> Verdict:
+        """Judge one sample, shape (n,); NaN marks a missing channel."""
+        checked = one_sample(sample, self._channels, FLOAT64, number=self._count, missing=True)
+        time = None if at is None else np.array([nanoseconds(at)])
+        with self._lock:
+            columns = self._take(checked[None], time)
+            known = self._judge.shown(checked) if self._judge else ()
+        gaps = np.flatnonzero(np.isnan(checked))
+        return columns.verdict(tuple(self.channels[i] for i in gaps), known)
+
+    def push_many(self, samples: Any, at: ArrayLike | None = None) -> pa.Table:
+        """Judge a batch, (m, n) or Arrow, as if pushed one at a time."""
+        checked = many_samples(samples, self._channels, FLOAT64, first=self._count, missing=True)
+        times = None if at is None else many_nanoseconds(at, len(checked))
+        with self._lock:
+            return self._take(checked, times).table()
+
+    def _take(self, samples: NDArray[np.float64], times: NDArray[np.int64] | None) -> Columns:
+        columns = Columns(self._count, times, len(samples))
+        start = 0
+        if self._judge is None:
+            start = self._learn_from(samples)
+        if self._judge is not None:
+            self._judge.take(samples[start:], columns, start)
+        self._count += len(samples)
+        return columns
+
+    def _learn_from(self, samples: NDArray[np.float64]) -> int:
+        """Take samples for the baseline; return how many."""
+        usable = 2 * np.count_nonzero(~np.isnan(samples), axis=1) >= samples.shape[1]
+        needed = self._baseline - len(self._first)
+        positions = np.flatnonzero(usable)[:needed]
+        self._first = np.concatenate([self._first, samples[positions]])
+        if len(self._first) < self._baseline:
+            return len(samples)
+        learnt = learn(self._first, self._rank, self._most)
+        stop = int(positions[-1]) + 1
+        self._judge = Judge(self.channels, self._settings, learnt, self._count + stop)
+        self._first = np.zeros((0, samples.shape[1]))
+        return stop
+
+    def finish(self) -> None:
+        """Close what is open, at the end of a feed."""
+        with self._lock:
+            if self._judge is not None:
+                self._judge.close_all()
+
+    def label(self, event: int, text: str | None) -> None:
+        """Give an event, by its number, a text that its recurrences name; None takes it away."""
+        with self._lock:
+            found = self._need().find(event)
+            if isinstance(found, Event):
+                found["label"] = text
+            else:
+                found.label = text
+
+    def adopt(self, event: int) -> None:
+        """Take an event for known behaviour: its directions are explained from now on.
+
+        An open event is closed. The directions grow :attr:`known`; :attr:`Verdict.known` says in
+        which later samples they show, :meth:`loadings` how much.
+        """
+        with self._lock:
+            self._need().adopt(event)
+
+    @property
+    def adopted(self) -> tuple[int, ...]:
+        """The event that each adopted direction comes from, one per column of the loadings."""
+        return tuple(self._judge.adopted.tolist()) if self._judge else ()
+
+    def loadings(self, samples: Any) -> NDArray[np.float64]:
+        """Return how much of each adopted direction is in samples.
+
+        Parameters
+        ----------
+        samples : array_like of shape (m, n), or Arrow
+            As for :meth:`push_many`; nothing changes.
+
+        Returns
+        -------
+        ndarray of float64, shape (m, adopted directions)
+            In noise standard deviations; found by least squares together with the basis.
+        """
+        checked = many_samples(samples, self._channels, FLOAT64, missing=True)
+        with self._lock:
+            judge = self._need()
+            rows = [judge.loadings(row)[0] for row in judge.standard(checked)]
+        return np.array(rows).reshape(len(checked), len(judge.adopted))
+
+    def contributions(self, sample: ArrayLike) -> dict[str, float]:
+        """Return each channel's share in the SPE of one sample, largest first; nothing changes."""
+        checked = one_sample(sample, self._channels, FLOAT64, missing=True)
+        with self._lock:
+            parts = self._need().shares(checked[None])
+        return {self.channels[i]: float(parts[i]) for i in np.argsort(-parts, kind="stable")}
+
+    @property
+    def scale(self) -> NDArray[np.float64]:
+        """Standard deviation of each channel's noise, in its units, (n,)."""
+        return owned(self._need().scaling.scale)
+
+    @property
+    def constant(self) -> tuple[str, ...]:
+        """Channels that held one value all through the baseline; any movement is novel."""
+        return self._named(self._need().scaling.constant)
+
+    @property
+    def nearly_constant(self) -> tuple[str, ...]:
+        """Channels that held one value for half of the baseline or more, or moved by rounding."""
+        return self._named(self._need().scaling.nearly)
+
+    def _named(self, which: NDArray[np.bool_]) -> tuple[str, ...]:
+        return tuple(self.channels[i] for i in np.flatnonzero(which))
+
+    def to_state(self) -> State:
+        """Hand over everything needed to go on."""
+        with self._lock:
+            facts = {
+                "channels": list(self.channels),
+                "named": self._channels.named,
+                "baseline": self._baseline,
+                "rank": self._rank,
+                "max_rank": self._most,
+                "settings": asdict(self._settings),
+                "count": self._count,
+            }
+            parts = {} if self._judge is None else {"judge": self._judge.to_state()}
+            return State("NoveltyMonitor", facts, {"first": owned(self._first)}, parts)
+
+    @classmethod
+    def from_state(cls, state: State) -> Self:
+        """Build a monitor that goes on where the state was taken."""
+        facts = state.facts
+        names = facts["channels"]
+        monitor = cls(
+            names if facts["named"] else len(names),
+            baseline=facts["baseline"],
+            rank=facts["rank"],
+            max_rank=facts["max_rank"],
+        )
+        monitor._settings = Settings(**facts["settings"])
+        monitor._count = facts["count"]
+        monitor._first = owned(state.arrays["first"])
+        if "judge" in state.parts:
+            monitor._judge = Judge.from_state(
+                monitor.channels, monitor._settings, state.parts["judge"]
+            )
+        return monitor
+
+    def _need(self) -> Judge:
+        if self._judge is None:
+            raise SampleError(
+                f"the baseline is not complete: {len(self._first)} of {self._baseline} samples"
+            )
+        return self._judge
+
+
+def _largest_angle(a: NDArray[Any], b: NDArray[Any]) -> float:
+    """Return the largest principal angle between two sets of orthonormal rows."""
+    cosine = float(np.linalg.svd(a @ b.T, compute_uv=False)[-1])
+    sine = float(np.linalg.norm(b - (b @ a.T) @ a, 2))
+    return math.atan2(sine, cosine)

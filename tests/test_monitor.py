@@ -1,0 +1,230 @@
+"""NoveltyMonitor: verdicts, events, recurrence, adoption, gaps, and what survives a restart."""
+
+from __future__ import annotations
+
+import json
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pytest
+from numpy.typing import NDArray
+
+from streambasis import NoveltyMonitor, from_bytes, to_bytes
+from streambasis.errors import SampleError, SettingError
+
+NAMES = [f"c{i}" for i in range(12)]
+BASELINE = 1000
+COLUMNS = {
+    "sample": pa.int64(),
+    "time": pa.timestamp("ns"),
+    "spe": pa.float64(),
+    "t2": pa.float64(),
+    "limit": pa.float64(),
+    "t2_limit": pa.float64(),
+    "novel": pa.bool_(),
+    "extreme": pa.bool_(),
+    "rank": pa.int32(),
+    "event": pa.int64(),
+}
+EVENT_KEYS = [
+    "event", "start", "end", "start_time", "end_time", "peak", "channels", "contributions",
+    "repeats", "cosine", "label",
+]  # fmt: skip
+
+
+def units(seed: int) -> NDArray[np.float64]:
+    """Return the size of the noise of each channel, in its own unit."""
+    return 10.0 ** np.random.default_rng([seed, 1]).uniform(-2, 3, 12)
+
+
+def plant(seed: int, samples: int, *, sources: int = 3) -> NDArray[np.float64]:
+    """Return an ordinary feed: sources shared by twelve channels in different units, and noise."""
+    rng = np.random.default_rng(seed)
+    loads = 2.0 * rng.normal(size=(sources, 12))
+    feed = rng.normal(size=(samples, sources)) @ loads + rng.normal(size=(samples, 12))
+    return (50.0 + feed) * units(seed)
+
+
+def with_faults() -> NDArray[np.float64]:
+    """Return a feed of seed 7 with a fault on c2 and c9, one on c5, and the first again."""
+    feed = plant(7, 4000)
+    for start, stop, channels in ((1500, 1600, (2, 9)), (2100, 2180, (5,)), (2900, 3000, (2, 9))):
+        for channel in channels:
+            feed[start:stop, channel] += 8.0 * units(7)[channel]
+    return feed
+
+
+def run(feed: NDArray[np.float64], sizes: list[int], **settings: Any) -> tuple[Any, pa.Table]:
+    """Push a feed in batches of the sizes given, over and over; return monitor and table."""
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE, **settings)
+    tables = []
+    start = turn = 0
+    while start < len(feed):
+        size = sizes[turn % len(sizes)]
+        tables.append(monitor.push_many(feed[start : start + size]))
+        start, turn = start + size, turn + 1
+    return monitor, pa.concat_tables(tables)
+
+
+def test_columns_are_those_of_the_design() -> None:
+    """A batch answers with the decision columns, in order and of their types; unknown is null."""
+    feed = plant(0, BASELINE + 10)
+    _, table = run(feed, [BASELINE + 10])
+    assert dict(zip(table.schema.names, table.schema.types, strict=True)) == COLUMNS
+    assert table["spe"].null_count == table["limit"].null_count == BASELINE
+    assert table["time"].null_count == table["event"].null_count == BASELINE + 10
+
+
+def test_events_name_start_channels_and_repetition() -> None:
+    """Faults become events at their first sample, carried by their channels; a return is named."""
+    monitor, table = run(with_faults(), [4000])
+    events = monitor.events
+    assert [list(e) for e in events] == [EVENT_KEYS] * 3
+    starts, ends = [e["start"] for e in events], [e["end"] for e in events]
+    assert starts == pytest.approx([1500, 2100, 2900], abs=2)
+    assert ends == pytest.approx([1599, 2179, 2999], abs=2)
+    assert [sorted(e["channels"]) for e in events] == [["c2", "c9"], ["c5"], ["c2", "c9"]]
+    assert [e["repeats"] for e in events] == [None, None, 0]
+    assert events[2]["cosine"] > 0.95
+    assert events[0].duration == ends[0] - starts[0] + 1
+    assert sum(events[0]["contributions"].values()) == pytest.approx(1.0)
+    assert json.loads(json.dumps(events)) == events
+    inside = np.flatnonzero(~np.isnan(table["event"].to_numpy()))
+    assert 1500 <= inside[0] < 1508
+
+
+@pytest.mark.parametrize("sizes", [[1], [7, 300, 1], [255, 256, 257]])
+def test_batches_decide_like_singles_to_the_last_bit(sizes: list[int]) -> None:
+    """However the feed is cut into batches, every column and every event is the same."""
+    feed = with_faults()
+    feed[1700:1720, 4] = np.nan
+    feed[1540:1545, 2] = np.nan
+    feed[1800] = np.nan
+    whole, expected = run(feed, [4000], half_life=1500.0)
+    parts, actual = run(feed, sizes, half_life=1500.0)
+    assert actual.combine_chunks().equals(expected.combine_chunks())
+    assert parts.events == whole.events
+
+
+def test_push_gives_the_row_of_push_many() -> None:
+    """A verdict holds what the row of the table holds."""
+    feed = with_faults()[:1700]
+    table = NoveltyMonitor(NAMES, baseline=BASELINE).push_many(feed)
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    monitor.push_many(feed[:1490])
+    for i in range(1490, 1700):
+        verdict = monitor.push(feed[i], at=float(i))
+        row = table.slice(i, 1).to_pylist()[0]
+        assert verdict._asdict() | row == verdict._asdict() | {"time": None}
+        assert verdict.time == i * 10**9
+
+
+@pytest.mark.parametrize("stop", [300, 1000, 1550, 1650, 2950])
+def test_restart_is_invisible(stop: int) -> None:
+    """A snapshot taken anywhere goes on bit for bit: baseline, open event, recurrence."""
+    feed = with_faults()
+    whole, expected = run(feed, [4000], half_life=1500.0)
+    before = NoveltyMonitor(NAMES, baseline=BASELINE, half_life=1500.0)
+    first = before.push_many(feed[:stop])
+    after = from_bytes(to_bytes(before))
+    second = after.push_many(feed[stop:])
+    assert pa.concat_tables([first, second]).combine_chunks().equals(expected.combine_chunks())
+    assert after.events == whole.events
+
+
+def test_change_that_stays_is_one_event_and_silent_once_adopted() -> None:
+    """A lasting shift is one open event; after adopt it is explained, and samples say so."""
+    feed = plant(7, 5000)
+    feed[2000:, [1, 6, 8]] += np.array([9.0, -7.0, 8.0]) * units(7)[[1, 6, 8]]
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    before = monitor.push_many(feed[:3000])
+    assert len(monitor.events) == 1
+    assert monitor.events[0].open
+    assert before["novel"].to_numpy()[2000:3000].mean() > 0.95
+    monitor.label(0, "summer mode")
+    monitor.adopt(0)
+    after = monitor.push_many(feed[3000:])
+    assert after["novel"].to_numpy().mean() < 0.005
+    assert len(monitor.events) == 1
+    assert monitor.events[0]["label"] == "summer mode"
+    assert not monitor.events[0].open
+    assert monitor.known.rank == len(monitor.adopted)
+    assert monitor.push(feed[-1]).known == (0,)
+    assert monitor.push(feed[1500]).known == ()
+    amounts = monitor.loadings(feed[[1500, 4000]])[:, 0]
+    assert abs(amounts[0]) < 5.0 < abs(amounts[1])
+
+
+def test_fault_on_top_of_a_lasting_change_is_its_own_event() -> None:
+    """While one event stands, another fault is found, and a repetition of an earlier one known."""
+    feed = with_faults()
+    feed[2400:, [0, 3]] += 9.0 * units(7)[[0, 3]]
+    monitor, _ = run(feed, [4000])
+    monitor.finish()
+    found = [(e["start"], e["end"], e["repeats"]) for e in monitor.events]
+    assert found[2:] == [(2400, 3999, None), (2900, 2999, 0)]
+
+
+def test_missing_channel_is_projected_out() -> None:
+    """A missing channel leaves the rest judged; too few observed gives no verdict, not a guess."""
+    feed = plant(3, 2200)
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    monitor.push_many(feed[:2000])
+    gappy = feed[2000:2200].copy()
+    gappy[:, 3] = np.nan
+    verdicts = [monitor.push(row) for row in gappy]
+    assert {v.missing for v in verdicts} == {("c3",)}
+    assert np.mean([v.novel for v in verdicts]) < 0.02
+    assert all(v.judged for v in verdicts)
+    gappy[0, 3:] = np.nan
+    lost = monitor.push(gappy[0])
+    assert not lost.judged
+    assert np.isnan(lost.spe)
+    assert not lost.novel
+    assert len(lost.missing) == 9
+
+
+def test_constant_channel_is_named_and_novel_when_it_moves() -> None:
+    """A channel that never moved is named; its first movement, however small, is novel."""
+    feed = plant(4, 2000)
+    feed[:, 2] = 3.25
+    feed[:, 7] = 0.0
+    monitor, _ = run(feed, [2000])
+    assert monitor.constant == ("c2", "c7")
+    for channel in (2, 7):
+        moved = feed[-1].copy()
+        moved[channel] += 1e-6
+        assert monitor.push(moved).novel
+        assert next(iter(monitor.contributions(moved))) == NAMES[channel]
+
+
+def test_refused_sample_changes_nothing() -> None:
+    """A batch with an infinite value is refused by name, and the monitor stays as it was."""
+    feed = plant(5, 1500)
+    monitor, _ = run(feed, [1500])
+    before = to_bytes(monitor)
+    bad = feed[:3].copy()
+    bad[1, 4] = np.inf
+    with pytest.raises(SampleError, match="sample 1501, channel 'c4': value inf"):
+        monitor.push_many(bad)
+    assert to_bytes(monitor) == before
+
+
+@pytest.mark.parametrize(
+    ("settings", "name"),
+    [
+        ({"baseline": 5}, "baseline"),
+        ({"false_alarm": 0.0}, "false_alarm"),
+        ({"limits": "guess"}, "limits"),
+        ({"rank": 12}, "rank"),
+        ({"persistence": (5, 4)}, "persistence"),
+        ({"quiet": 0}, "quiet"),
+        ({"same": 1.5}, "same"),
+        ({"half_life": 0.0}, "half_life"),
+    ],
+)
+def test_setting_out_of_range_is_named(settings: dict[str, Any], name: str) -> None:
+    """A setting outside its range is refused with its name."""
+    with pytest.raises(SettingError, match=name):
+        NoveltyMonitor(NAMES, **settings)
