@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.audit import LEAST_DIMENSION, unit_roundoff
 from streambasis.errors import SnapshotError
 from streambasis.kernels import principal as kernels
 from streambasis.ranks import Spectrum
@@ -22,6 +23,7 @@ from streambasis.state import State, owned
 ROUNDING_FLOOR = 16.0
 """A residual below this many machine epsilons of its sample is rounding: projecting by matrix
 products leaves a dependent sample with one or a few epsilons."""
+MOST_RENEWALS = 3
 RENEWAL_LIMIT = 1.0
 """Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
 made orthonormal again."""
@@ -70,9 +72,9 @@ class Subspace:
     __slots__ = (
         "centred",
         "coefficients",
-        "directions",
         "exponent",
         "forget",
+        "held",
         "limit",
         "mean",
         "outside",
@@ -96,30 +98,28 @@ class Subspace:
         dtype: np.dtype[Any],
     ) -> None:
         self.limit, self.forget, self.centred = limit, forget, centred
-        self.directions = np.zeros((0, count), dtype)
+        # the directions, then room for the rows of a block outside them
+        self.stack = np.zeros((limit + block, count), dtype)
+        self.held = 0
         self.singular = np.zeros(0)
         self.mean = np.zeros(count, dtype)
         self.weight = self.weight_squares = 0.0
         self.outside = self.power = 0.0
         self.exponent = self.renewals = 0
-        # workspace: the directions, then the rows of a block outside them
-        self.stack = np.zeros((limit + block, count), dtype)
         self.residual = np.zeros(count, dtype)
         self.coefficients = np.zeros(limit + block, dtype)
         reach = 2.0 ** (0.8 * np.finfo(dtype).maxexp)
         self.safe = (1.0 / reach, reach)
 
     @property
+    def directions(self) -> NDArray[Any]:
+        """The directions as rows, (held, n), a view."""
+        return self.stack[: self.held]
+
+    @property
     def nbytes(self) -> int:
         """Bytes of all arrays."""
-        arrays = (
-            self.directions,
-            self.singular,
-            self.mean,
-            self.stack,
-            self.residual,
-            self.coefficients,
-        )
+        arrays = (self.singular, self.mean, self.stack, self.residual, self.coefficients)
         return sum(array.nbytes for array in arrays)
 
     @property
@@ -135,9 +135,9 @@ class Subspace:
         return Spectrum(
             self.singular**2 / weight,
             self.outside / weight,
-            self.directions.shape[1],
+            self.stack.shape[1],
             self.effective,
-            self.directions.dtype.kind == "c",
+            self.stack.dtype.kind == "c",
         )
 
     def spreads(self, rank: int) -> NDArray[np.float64]:
@@ -150,13 +150,18 @@ class Subspace:
         What lies outside is a view of the workspace, valid until the next call; it has no rows
         where the directions span the whole space.
         """
-        held, count = self.directions.shape
-        coordinates = deviations @ self.directions.conj().T
-        rest = self.stack[held : held + (len(deviations) if held < count else 0)]
+        directions = self.directions
+        coordinates = deviations @ directions.conj().T
+        rest = self._room(len(deviations))
         if len(rest):
-            np.matmul(coordinates, self.directions, out=rest)
+            np.matmul(coordinates, directions, out=rest)
             np.subtract(deviations, rest, out=rest)
         return coordinates, rest
+
+    def _room(self, rows: int) -> NDArray[Any]:
+        """Return the rows of the workspace for what lies outside the directions."""
+        whole = self.held == self.stack.shape[1]
+        return self.stack[self.held : self.held + (0 if whole else rows)]
 
     def fold(self, block: NDArray[Any], coordinates: NDArray[Any] | None = None) -> None:
         """Fold samples, (m, n), into the subspace.
@@ -171,145 +176,136 @@ class Subspace:
 
         Notes
         -----
-        For m samples, k directions held and n channels: 2n(2km + m²/2 + k(k + m) + 2k²) flops in
-        matrix products and about 10(k + m)³ in the core. The scatter about the new mean is that
-        about the old one less the mean shift counted W times; with v the square roots of the
-        weights, this is the scatter of (I - g·vvᵀ) times the weighted rows, g = (1 - √(Wa/W))/Wb,
-        with Wa, Wb and W the weights before, of the block and after. (Ross et al. 2008 append the
-        shift as one more row; the scatter is the same.)
+        For m samples, k directions held and n channels: 2n(2km + m² + k(k + m) + 2k²) flops in
+        matrix products and about 10(k + m)³ in the core.
+
+        The scatter about the new mean is that about the old one less the mean shift, counted W
+        times. With v the square roots of the weights this is the scatter of the weighted rows
+        times I - g·vvᵀ, g = (1 - √(Wa/W))/Wb, where Wa, Wb and W are the weights before, of the
+        block and after. (Ross et al. 2008 append the shift as one more row: the same scatter.)
         """
-        m, count = block.shape
-        ages = np.arange(m - 1, -1, -1)
+        ages = np.arange(len(block) - 1, -1, -1)
         roots = math.sqrt(self.forget) ** ages
-        typed = roots.astype(np.finfo(block.dtype).dtype)[:, None]
-        decay = self.forget**m
-        before, added = decay * self.weight, float((roots**2).sum())
+        weights = roots * roots
+        decay = self.forget ** len(block)
+        before, added = decay * self.weight, float(weights.sum())
         total = before + added
 
-        squares = np.empty(m)
+        squares = np.empty(len(block))
         status = kernels.row_squares(block, *self.safe, squares)
-        scaled = self._fit_exponent(block, status)
-        if self.exponent != 0 or scaled:
+        self._fit_exponent(block, status)
+        if self.exponent != 0:
             block = _times_power(block, -self.exponent)
             kernels.row_squares(block, 0.0, np.inf, squares)
-            coordinates = None
         deviations = block - _times_power(self.mean, -self.exponent) if self.centred else block
-        if coordinates is None:
+        if coordinates is None or self.exponent != 0:
             coordinates, rest = self.split(deviations)
         else:
-            held = len(self.directions)
-            rest = self.stack[held : held + (m if held < count else 0)]
+            rest = self._room(len(block))
 
         wide = np.complex128 if block.dtype.kind == "c" else np.float64
-        coordinates = coordinates.astype(wide) * roots[:, None]
-        rest *= typed[: len(rest)]
-        floors = ROUNDING_FLOOR * np.finfo(block.dtype).eps * np.sqrt(squares) * roots
+        coordinates = coordinates.astype(wide)
+        typed = roots.astype(np.finfo(block.dtype).dtype)[:, None]
+        if self.forget < 1.0:
+            coordinates *= roots[:, None]
+            rest *= typed[: len(rest)]
         if self.centred:
-            shift = (typed**2).T @ deviations / total
+            shift = (typed * typed).T @ deviations / total
             factor = (1.0 - math.sqrt(before / total)) / added
             coordinates -= factor * np.outer(roots, roots @ coordinates)
             if len(rest):
                 rest -= (factor * typed) * (typed.T @ rest)
             self.mean += _times_power(shift[0].astype(block.dtype), self.exponent)
         self.weight = total
-        self.weight_squares = decay**2 * self.weight_squares + float((roots**4).sum())
-        self.power = decay * self.power + float(roots**2 @ squares)
+        self.weight_squares = decay**2 * self.weight_squares + float(weights @ weights)
+        self.power = decay * self.power + float(weights @ squares)
         self.outside *= decay
-        self._refactor(math.sqrt(decay), coordinates, rest, floors)
-        least = np.finfo(block.dtype)
-        if len(self.singular) and (
-            math.frexp(self.singular[0])[1] + self.exponent < least.minexp - least.nmant
-        ):
-            # silence under forgetting has brought every direction below the smallest number
-            self.directions, self.singular = self.directions[:0], self.singular[:0]
-            self.outside = self.power = 0.0
-            self.exponent = 0
+        self._refactor(math.sqrt(decay), coordinates, rest, squares * weights)
+        self._forget_the_vanished()
 
-    def _fit_exponent(self, block: NDArray[Any], status: int) -> bool:
+    def _fit_exponent(self, block: NDArray[Any], status: int) -> None:
         """Choose the unit so that neither the block nor the spectrum leaves the range."""
-        top = self.singular[0] if len(self.singular) else 0.0
-        level = math.frexp(top)[1] + self.exponent if top else None
-        reach = 0.4 * np.finfo(block.dtype).maxexp
-        if status == kernels.USUAL and (level is None or abs(level) < reach):
-            wanted = 0
-        else:
-            largest = float(max(abs(block.real).max(), abs(block.imag).max(), 0.0))
-            levels = [math.frexp(largest)[1]] if largest else []
-            wanted = max(levels + ([] if level is None else [level]), default=0)
+        top = float(self.singular[0]) if self.held else 0.0
+        level = math.frexp(top)[1] + self.exponent if top else 0
+        wanted = 0
+        if status == kernels.UNUSUAL or abs(level) > 0.4 * np.finfo(block.dtype).maxexp:
+            largest = float(max(abs(block.real).max(), abs(block.imag).max()))
+            levels = [level] if top else []
+            wanted = max([*levels, math.frexp(largest)[1]] if largest else levels)
         change = self.exponent - wanted
         if change:
             self.singular = np.ldexp(self.singular, change)
             self.outside = math.ldexp(self.outside, 2 * change)
             self.power = math.ldexp(self.power, 2 * change)
             self.exponent = wanted
-        return wanted != 0
 
     def _refactor(
         self,
         decay: float,
         coordinates: NDArray[Any],
         rest: NDArray[Any],
-        floors: NDArray[np.float64],
+        squares: NDArray[np.float64],
     ) -> None:
         """Take the SVD of the old factor, decayed, with the rows of the block below it."""
-        held, count = self.directions.shape
-        m = len(coordinates)
-        factor, basis_change, width = self._factor_rest(coordinates, rest, floors)
-        core = np.zeros((held + m, held + width), coordinates.dtype)
-        core[np.arange(held), np.arange(held)] = decay * self.singular
-        core[held:, :held] = coordinates
-        core[held:, held:] = factor
-        singular, vectors = _spectrum(core, self.singular, self.limit, count)
-        floor = ROUNDING_FLOOR * np.finfo(self.directions.dtype).eps * math.sqrt(self.power)
+        held = self.held
+        rounding = ROUNDING_FLOOR * float(np.finfo(rest.dtype).eps)
+        if len(rest):
+            factor, change = self._factor_rest(coordinates, rest, rounding * np.sqrt(squares))
+        else:
+            factor, change = np.zeros((len(coordinates), 0), coordinates.dtype), None
+        whole = self.limit == self.stack.shape[1]
+        singular, rotation = core_spectrum(
+            decay * self.singular, coordinates, factor, self.limit, whole
+        )
+        floor = rounding * math.sqrt(self.power)
         keep = min(self.limit, int(np.count_nonzero(singular > floor)))
-        self.outside += float((singular[keep:] ** 2).sum())
-        rotation = vectors[:keep]
-        if basis_change is not None:
-            rotation = np.concatenate(
-                [rotation[:, :held], rotation[:, held:] @ basis_change], axis=1
-            )
-        self.stack[:held] = self.directions
-        rows = held + (width if basis_change is None else m)
-        self.directions = rotation.astype(self.directions.dtype) @ self.stack[:rows]
-        self.singular = singular[:keep].copy()
+        self.outside += float(singular[keep:] @ singular[keep:])
+        rotation = rotation[:keep]
+        if change is not None:
+            rotation = np.concatenate([rotation[:, :held], rotation[:, held:] @ change], axis=1)
+        rows = self.stack[: rotation.shape[1]]
+        self.stack[:keep] = rotation.astype(rows.dtype, copy=False) @ rows
+        self.held, self.singular = keep, singular[:keep].copy()
         self._renew()
 
     def _factor_rest(
         self, coordinates: NDArray[Any], rest: NDArray[Any], floors: NDArray[np.float64]
-    ) -> tuple[NDArray[Any], NDArray[Any] | None, int]:
+    ) -> tuple[NDArray[Any], NDArray[Any] | None]:
         """Write the rows outside the directions as factor times orthonormal rows.
 
-        Returns the factor, the matrix that turns ``rest`` into the orthonormal rows (None where
-        they have replaced it in the workspace) and their number.
+        Returns the factor and the matrix that turns ``rest`` into the orthonormal rows, None
+        where they have replaced it in the workspace.
         """
-        m = len(coordinates)
-        if not len(rest):
-            return np.zeros((m, 0)), None, 0
+        m = len(rest)
         squares = np.empty(m)
         kernels.row_squares(rest, 0.0, np.inf, squares)
-        if (squares <= floors**2).all():
-            return np.zeros((m, 0)), None, 0
-        gram = (rest @ rest.conj().T).astype(coordinates.dtype)
-        # Cholesky-QR loses orthogonality by epsilon times the condition number squared: fourth
-        # root of epsilon (and no worse than 1e-2) leaves a loss that one renewal step removes
+        if (squares <= floors * floors).all():
+            return np.zeros((m, 0), coordinates.dtype), None
+        gram = (rest @ rest.conj().T).astype(coordinates.dtype, copy=False)
+        # Cholesky-QR loses orthogonality by epsilon times the condition number squared, which
+        # a renewal squares: the fourth root of epsilon, and no worse than 1e-2 for the energies
         narrowest = max(float(np.finfo(rest.dtype).eps) ** 0.25, 1e-2)
         try:
-            factor = np.linalg.cholesky(gram)
+            lower = np.linalg.cholesky(gram)
         except np.linalg.LinAlgError:
-            factor = None
-        if factor is not None:
-            diagonal = factor.diagonal().real
+            lower = None
+        if lower is not None:
+            diagonal = lower.diagonal().real
             if diagonal.min() > narrowest * diagonal.max():
-                return factor, np.linalg.inv(factor), m
-        held = len(self.directions)
-        self.stack[:held] = self.directions
-        factor = np.zeros((m, m), rest.dtype)
-        typed = coordinates.astype(rest.dtype) * 0
+                return lower, np.linalg.inv(lower)
+        factor, more = np.zeros((m, m), rest.dtype), np.zeros((m, self.held), rest.dtype)
         width = kernels.orthonormal_rows(
-            rest.copy(), floors, self.stack, held, typed, factor, self.residual, self.coefficients
+            rest.copy(),
+            floors,
+            self.stack,
+            self.held,
+            more,
+            factor,
+            self.residual,
+            self.coefficients,
         )
-        coordinates += typed
-        return factor[:, :width].astype(coordinates.dtype), None, width
+        coordinates += more
+        return factor[:, :width].astype(coordinates.dtype), None
 
     def _renew(self) -> None:
         """Make the directions orthonormal again where the last step cost too much of it.
@@ -317,26 +313,39 @@ class Subspace:
         The nearest orthonormal rows to U are (UUᴴ)^(-1/2) U; one step of its Newton iteration,
         U - (UUᴴ - I)U/2, squares the loss.
         """
-        held, count = self.directions.shape
-        unit = float(np.finfo(self.directions.dtype).eps) / 2
-        for _ in range(3):
-            loss = self.directions @ self.directions.conj().T
-            loss[np.arange(held), np.arange(held)] -= 1
-            if not held or np.abs(loss).sum(axis=0).max() <= RENEWAL_LIMIT * max(count, 16) * unit:
+        directions = self.directions
+        count = directions.shape[1]
+        limit = RENEWAL_LIMIT * max(count, LEAST_DIMENSION) * unit_roundoff(directions.dtype)
+        for _ in range(MOST_RENEWALS):
+            loss = directions @ directions.conj().T
+            if not self.held or kernels.subtract_identity(loss) <= limit:
                 break
-            self.directions -= (loss / 2) @ self.directions
+            loss *= 0.5
+            directions -= loss @ directions
             self.renewals += 1
+
+    def _forget_the_vanished(self) -> None:
+        """Drop every direction once silence has brought them below the smallest number."""
+        least = np.finfo(self.stack.dtype)
+        if self.held and (
+            math.frexp(self.singular[0])[1] + self.exponent < least.minexp - least.nmant
+        ):
+            self.held, self.singular = 0, self.singular[:0]
+            self.outside = self.power = 0.0
+            self.exponent = 0
 
     def to_state(self) -> State:
         """Hand over everything needed to go on."""
+        with np.errstate(over="ignore"):
+            # for readers of a snapshot; it follows from the others
+            energies = np.ldexp(self.singular**2 / (self.weight or 1.0), 2 * self.exponent)
         return State(
             "Subspace",
             {"exponent": self.exponent, "renewals": self.renewals},
             {
                 "vectors": owned(self.directions),
                 "singular": owned(self.singular),
-                # for readers of a snapshot; it follows from the others
-                "energies": np.ldexp(self.singular**2 / (self.weight or 1.0), 2 * self.exponent),
+                "energies": energies,
                 "mean": owned(self.mean),
                 "sums": np.array([self.weight, self.weight_squares, self.outside, self.power]),
             },
@@ -344,7 +353,7 @@ class Subspace:
 
     def set_state(self, state: State) -> None:
         """Take over a state made with the same settings."""
-        dtype, count = self.directions.dtype, self.directions.shape[1]
+        dtype, count = self.stack.dtype, self.stack.shape[1]
         directions = state.take("vectors", dtype, (None, count))
         if len(directions) > self.limit:
             raise SnapshotError(f"{len(directions)} directions where at most {self.limit} are held")
@@ -353,20 +362,50 @@ class Subspace:
         mean = state.take("mean", dtype, (count,))
         sums = state.take("sums", np.float64, (4,))
         self.exponent, self.renewals = int(state.facts["exponent"]), int(state.facts["renewals"])
-        self.directions, self.singular, self.mean = directions, singular, mean
+        self.held = len(directions)
+        self.stack[: self.held] = directions
+        self.singular, self.mean = singular, mean
         self.weight, self.weight_squares, self.outside, self.power = sums.tolist()
 
 
-def _spectrum(
-    core: NDArray[Any], before: NDArray[np.float64], limit: int, count: int
+def core_spectrum(
+    before: NDArray[np.float64],
+    coordinates: NDArray[Any],
+    factor: NDArray[Any],
+    limit: int,
+    whole: bool,
 ) -> tuple[NDArray[np.float64], NDArray[Any]]:
-    """Return singular values, descending, and right singular vectors as rows."""
-    wide = GRAM_RANGE_CUT if limit < count else GRAM_RANGE
-    if len(before) == limit and before[-1] ** 2 > wide * before[0] ** 2:
-        energies, columns = np.linalg.eigh(core.conj().T @ core)
+    """Return singular values, descending, and right singular vectors as rows, of the core.
+
+    Parameters
+    ----------
+    before : ndarray of float64, shape (k,)
+        Singular values before the fold, descending.
+    coordinates, factor : ndarray, shapes (m, k) and (m, q)
+        The core is diag(before) and zeros above the two side by side.
+    limit : int
+        How many singular values are kept.
+    whole : bool
+        Whether nothing is ever cut.
+    """
+    held, width = len(before), factor.shape[1]
+    wide = GRAM_RANGE if whole else GRAM_RANGE_CUT
+    if held == limit and before[-1] ** 2 > wide * before[0] ** 2:
+        gram = np.empty((held + width, held + width), factor.dtype)
+        # the upper triangle is not read
+        gram[:held, :held] = coordinates.conj().T @ coordinates
+        gram[np.arange(held), np.arange(held)] += before**2
+        if width:
+            gram[held:, :held] = factor.conj().T @ coordinates
+            gram[held:, held:] = factor.conj().T @ factor
+        energies, columns = np.linalg.eigh(gram, UPLO="L")
         if energies[-limit] > wide * energies[-1]:
             singular = np.sqrt(np.maximum(energies[::-1], 0.0))
-            return singular, columns[:, ::-1].conj().T
+            return singular, np.ascontiguousarray(columns.conj().T[::-1])
+    core = np.zeros((held + len(coordinates), held + width), factor.dtype)
+    core[np.arange(held), np.arange(held)] = before
+    core[held:, :held] = coordinates
+    core[held:, held:] = factor
     _, singular, rows = np.linalg.svd(core, full_matrices=False)
     return singular, rows
 

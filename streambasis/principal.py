@@ -28,7 +28,9 @@ WHOLE = 64
 would be, and nothing is ever cut."""
 DEFAULT_MAX_RANK = 64
 LEAST_RESERVE = 8
+FIRST_BLOCK = 16
 LEAST_BLOCK, LARGEST_BLOCK = 16, 96
+WHOLE_BLOCK = 256
 
 
 class PrincipalBasis:
@@ -50,8 +52,9 @@ class PrincipalBasis:
     half_life : float, optional
         The same in samples: ``forget = 0.5 ** (1 / half_life)``. Give one of the two.
     block : int, optional
-        Samples folded in at a time. Every sample is scored at once; the basis moves at block
-        boundaries and at :meth:`flush`.
+        Samples folded in at a time. Every sample is scored at once; the basis moves when a block
+        is full and at :meth:`flush`. By default blocks start at 16 samples and double with the
+        samples folded, up to what costs least per sample or an eighth of the memory 1/(1 - forget).
     centre : bool
         Whether a running mean is kept, with the same forgetting, and everything is about it.
     dtype : str or dtype
@@ -93,6 +96,7 @@ class PrincipalBasis:
         "_channels",
         "_core",
         "_gaps",
+        "_growing",
         "_header",
         "_inner",
         "_lock",
@@ -125,20 +129,16 @@ class PrincipalBasis:
         forget = _checked_forgetting(forget, half_life)
         limit = self._most + max(LEAST_RESERVE, self._most // 4)
         limit = count if count <= WHOLE else min(count, limit)
-        if block is None:
-            block = min(max(limit, LEAST_BLOCK), LARGEST_BLOCK)
-            if forget < 1.0:
-                # a basis that lags by more than an eighth of its memory forgets out of step
-                block = min(block, max(1, int(0.125 / (1.0 - forget))))
-        elif not isinstance(block, int | np.integer) or block < 1:
-            raise SettingError(f"block={block!r}: a whole number of samples, at least 1")
+        growing = block is None
+        block = _default_block(count, limit, forget) if block is None else _checked_block(block)
         self._inner = Inner(inner, count, self.dtype)
-        self._core = Subspace(count, limit, int(block), forget, bool(centre), self.dtype)
+        self._core = Subspace(count, limit, block, forget, bool(centre), self.dtype)
         self._gaps = Gaps(self._inner, count, self.dtype)
-        self._block = np.zeros((int(block), count), self.dtype)
+        self._block = np.zeros((block, count), self.dtype)
         self._header = np.zeros(kernels.HEADER, np.int64)
         self._header[kernels.CENTRED] = bool(centre)
         self._work = (np.zeros(count, self.dtype), np.zeros(self._most, self.dtype))
+        self._growing = growing
         self._lock = threading.Lock()
         self._shape = (count,)
         self._settle()
@@ -150,7 +150,7 @@ class PrincipalBasis:
 
     @property
     def block(self) -> int:
-        """Samples folded in at a time."""
+        """Most samples folded in at a time."""
         return len(self._block)
 
     @property
@@ -256,7 +256,7 @@ class PrincipalBasis:
                         "cannot be taken about a mean; the sample was not taken"
                     )
                 return self._take(checked[None], fold=True)[0]
-            if self._header[kernels.FILL] == len(self._block):
+            if self._header[kernels.FILL] == self._header[kernels.DUE]:
                 self._fold()
             return Score(number, norm, residual, spe, t2, rank)
 
@@ -324,7 +324,8 @@ class PrincipalBasis:
         )
         start = 0
         while start < m:
-            room = len(self._block) - int(self._header[kernels.FILL]) if fold else len(self._block)
+            room = int(self._header[kernels.DUE] - self._header[kernels.FILL])
+            room = room if fold else len(self._block)
             rows = slice(start, min(start + room, m))
             piece = entered[rows]
             out.rank[rows] = self.rank
@@ -342,13 +343,14 @@ class PrincipalBasis:
 
     def _append(self, piece: NDArray[Any], coordinates: NDArray[Any] | None) -> None:
         """Put rows into the block, which has room for them, and fold it when it is full."""
-        if len(piece) == len(self._block):
+        due = int(self._header[kernels.DUE])
+        if len(piece) == due:
             self._fold(piece, coordinates)
             return
         fill = int(self._header[kernels.FILL])
         self._block[fill : fill + len(piece)] = piece
         self._header[kernels.FILL] = fill + len(piece)
-        if fill + len(piece) == len(self._block):
+        if fill + len(piece) == due:
             self._fold()
 
     def _score(self, piece: NDArray[Any], out: Scores, rows: slice) -> NDArray[Any] | None:
@@ -411,11 +413,15 @@ class PrincipalBasis:
         if rows is None:
             rows = self._block[: int(self._header[kernels.FILL])]
         self._core.fold(rows, coordinates)
+        self._header[kernels.FOLDED] += len(rows)
         self._header[kernels.FILL] = 0
         self._settle()
 
     def _settle(self) -> None:
-        """Apply the rank rule to the spectrum as it stands."""
+        """Apply the rank rule to the spectrum as it stands, and say when the next fold is due."""
+        folded = int(self._header[kernels.FOLDED])
+        due = min(len(self._block), max(FIRST_BLOCK, folded)) if self._growing else len(self._block)
+        self._header[kernels.DUE] = due
         spectrum = self._core.spectrum()
         if isinstance(self._rule, int):
             rank = min(self._rule, len(spectrum.energies))
@@ -491,8 +497,10 @@ class PrincipalBasis:
                 "max_rank": self._most,
                 "forget": core.forget,
                 "block": len(self._block),
+                "growing": self._growing,
                 "centre": core.centred,
                 "count": self.count,
+                "folded": int(self._header[kernels.FOLDED]),
             }
             arrays = {"block": owned(self._block[: int(self._header[kernels.FILL])])}
             if self._inner.given is not None:
@@ -518,6 +526,8 @@ class PrincipalBasis:
         basis._block[: len(waiting)] = waiting
         basis._header[kernels.FILL] = len(waiting)
         basis._header[kernels.COUNT] = facts["count"]
+        basis._header[kernels.FOLDED] = facts["folded"]
+        basis._growing = facts["growing"]
         basis._settle()
         return basis
 
@@ -549,3 +559,24 @@ def _checked_forgetting(forget: float, half_life: float | None) -> float:
     if not 0.0 < forget <= 1.0:
         raise SettingError(f"forget={forget}: a factor above 0 and at most 1")
     return float(forget)
+
+
+def _checked_block(block: Any) -> int:
+    """Return the number of samples folded at a time."""
+    if not isinstance(block, int | np.integer) or isinstance(block, bool) or block < 1:
+        raise SettingError(f"block={block!r}: a whole number of samples, at least 1")
+    return int(block)
+
+
+def _default_block(count: int, limit: int, forget: float) -> int:
+    """Return the block that costs least per sample, as far as the memory allows."""
+    if limit == count:
+        # the core stays as it is however many samples are folded
+        block = min(max(8 * count, LEAST_BLOCK), WHOLE_BLOCK)
+    else:
+        # the core grows with the block: it costs least per sample near the directions held
+        block = min(max(limit, LEAST_BLOCK), LARGEST_BLOCK)
+    if forget < 1.0:
+        # a basis that lags by more than an eighth of its memory forgets out of step
+        block = min(block, max(1, int(0.125 / (1.0 - forget))))
+    return block

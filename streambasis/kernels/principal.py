@@ -11,10 +11,9 @@ from streambasis.kernels._jit import kernel
 from streambasis.kernels.growth import CRITERION, mgs_pass, norm, orthogonalize, scaled_copy
 
 # entries of the integer header
-COUNT, RANK, FILL, EXPONENT, CENTRED = range(5)
-HEADER = 5
-# statuses: a sample that was scored, the position of a bad value, rows beyond the safe range
-SCORED = 0
+COUNT, RANK, FILL, DUE, FOLDED, EXPONENT, CENTRED = range(7)
+HEADER = 7
+# whether the squares of rows stay in range
 USUAL, UNUSUAL = 0, 1
 
 
@@ -65,7 +64,7 @@ def push_principal(sample, mean, directions, spreads, header, residual, coeffici
     """Score one sample, put it into the block and count it.
 
     Returns ``(sample number, norm, residual, spe, t2, rank, position)``; with a position that is
-    not negative nothing was changed. The caller folds a block that is full.
+    not negative nothing was changed. The caller folds the block when it holds ``header[DUE]``.
     """
     length, left, spe, t2, position = score_sample(
         sample, mean, directions, spreads, header, residual, coefficients
@@ -147,3 +146,16 @@ def orthonormal_rows(rows, floors, stack, held, coordinates, factor, residual, c
             factor[i, added] = left
             added += 1
     return added
+
+
+@kernel()
+def subtract_identity(gram):
+    """Subtract the identity from a Gram matrix in place and return the 1-norm of what is left."""
+    largest = 0.0
+    for i in range(gram.shape[0]):
+        gram[i, i] -= 1
+        total = 0.0
+        for j in range(gram.shape[1]):
+            total += abs(gram[i, j])
+        largest = max(largest, total)
+    return largest
