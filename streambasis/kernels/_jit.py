@@ -16,6 +16,10 @@ check for NaN is compiled away."""
 def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
     """Return a decorator that compiles a kernel at its first call and caches the result.
 
+    Kernels are compiled without numba's memory manager (its option ``_nrt``): one that allocates
+    does not compile, and taking a row of an array costs no atomic reference count, which was
+    measured at half the time of a push at 64 channels.
+
     Parameters
     ----------
     reassociate : bool
@@ -24,6 +28,8 @@ def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
     flags = set(REASSOCIATE) if reassociate else False
 
     def decorate(function: Callable[..., Any]) -> Any:
-        return numba.njit(cache=True, nogil=True, fastmath=flags, error_model="numpy")(function)
+        return numba.njit(
+            cache=True, nogil=True, fastmath=flags, error_model="numpy", _nrt=False
+        )(function)
 
     return decorate
