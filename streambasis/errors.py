@@ -63,3 +63,7 @@ class SnapshotMissingError(SnapshotFileError, FileNotFoundError):
 
 class FeedError(StreambasisError, ValueError):
     """A feed that cannot be read; the message names the file, the column or the row."""
+
+
+class HomeError(StreambasisError, OSError):
+    """The folder that keeps a run cannot be used; the message names it and the way out."""

@@ -20,15 +20,15 @@ LAYERS = [
     {"feeds"},
     {"monitor"},
     {"watch", "report", "fleet"},
-    {"cli", "__main__"},
+    {"commands", "cli", "__main__"},
 ]  # fmt: skip
 CORE_THIRD_PARTY = {"numpy", "numba", "pyarrow"}
 EXTRAS = {
     "feeds": {"paho"},
-    "watch": {"click", "rich", "prometheus_client", "paho"},
+    "watch": {"rich", "prometheus_client", "paho"},
     "report": {"matplotlib"},
     "fleet": {"pyspark", "pandas"},
-    "cli": {"click", "rich"},
+    "commands": {"click"},
 }
 FILES = sorted(PACKAGE.rglob("*.py"))
 

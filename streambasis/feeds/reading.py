@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from streambasis.errors import FeedError
 from streambasis.feeds.columns import Columns, times_of, values_of
 
-BATCH_ROWS = 4096
+BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
 blocks, so that the same samples give bit-identical results from every file."""
 

@@ -1,0 +1,209 @@
+"""The commands behind :mod:`streambasis.cli`, as click describes them.
+
+Each one imports what it needs when it runs: the help needs click alone.
+"""
+
+from __future__ import annotations
+
+import csv
+import io
+import sys
+import traceback
+from collections.abc import Sequence
+from pathlib import Path
+
+import click
+
+from streambasis._version import __version__
+from streambasis.cli import (
+    BUG,
+    CAUTION,
+    EXIT_CODES,
+    EXTRA,
+    FEED,
+    OK,
+    OUTPUT,
+    SUMMARIES,
+    USAGE,
+)
+from streambasis.errors import (
+    FeedError,
+    HomeError,
+    SampleError,
+    SettingError,
+    StreambasisError,
+)
+
+_CODES = "\b\nExit codes:\n" + "\n".join(f"  {code:<4} {what}" for code, what in EXIT_CODES)
+_debug = click.option(
+    "--debug", is_flag=True, expose_value=False, help="Show a traceback with an error."
+)
+_SETTINGS = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
+
+
+@click.group(
+    context_settings=_SETTINGS,
+    help="Know what a multi-channel feed has shown before, and see at once what is new.",
+    epilog=f"{CAUTION}\n\nExample: streambasis watch feed.csv\n\n{_CODES}",
+)
+@_debug
+@click.version_option(__version__, message="streambasis %(version)s")
+def streambasis() -> None:
+    """Hold the commands together."""
+
+
+@streambasis.command(
+    "watch",
+    short_help=SUMMARIES["watch"],
+    help="""Watch the feed in FILE (CSV, Parquet or Arrow IPC) and report each event: a stretch
+    whose samples are not explained by what the feed has shown before, with its time, its strength
+    relative to the control limit, the channels that carry it, and the earlier event it repeats.
+
+    The first samples are the baseline: ordinary running, from which scales, limits and the first
+    basis are taken. Every later sample within its limit refines them.""",
+    epilog=f"""\b
+Example:
+  streambasis watch examples/pump_station.csv --home run1
+  streambasis watch feed.parquet --channels speed,flow --channels temp --json | jq .channels
+
+\b
+In the folder of --home:
+  decisions/    Arrow IPC files, one row per sample: sample, time, spe, t2, limit, t2_limit,
+                novel, extreme, rank, event
+  events.jsonl  one JSON object per event: event, start, end, start_time, end_time, peak,
+                channels, contributions, repeats, cosine, label
+
+{_CODES}
+
+{CAUTION}""",
+)
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option(
+    "--channels",
+    multiple=True,
+    metavar="NAMES",
+    help="Columns to watch, separated by commas; may be given again. Default: all but the time.",
+)
+@click.option(
+    "--time",
+    metavar="COLUMN",
+    help="The time column. Default: found by itself where there is one obvious candidate.",
+)
+@click.option(
+    "--baseline",
+    type=click.IntRange(min=1),
+    default=2000,
+    show_default=True,
+    metavar="N",
+    help="Samples of ordinary running at the start.",
+)
+@click.option(
+    "--false-alarm",
+    type=float,
+    default=1e-4,
+    show_default=True,
+    metavar="P",
+    help="Probability that an ordinary sample is beyond its limit.",
+)
+@click.option(
+    "--half-life",
+    type=float,
+    metavar="N",
+    help="Samples after which the basis has forgotten half of what it saw.",
+)
+@click.option(
+    "--adopt-after",
+    type=click.IntRange(min=0),
+    default=1000,
+    show_default=True,
+    metavar="N",
+    help="An event still open after N samples is adopted as known behaviour; 0 never adopts.",
+)
+@click.option(
+    "--home",
+    type=click.Path(path_type=Path, file_okay=False),
+    metavar="DIR",
+    help="Keep decisions and events in this folder.",
+)
+@click.option("--json", "as_json", is_flag=True, help="Events as JSON lines on standard output.")
+@click.option("--quiet", is_flag=True, help="Show nothing made for reading, errors excepted.")
+@_debug
+def watch(
+    file: Path,
+    channels: tuple[str, ...],
+    time: str | None,
+    baseline: int,
+    false_alarm: float,
+    half_life: float | None,
+    adopt_after: int,
+    home: Path | None,
+    as_json: bool,
+    quiet: bool,
+) -> None:
+    """Run a monitor over a file."""
+    from streambasis.feeds import open_feed
+    from streambasis.monitor import NoveltyMonitor
+    from streambasis.watch.home import Home
+    from streambasis.watch.loop import Run
+    from streambasis.watch.stopping import asked_to_stop
+    from streambasis.watch.terminal import Terminal
+
+    feed = open_feed(file, channels=_names(channels), time=time)
+    monitor = NoveltyMonitor(
+        feed.columns.channels, baseline=baseline, false_alarm=false_alarm, half_life=half_life
+    )
+    kept = Home(home) if home is not None else None
+    shown = Terminal(sys.stdout, sys.stderr, total=feed.rows, as_json=as_json, quiet=quiet)
+    with asked_to_stop() as asked, shown as terminal:
+        try:
+            summary = Run(feed, monitor, terminal, home=kept, adopt_after=adopt_after)(asked)
+        finally:
+            if kept is not None:
+                kept.close()
+    shown.summary(summary)
+
+
+def _names(given: Sequence[str]) -> list[str] | None:
+    """Return the names in lists separated by commas; a name with a comma stands in quotes."""
+    if not given:
+        return None
+    rows = csv.reader(io.StringIO("\n".join(given)), skipinitialspace=True)
+    return [name.strip() for row in rows for name in row]
+
+
+def run(arguments: Sequence[str]) -> int:
+    """Run a command line and return its exit code; an error is one line on standard error."""
+    try:
+        with streambasis.make_context("streambasis", list(arguments)) as context:
+            streambasis.invoke(context)
+    except click.exceptions.Exit as stop:
+        return stop.exit_code
+    except click.ClickException as error:
+        error.show()
+        return USAGE
+    except (KeyboardInterrupt, click.Abort):
+        click.echo("streambasis: interrupted", err=True)
+        return OK
+    except BrokenPipeError:
+        raise
+    except ModuleNotFoundError as error:
+        return _failed(error, f"{error}: pip install 'streambasis[watch]'", EXTRA, arguments)
+    except (FeedError, SampleError) as error:
+        return _failed(error, str(error), FEED, arguments)
+    except SettingError as error:
+        return _failed(error, str(error), USAGE, arguments)
+    except HomeError as error:
+        return _failed(error, str(error), OUTPUT, arguments)
+    except StreambasisError as error:
+        return _failed(error, str(error), BUG, arguments)
+    except Exception as error:
+        text = f"an error inside streambasis ({type(error).__name__}: {error}); see --debug"
+        return _failed(error, text, BUG, arguments)
+    return OK
+
+
+def _failed(error: Exception, text: str, code: int, arguments: Sequence[str]) -> int:
+    if "--debug" in arguments:
+        traceback.print_exception(error)
+    click.echo(f"streambasis: {text}", err=True)
+    return code

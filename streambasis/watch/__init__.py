@@ -1,0 +1,1 @@
+"""The daemon: a monitor run over a feed, its results kept and shown."""

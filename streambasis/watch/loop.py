@@ -1,0 +1,203 @@
+"""The run itself: samples in, decisions and events out."""
+
+from __future__ import annotations
+
+import threading
+import time
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from streambasis.errors import FeedError
+from streambasis.feeds import Batch, Feed
+from streambasis.monitor import Event, NoveltyMonitor
+from streambasis.watch.home import Home
+
+
+class Reporter(Protocol):
+    """Whoever wants to hear how a run goes."""
+
+    def opened(self, event: Event) -> None:
+        """Hear that an event has opened."""
+
+    def closed(self, event: Event) -> None:
+        """Hear that an event has closed."""
+
+    def adopted(self, event: Event) -> None:
+        """Hear that an event lasted so long that it counts as known behaviour from now on."""
+
+    def advance(self, samples: int) -> None:
+        """Hear how many samples have been read."""
+
+
+@dataclass(frozen=True, slots=True)
+class Summary:
+    """What a run came to.
+
+    Attributes
+    ----------
+    samples : int
+        Samples read.
+    first_time, last_time : int or None
+        Their first and last time in nanoseconds, where the feed has times.
+    rank : int
+        Directions of the basis at the end.
+    noise : float
+        Variance per residual dimension, in units of each channel's own noise.
+    drift : float
+        Largest principal angle between the baseline's subspace and today's, in radians.
+    events, repeats, adopted : int
+        Events, those that repeat an earlier one, and those adopted as known behaviour.
+    seconds : float
+        Time taken.
+    orthogonality : float
+        Orthogonality defect of the basis, |VVᴴ - I|₁ / (n·u); the contract is below 3.
+    """
+
+    samples: int
+    first_time: int | None
+    last_time: int | None
+    rank: int
+    noise: float
+    drift: float
+    events: int
+    repeats: int
+    adopted: int
+    seconds: float
+    orthogonality: float
+
+
+class Run:
+    """One pass of a monitor over a feed.
+
+    Parameters
+    ----------
+    feed : Feed
+        Where samples come from.
+    monitor : NoveltyMonitor
+        Made for the feed's channels; it may have seen samples before.
+    reporter : Reporter
+        Told of every event as it opens and closes.
+    home : Home, optional
+        Where decisions and closed events are kept.
+    adopt_after : int
+        An event still open after so many samples is adopted as known behaviour: a change that
+        lasts is another way of running, and what happens on top of it must be seen as its own.
+        0 never adopts.
+    """
+
+    def __init__(
+        self,
+        feed: Feed,
+        monitor: NoveltyMonitor,
+        reporter: Reporter,
+        *,
+        home: Home | None = None,
+        adopt_after: int,
+    ) -> None:
+        self._feed = feed
+        self._monitor = monitor
+        self._reporter = reporter
+        self._home = home
+        self._adopt_after = adopt_after
+        self._opened = self._closed = self._repeats = self._adopted = 0
+
+    def __call__(self, asked: threading.Event) -> Summary:
+        """Read the feed to its end, or until asked to stop.
+
+        Parameters
+        ----------
+        asked : threading.Event
+            Set by whoever wants the run to stop at the next batch.
+
+        Raises
+        ------
+        FeedError
+            If the feed cannot be read, or is shorter than the baseline.
+        """
+        first_time = last_time = None
+        samples = 0
+        start = time.perf_counter()
+        for batch in self._feed.batches():
+            if batch.times is not None:
+                first_time = int(batch.times[0]) if first_time is None else first_time
+                last_time = int(batch.times[-1])
+            self._take(batch)
+            samples += len(batch)
+            self._reporter.advance(samples)
+            if asked.is_set():
+                break
+        monitor = self._monitor
+        if not monitor.baseline_done and not asked.is_set():
+            raise FeedError(
+                f"{self._feed.name}: {samples} samples, fewer than the baseline of "
+                f"{monitor.baseline}; lower --baseline or give a longer feed"
+            )
+        monitor.finish()
+        self._tell()
+        return Summary(
+            samples,
+            first_time,
+            last_time,
+            monitor.rank,
+            monitor.noise,
+            monitor.drift,
+            self._closed,
+            self._repeats,
+            self._adopted,
+            time.perf_counter() - start,
+            monitor.basis.audit().orthogonality,
+        )
+
+    def _take(self, batch: Batch) -> None:
+        """Push a batch, cut where an open event is due to be adopted."""
+        done = 0
+        while done < len(batch):
+            due = self._adoption_due()
+            until = len(batch) if due is None else min(max(due - batch.first, done), len(batch))
+            if until > done:
+                self._push(batch.values[done:until], batch.times, done)
+                done = until
+            self._adopt(batch.first + done)
+
+    def _push(
+        self, values: NDArray[np.float64], times: NDArray[np.int64] | None, first: int
+    ) -> None:
+        at = None if times is None else times[first : first + len(values)].view("datetime64[ns]")
+        decisions = self._monitor.push_many(values, at=at)
+        if self._home is not None:
+            self._home.take(decisions)
+        self._tell()
+
+    def _open_events(self) -> list[Event]:
+        return [event for event in self._monitor.events if event.open]
+
+    def _adoption_due(self) -> int | None:
+        """Return the number of samples after which the first open event is adopted, if any is."""
+        starts = [int(event["start"]) for event in self._open_events()]
+        return min(starts) + self._adopt_after if starts and self._adopt_after else None
+
+    def _adopt(self, samples: int) -> None:
+        if not self._adopt_after:
+            return
+        for event in self._open_events():
+            if samples >= event["start"] + self._adopt_after:
+                self._monitor.adopt(event["event"])
+                self._adopted += 1
+                self._reporter.adopted(event)
+        self._tell()
+
+    def _tell(self) -> None:
+        """Report the events that have opened or closed since the last call."""
+        for event in self._monitor.events:
+            if event["event"] >= self._opened:
+                self._opened = event["event"] + 1
+                self._reporter.opened(event)
+            if event["event"] >= self._closed and not event.open:
+                self._closed = event["event"] + 1
+                self._repeats += event["repeats"] is not None
+                if self._home is not None:
+                    self._home.take_event(event)
+                self._reporter.closed(event)

@@ -1,0 +1,85 @@
+"""README: its code runs, its commands are the real ones, its shown output is what comes out."""
+
+from __future__ import annotations
+
+import json
+import re
+import shlex
+import subprocess
+import sys
+import tomllib
+from pathlib import Path
+
+import pytest
+
+from streambasis import cli
+from streambasis.cli import CAUTION
+
+ROOT = Path(__file__).parent.parent
+README = (ROOT / "README.md").read_text()
+BLOCKS = re.findall(r"^```(\w+)\n(.*?)^```$", README, re.MULTILINE | re.DOTALL)
+
+
+def blocks(language: str) -> list[str]:
+    """Return the fenced blocks of one language."""
+    return [body for name, body in BLOCKS if name == language]
+
+
+@pytest.mark.parametrize("code", blocks("python"))
+def test_python_blocks_run(code: str, tmp_path: Path) -> None:
+    """Every Python block runs on its own, as a reader would paste it, from the clone."""
+    (tmp_path / "examples").symlink_to(ROOT / "examples")
+    shown = subprocess.run(
+        [sys.executable, "-W", "error", "-c", code],
+        capture_output=True, text=True, check=False, cwd=tmp_path, env={"PYTHONPATH": str(ROOT)},
+    )  # fmt: skip
+    assert shown.returncode == 0, shown.stderr
+
+
+def test_the_two_first_commands_are_there_verbatim() -> None:
+    """The command that sets up and runs the main job, and the one that runs the tests."""
+    lines = [line for block in blocks("console") for line in block.splitlines()]
+    assert lines[:2] == [
+        "python3 -m venv .venv && .venv/bin/pip install -q '.[watch]' && "
+        ".venv/bin/streambasis watch examples/pump_station.csv",
+        "python3 -m venv .venv && .venv/bin/pip install -q -e '.[test]' && .venv/bin/pytest",
+    ]
+
+
+def test_console_commands_parse(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    """Every streambasis command shown runs on the shipped feed and ends well."""
+    lines = [line for block in blocks("console") for line in block.splitlines()]
+    commands = [line.rpartition("&& ")[2] for line in lines if "streambasis " in line]
+    assert commands
+    (tmp_path / "examples").symlink_to(ROOT / "examples")
+    monkeypatch.chdir(tmp_path)
+    for command in commands:
+        words = shlex.split(command.partition(" | ")[0])
+        assert words[0].rpartition("/")[2] == "streambasis"
+        assert cli.main(words[1:]) == cli.OK, command
+
+
+def test_the_shown_output_is_what_comes_out(capsys: pytest.CaptureFixture[str]) -> None:
+    """The output in README is that of the first command: the same lines, figures aside."""
+    assert cli.main(["watch", str(ROOT / "examples" / "pump_station.csv")]) == cli.OK
+    figure = re.compile(r"\d[\d.,]*")
+    expected = figure.sub("#", blocks("text")[0].strip())
+    assert expected == figure.sub("#", capsys.readouterr().out.strip())
+
+
+def test_caution_is_the_one_of_the_command() -> None:
+    """README and help say the same of what the product is not."""
+    assert CAUTION in README.replace("**", "")
+
+
+def test_extras_and_event_keys_are_documented() -> None:
+    """Every extra that a user may install, and every key of an event, is explained."""
+    extras = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]
+    for extra in extras["optional-dependencies"]:
+        if extra != "dev":
+            assert f"[{extra}]" in README, extra
+    truth = json.loads((ROOT / "examples" / "pump_station.truth.json").read_text())
+    assert truth["faults"]
+    for key in ("start", "end", "start_time", "end_time", "peak", "channels", "contributions",
+                "repeats", "cosine", "label"):  # fmt: skip
+        assert f"`{key}`" in README, key
