@@ -357,10 +357,10 @@ class Subspace:
         directions = state.take("vectors", dtype, (None, count))
         if len(directions) > self.limit:
             raise SnapshotError(f"{len(directions)} directions where at most {self.limit} are held")
-        singular = state.take("singular", np.float64, (len(directions),))
+        singular = state.take("singular", np.float64, (len(directions),), finite=True)
         state.take("energies", np.float64, singular.shape)
-        mean = state.take("mean", dtype, (count,))
-        sums = state.take("sums", np.float64, (4,))
+        mean = state.take("mean", dtype, (count,), finite=True)
+        sums = state.take("sums", np.float64, (4,), finite=True)
         self.exponent, self.renewals = int(state.facts["exponent"]), int(state.facts["renewals"])
         self.held = len(directions)
         self.stack[: self.held] = directions

@@ -140,7 +140,7 @@ class Growth:
         factor = state.take("factor", dtype, (k, k))
         pivots = state.take("pivots", np.int64, (k,))
         exponents = state.take("exponents", np.int64, (k,))
-        reals = state.take("reals", np.float64, self.reals.shape)
+        reals = state.take("reals", np.float64, self.reals.shape, finite=True)
         if not k <= header[kernels.CAPACITY] <= channels or not k <= header[kernels.COUNT]:
             raise SnapshotError(
                 f"{k} directions of {header[kernels.COUNT]} samples on {channels} channels, where "

@@ -517,7 +517,7 @@ class PrincipalBasis:
         }
         basis = cls(names if facts["named"] else len(names), inner=inner_of(state), **settings)
         basis._core.set_state(state.parts["core"])
-        waiting = state.take("block", basis.dtype, (None, len(names)))
+        waiting = state.take("block", basis.dtype, (None, len(names)), finite=True)
         if not len(waiting) < len(basis._block) or not len(waiting) <= facts["count"]:
             raise SnapshotError(
                 f"{len(waiting)} of {facts['count']} samples wait for a block of "

@@ -7,7 +7,6 @@ What the file looks like is written in :mod:`streambasis.layout`, how it proves 
 from __future__ import annotations
 
 import errno
-import hashlib
 import importlib
 import io
 import mmap
@@ -24,7 +23,7 @@ from streambasis.audit import LEAST_DIMENSION, ORTHOGONALITY_LIMIT, orthogonalit
 from streambasis.errors import SnapshotError, SnapshotFileError, SnapshotMissingError
 from streambasis.files import OWNER_ONLY, remove_leftovers, replace_file, write_all
 from streambasis.layout import read_arrow, write_arrow
-from streambasis.seal import Flaw, check_digest, find_seal, read_seal, regions
+from streambasis.seal import Digest, Flaw, check_digest, find_seal, read_seal, regions
 from streambasis.state import State, Stateful
 
 KINDS = ("StreamBasis", "PrincipalBasis", "NoveltyMonitor")
@@ -37,8 +36,9 @@ EXACT_CHECK = 1 << 27
 """Up to this many products the directions are checked one against the other."""
 
 PROBES = 4
-CHUNK = 1 << 20
 
+# what building an object from facts and arrays that contradict each other may run into
+_MISFIT = (LookupError, TypeError, ValueError, AttributeError, ArithmeticError, MemoryError)
 _cleaned: set[str] = set()
 _cleaning = threading.Lock()
 
@@ -82,14 +82,19 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
     state = _state_of(obj)
 
     def write(descriptor: int) -> None:
-        sink = _Sink(lambda data: write_all(descriptor, data))
-        write_arrow(state, sink)
-        head, tail = os.pread(descriptor, 16, 0), os.pread(descriptor, 10, sink.size - 10)
-        places = regions(head, tail, sink.size)
-        schema, footer = (os.pread(descriptor, p.stop - p.start, p.start) for p in places)
-        seal = find_seal(schema, footer, places)
-        for position in (seal.first, seal.second):
-            os.pwrite(descriptor, sink.digest, position)
+        with Digest() as digest:
+            sink = _Sink(digest, lambda data: write_all(descriptor, data))
+            write_arrow(state, sink)
+            head, tail = os.pread(descriptor, 16, 0), os.pread(descriptor, 10, sink.size - 10)
+            places = regions(head, tail, sink.size)
+            schema, footer = (os.pread(descriptor, p.stop - p.start, p.start) for p in places)
+            seal = find_seal(schema, footer, places)
+            if digest.at_work:
+                # the disk works while the processor still hashes
+                os.fsync(descriptor)
+            text = digest.text()
+            for position in (seal.first, seal.second):
+                os.pwrite(descriptor, text, position)
 
     try:
         _clean_once(path)
@@ -143,12 +148,13 @@ def to_bytes(obj: Stateful | State) -> bytes:
         If the object is none that can be saved.
     """
     memory = io.BytesIO()
-    sink = _Sink(memory.write)
-    write_arrow(_state_of(obj), sink)
-    with memory.getbuffer() as content:
-        seal = read_seal(content)
-        for position in (seal.first, seal.second):
-            content[position : position + 64] = sink.digest
+    with Digest() as digest:
+        write_arrow(_state_of(obj), _Sink(digest, memory.write))
+        text = digest.text()
+        with memory.getbuffer() as content:
+            seal = read_seal(content)
+            for position in (seal.first, seal.second):
+                content[position : position + 64] = text
     return memory.getvalue()
 
 
@@ -183,32 +189,23 @@ def state_from_bytes(data: bytes | bytearray | memoryview, *, verify: bool = Tru
 
 
 class _Sink:
-    """Passes on the bytes of a file in their order, and hashes them on the way."""
+    """Passes on the bytes of a file in their order, and hands them to the digest."""
 
-    def __init__(self, put: Callable[[memoryview], Any]) -> None:
-        self._put = put
-        self._hash = hashlib.sha256()
+    def __init__(self, digest: Digest, put: Callable[[memoryview], Any]) -> None:
+        self._digest, self._put = digest, put
         self.size = 0
         self.closed = False
 
     def write(self, data: Any) -> int:
         """Take the next bytes."""
         view = memoryview(data).cast("B")
-        # hashed and written while a chunk is in the processor's cache
-        for start in range(0, view.nbytes, CHUNK):
-            chunk = view[start : start + CHUNK]
-            self._hash.update(chunk)
-            self._put(chunk)
+        self._digest.update(view)
+        self._put(view)
         self.size += view.nbytes
         return view.nbytes
 
     def flush(self) -> None:
         """Do nothing: whoever owns the file forces it to the disk."""
-
-    @property
-    def digest(self) -> bytes:
-        """The digest of all that was written, as text."""
-        return self._hash.hexdigest().encode()
 
 
 def _state_of(obj: Stateful | State) -> State:
@@ -313,7 +310,7 @@ def _built(state: State, name: str) -> Any:
     kind = getattr(importlib.import_module("streambasis"), state.kind)
     try:
         return kind.from_state(state)
-    except (LookupError, TypeError, ValueError, AttributeError, ArithmeticError) as error:
+    except _MISFIT as error:
         raise SnapshotError(
             f"{name}: its parts do not make up a {state.kind} ({type(error).__name__}: {error})"
         ) from error

@@ -48,6 +48,8 @@ class State:
         name: str,
         dtype: DTypeLike | None = None,
         shape: tuple[int | None, ...] | None = None,
+        *,
+        finite: bool = False,
     ) -> NDArray[Any]:
         """Return an array that nobody else writes to: C-contiguous, writable, aligned.
 
@@ -59,11 +61,15 @@ class State:
             What its type must be.
         shape : tuple, optional
             What its shape must be; None for a length that may be any.
+        finite : bool
+            Whether infinities and NaN are refused. Directions are left to the check of snapshots,
+            which is spared where one has just written the file oneself.
 
         Raises
         ------
         SnapshotError
-            If there is no such array or it is of another type or shape.
+            If there is no such array, it is of another type or shape or, where that is asked for,
+            not finite.
 
         Notes
         -----
@@ -84,6 +90,8 @@ class State:
         ):
             expected = ", ".join("any" if length is None else str(length) for length in shape)
             raise SnapshotError(f"{name!r} of {self.kind} is {array.shape}, not ({expected})")
+        if finite and not np.isfinite(array).all():
+            raise SnapshotError(f"{name!r} of {self.kind} is not finite")
         flags = array.flags
         if self.given and flags.c_contiguous and flags.writeable and flags.aligned:
             return array
