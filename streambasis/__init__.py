@@ -13,6 +13,7 @@ from streambasis._version import __version__
 
 if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
+    from streambasis.compare import merge, principal_angles, subspace_distance
     from streambasis.errors import StreambasisError
     from streambasis.monitor import NoveltyMonitor
     from streambasis.principal import PrincipalBasis
@@ -25,7 +26,10 @@ _HOMES = {
     "StreambasisError": "streambasis.errors",
     "from_bytes": "streambasis.snapshot",
     "load": "streambasis.snapshot",
+    "merge": "streambasis.compare",
+    "principal_angles": "streambasis.compare",
     "save": "streambasis.snapshot",
+    "subspace_distance": "streambasis.compare",
     "to_bytes": "streambasis.snapshot",
 }
 
@@ -37,7 +41,10 @@ __all__ = [
     "__version__",
     "from_bytes",
     "load",
+    "merge",
+    "principal_angles",
     "save",
+    "subspace_distance",
     "to_bytes",
 ]
 

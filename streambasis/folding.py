@@ -223,6 +223,46 @@ class Subspace:
         self._refactor(math.sqrt(decay), coordinates, rest, squares * weights)
         self._forget_the_vanished()
 
+    def absorb(self, other: Subspace, folded: int) -> None:
+        """Add the scatter of a subspace whose ``folded`` samples followed those of this one.
+
+        Notes
+        -----
+        The rows diag(s)·U of the other, and the difference of the means times √(Wa·Wb/W), stand
+        for its samples.
+        """
+        if other.weight == 0.0:
+            return
+        decay = self.forget**folded
+        before, added = decay * self.weight, other.weight
+        total = before + added
+        self._set_exponent(max(self.exponent, other.exponent) if before else other.exponent)
+        down = other.exponent - self.exponent
+        singular = np.ldexp(other.singular, down)
+        rows = singular.astype(np.finfo(self.stack.dtype).dtype)[:, None] * other.directions
+        squares = singular**2
+        if self.centred:
+            means = [_times_power(part.mean, -self.exponent) for part in (self, other)]
+            lever = math.sqrt(before * added / total)
+            rows = np.concatenate([rows, (lever * (means[1] - means[0]))[None]])
+            level = sum(float(np.linalg.norm(mean)) ** 2 for mean in means)
+            squares = np.append(squares, lever**2 * level)
+            self.mean += (added / total) * (other.mean - self.mean)
+        self.weight = total
+        self.weight_squares = decay**2 * self.weight_squares + other.weight_squares
+        self.power = decay * self.power + math.ldexp(other.power, 2 * down)
+        self.outside = decay * self.outside + math.ldexp(other.outside, 2 * down)
+        self.renewals += other.renewals
+        usual = self.stack, self.coefficients
+        self.stack = np.zeros((self.limit + len(rows), rows.shape[1]), rows.dtype)
+        self.stack[: self.held] = usual[0][: self.held]
+        self.coefficients = np.zeros(len(self.stack), rows.dtype)
+        coordinates, rest = self.split(rows)
+        wide = np.complex128 if rows.dtype.kind == "c" else np.float64
+        self._refactor(math.sqrt(decay), coordinates.astype(wide), rest, squares)
+        usual[0][: self.held] = self.directions
+        self.stack, self.coefficients = usual
+
     def _fit_exponent(self, block: NDArray[Any], status: int) -> None:
         """Choose the unit so that neither the block nor the spectrum leaves the range."""
         top = float(self.singular[0]) if self.held else 0.0
@@ -232,6 +272,10 @@ class Subspace:
             largest = float(max(abs(block.real).max(), abs(block.imag).max()))
             levels = [level] if top else []
             wanted = max([*levels, math.frexp(largest)[1]] if largest else levels)
+        self._set_exponent(wanted)
+
+    def _set_exponent(self, wanted: int) -> None:
+        """Hold the spectrum in units of 2**wanted."""
         change = self.exponent - wanted
         if change:
             self.singular = np.ldexp(self.singular, change)

@@ -159,6 +159,11 @@ class PrincipalBasis:
         return self._core.forget
 
     @property
+    def centre(self) -> bool:
+        """Whether a running mean is kept."""
+        return self._core.centred
+
+    @property
     def max_rank(self) -> int:
         """Most directions reported."""
         return self._most
@@ -461,6 +466,25 @@ class PrincipalBasis:
             second = rest @ directions.conj().T
             coordinates = first + second
             return coordinates, mean + coordinates @ directions, rest - second @ directions
+
+    def followed_by(self, other: PrincipalBasis) -> PrincipalBasis:
+        """Return the basis of this part of a feed and the part that follows.
+
+        See :func:`streambasis.merge`, which also checks that both live in the same space.
+        """
+        first, second = (PrincipalBasis.from_state(part.to_state()) for part in (self, other))
+        for name in ("forget", "centre"):
+            mine, theirs = (getattr(basis, name) for basis in (first, second))
+            if mine != theirs:
+                raise SettingError(f"bases of different {name}: {mine} and {theirs}")
+        for part in (first, second):
+            part.flush()
+        folded = int(second._header[kernels.FOLDED])
+        first._core.absorb(second._core, folded)
+        first._header[kernels.COUNT] += second.count
+        first._header[kernels.FOLDED] += folded
+        first._settle()
+        return first
 
     def audit(self) -> Audit:
         """Measure the orthonormality of the directions.
