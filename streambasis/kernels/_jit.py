@@ -25,11 +25,15 @@ def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
     reassociate : bool
         Whether sums may be reordered, so that loops vectorize. Each use says why that is sound.
     """
-    flags = set(REASSOCIATE) if reassociate else False
+    options: dict[str, Any] = {
+        "cache": True,
+        "nogil": True,
+        "fastmath": set(REASSOCIATE) if reassociate else False,
+        "error_model": "numpy",
+        "_nrt": False,
+    }
 
     def decorate(function: Callable[..., Any]) -> Any:
-        return numba.njit(
-            cache=True, nogil=True, fastmath=flags, error_model="numpy", _nrt=False
-        )(function)
+        return numba.njit(**options)(function)
 
     return decorate
