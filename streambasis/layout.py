@@ -210,9 +210,11 @@ def encoded(value: Any, where: str) -> Any:
     TypeError
         If it is nothing that comes back exactly, such as a tuple or an array.
     """
+    if isinstance(value, np.bool_ | np.integer | np.floating):
+        value = value.item()
     if value is None or isinstance(value, bool | str):
         return value
-    if isinstance(value, int) and not isinstance(value, bool):
+    if isinstance(value, int):
         return int(value)
     if isinstance(value, float):
         return float(value) if math.isfinite(value) else {"$float": repr(float(value))}

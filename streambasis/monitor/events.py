@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.errors import SnapshotError
 from streambasis.state import State, owned
 
 COLLECT = 32
@@ -178,13 +179,13 @@ class OpenEvent:
     @classmethod
     def from_state(cls, state: State) -> OpenEvent:
         """Build an event that goes on where the state was taken."""
-        facts, rows = dict(state.facts), state.arrays["rows"]
+        facts, rows = dict(state.facts), state.take("rows", np.float64, (None, None))
         event = cls(facts.pop("number"), facts.pop("start"), facts["start_time"], rows.shape[1])
         for name, value in facts.items():
             setattr(event, name, value)
         event.rows[: len(rows)] = rows
         event.filled = len(rows)
-        event.directions = state.arrays["directions"]
+        event.directions = state.take("directions", np.float64, (None, rows.shape[1]))
         return event
 
 
@@ -204,6 +205,11 @@ class History:
         self.next = 0
         self.events: dict[int, Event] = {}
         self._directions = np.zeros((0, channels))
+
+    @property
+    def channels(self) -> int:
+        """Channels of the directions."""
+        return self._directions.shape[1]
 
     def put(self, event: Event) -> None:
         """Keep a closed event."""
@@ -242,13 +248,14 @@ class History:
     @classmethod
     def from_state(cls, state: State) -> History:
         """Build a history that goes on where the state was taken."""
-        directions = state.arrays["directions"]
+        directions = state.take("directions", np.float64, (None, None))
+        counts = state.take("counts", np.int64, (len(state.facts["events"]),))
+        if counts.min(initial=0) < 0 or counts.sum() != len(directions):
+            raise SnapshotError(f"{len(directions)} directions for events of {counts.sum()}")
         history = cls(directions.shape[1], state.facts["floor"])
         history.next = state.facts["next"]
-        ends = np.cumsum(state.arrays["counts"])
-        for fields, end, count in zip(
-            state.facts["events"], ends, state.arrays["counts"], strict=True
-        ):
+        ends = np.cumsum(counts)
+        for fields, end, count in zip(state.facts["events"], ends, counts, strict=True):
             event = Event(dict(fields), owned(directions[end - count : end]), open=False)
             history.events[event["event"]] = event
         if history.events:

@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.basis import StreamBasis
-from streambasis.errors import SettingError
+from streambasis.errors import SettingError, SnapshotError
 from streambasis.kernels.monitor import CLOSED, COLLECTED, NOTHING, OPENED, standardize, walk
 from streambasis.monitor.contributions import leading, shares
 from streambasis.monitor.events import COLLECT, Event, History, OpenEvent
@@ -537,9 +537,13 @@ class Judge:
     def from_state(cls, names: tuple[str, ...], settings: Settings, state: State) -> Judge:
         """Build a judge that goes on where the state was taken."""
         judge = cls.__new__(cls)
-        facts, arrays, parts = state.facts, state.arrays, state.parts
+        facts, parts, n = state.facts, state.parts, len(names)
         judge.scaling = Scaling(
-            arrays["centre"], arrays["scale"], facts["rank"], arrays["constant"], arrays["nearly"]
+            state.take("centre", np.float64, (n,), finite=True),
+            state.take("scale", np.float64, (n,), finite=True),
+            facts["rank"],
+            state.take("constant", np.bool_, (n,)),
+            state.take("nearly", np.bool_, (n,)),
         )
         judge._set_up(names, settings)
         judge.basis = PrincipalBasis.from_state(parts["basis"])
@@ -549,14 +553,39 @@ class Judge:
         judge.open = [OpenEvent.from_state(parts[f"event_{i}"]) for i in range(facts["open"])]
         judge.count, judge._fill = facts["count"], facts["fill"]
         judge._t2_value, judge._t2_count = facts["t2_limit"], facts["t2_count"]
+        held = settings.window + judge._fill
         for name in BUFFERED:
-            getattr(judge, f"_{name}")[: settings.window + judge._fill] = arrays[name]
+            rows = getattr(judge, f"_{name}")
+            rows[:held] = state.take(name, rows.dtype, (held, *rows.shape[1:]))
         for name in COUNTED:
-            getattr(judge, f"_{name}")[:] = arrays[name]
-        for name in ("adopted", "behaviour", "first_vectors", "vectors", "energies", "mean"):
-            setattr(judge, name, owned(arrays[name]))
+            held_by = getattr(judge, f"_{name}")
+            held_by[:] = state.take(name, held_by.dtype, held_by.shape)
+        judge.adopted = state.take("adopted", np.int64, (None,))
+        judge.behaviour = state.take("behaviour", np.float64, (len(judge.adopted), n))
+        judge.first_vectors = state.take("first_vectors", np.float64, (None, n))
+        judge.vectors = state.take("vectors", np.float64, (None, n))
+        judge.energies = state.take("energies", np.float64, (len(judge.vectors),))
+        judge.mean = state.take("mean", np.float64, (n,), finite=True)
+        judge._check()
         judge._project()
         return judge
+
+    def _check(self) -> None:
+        """Refuse a state whose parts are of other channels or whose counters cannot be."""
+        position, beyond, events, forming = self._counters.tolist()
+        if (
+            {self.names} != {self.basis.channels, self.known.channels}
+            or {event.rows.shape[1] for event in self.open} - {len(self.names)}
+            or self.history.channels != len(self.names)
+            or not (self.scaling.scale > 0).all()
+            or not 0 <= self._fill < self.settings.block
+            or not 0 <= position < self.settings.window
+            or beyond != self._ring.sum()
+            or events != len(self.open)
+            or not 0 <= forming <= min(events, 1)
+            or events > MOST_OPEN
+        ):
+            raise SnapshotError("the parts of a monitor do not fit each other")
 
 
 def iso(time: int) -> str | None:

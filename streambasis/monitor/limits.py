@@ -299,5 +299,6 @@ class SpeLimit:
         limit.value, limit.count = facts["value"], facts["count"]
         limit._threshold, limit._fitted = facts["threshold"], facts["fitted"]
         limit.mean, limit._squares = facts["mean"], facts["squares"]
-        limit._excesses, limit._roots = state.arrays["excesses"], state.arrays["roots"]
+        limit._excesses = state.take("excesses", np.float64, (None,), finite=True)
+        limit._roots = state.take("roots", np.float64, (None,), finite=True)
         return limit

@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from streambasis.basis import StreamBasis
-from streambasis.errors import SampleError, SettingError
+from streambasis.errors import SampleError, SettingError, SnapshotError
 from streambasis.monitor.events import Event
 from streambasis.monitor.judging import Judge, Settings
 from streambasis.monitor.learning import learn
@@ -312,27 +312,33 @@ class NoveltyMonitor:
                 "settings": asdict(self._settings),
                 "count": self._count,
             }
-            parts = {} if self._judge is None else {"judge": self._judge.to_state()}
+            parts = {} if self._judge is None else {"core": self._judge.to_state()}
             return State("NoveltyMonitor", facts, {"first": owned(self._first)}, parts)
 
     @classmethod
     def from_state(cls, state: State) -> Self:
         """Build a monitor that goes on where the state was taken."""
         facts = state.facts
-        names = facts["channels"]
+        names, settings = facts["channels"], Settings(**facts["settings"])
         monitor = cls(
             names if facts["named"] else len(names),
             baseline=facts["baseline"],
+            false_alarm=settings.false_alarm,
+            limits=settings.limits,
             rank=facts["rank"],
             max_rank=facts["max_rank"],
+            half_life=settings.half_life,
+            persistence=(settings.opens, settings.window),
+            quiet=settings.quiet,
+            same=settings.same,
         )
-        monitor._settings = Settings(**facts["settings"])
+        monitor._settings = settings
         monitor._count = facts["count"]
-        monitor._first = owned(state.arrays["first"])
-        if "judge" in state.parts:
-            monitor._judge = Judge.from_state(
-                monitor.channels, monitor._settings, state.parts["judge"]
-            )
+        monitor._first = state.take("first", np.float64, (None, len(names)))
+        if settings.block < 1 or len(monitor._first) >= monitor._baseline:
+            raise SnapshotError("the block or the baseline is of no possible length")
+        if "core" in state.parts:
+            monitor._judge = Judge.from_state(monitor.channels, settings, state.parts["core"])
         return monitor
 
     def _need(self) -> Judge:
