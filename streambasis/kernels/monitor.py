@@ -6,21 +6,20 @@ from streambasis.kernels._jit import kernel
 
 NOTHING, OPENED, COLLECTED, CLOSED = 0, 1, 2, 3
 
-REACH = 1e8
-"""A value further than this many noise standard deviations is scored as if it stood there: no
-answer depends on more, and no sum of squares can overflow."""
-
 
 @kernel(reassociate=True)
-def standardize(samples, centre, inverse, out):
-    """Write samples about their centre and in noise units to ``out``; NaN stays NaN."""
+def standardize(samples, centre, inverse, reach, out):
+    """Write samples about their centre and in noise units to ``out``; NaN stays NaN.
+
+    A value further than ``reach`` from the centre of its channel is put there.
+    """
     for i in range(samples.shape[0]):
         for j in range(samples.shape[1]):
             value = (samples[i, j] - centre[j]) * inverse[j]
-            if value > REACH:
-                value = REACH
-            elif value < -REACH:
-                value = -REACH
+            if value > reach[j]:
+                value = reach[j]
+            elif value < -reach[j]:
+                value = -reach[j]
             out[i, j] = value
 
 
@@ -30,7 +29,8 @@ def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe
 
     A row is never combined with another, so that its results do not depend on how the rows were
     cut into batches. Reordered sums change a result by a few roundings only, as the error bound of
-    a dot product allows.
+    a dot product allows. Directions are taken off four at a time: the row is read and written a
+    quarter as often.
 
     Parameters
     ----------
@@ -55,14 +55,32 @@ def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe
         for j in range(n):
             value = row[j] - mean[j]
             residual[j] = 0.0 if math.isnan(value) else value
-        for k in range(count):
-            direction = directions[k]
-            c = 0.0
+        for k in range(0, count - 3, 4):
+            a, b, c, d = 0.0, 0.0, 0.0, 0.0
             for j in range(n):
-                c += direction[j] * residual[j]
-            coordinates[i, k] = c
+                value = residual[j]
+                a += directions[k, j] * value
+                b += directions[k + 1, j] * value
+                c += directions[k + 2, j] * value
+                d += directions[k + 3, j] * value
             for j in range(n):
-                residual[j] -= c * direction[j]
+                residual[j] -= (
+                    a * directions[k, j]
+                    + b * directions[k + 1, j]
+                    + c * directions[k + 2, j]
+                    + d * directions[k + 3, j]
+                )
+            coordinates[i, k] = a
+            coordinates[i, k + 1] = b
+            coordinates[i, k + 2] = c
+            coordinates[i, k + 3] = d
+        for k in range(count - count % 4, count):
+            a = 0.0
+            for j in range(n):
+                a += directions[k, j] * residual[j]
+            for j in range(n):
+                residual[j] -= a * directions[k, j]
+            coordinates[i, k] = a
         left = 0.0
         for j in range(n):
             left += residual[j] * residual[j]

@@ -21,7 +21,7 @@ from streambasis.monitor.projection import NO_EVENT, Projection
 from streambasis.monitor.quantiles import chi2_quantile
 from streambasis.monitor.scaling import Scaling
 from streambasis.monitor.verdict import NO_TIME, Columns
-from streambasis.principal import PrincipalBasis
+from streambasis.principal import WHOLE, PrincipalBasis
 from streambasis.state import State, owned
 
 MOST_OPEN = 8
@@ -31,12 +31,20 @@ NEARLY = 0.01
 """An open event explains a sample within this squared sine of its directions, whatever the limit:
 its directions are known no better than that when it suddenly grows."""
 
-FOLLOW = 0.02
+FOLLOW = 0.1
 """Relative change in the number of samples behind the basis at which the T² limit follows."""
 
 MOST_PATTERNS = 16
 """Most patterns of missing channels whose directions are kept ready."""
 
+
+REACH = 1e8
+"""A value further than this many noise standard deviations is scored as if it stood there: no
+answer depends on more, and no sum of squares can overflow."""
+
+MOVED = 1.5
+"""SPE over its limit that any movement of a constant channel alone makes. Its noise is unknown, so
+that it moved is news, and how far says nothing."""
 
 BUFFERED = ("z", "spe", "ratio", "number", "time", "loose", "fold", "pool")
 COUNTED = ("ring", "counters", "last", "quiet", "taken")
@@ -127,6 +135,7 @@ class Judge:
             rank=max(self.scaling.rank, 1),
             centre=True,
             half_life=settings.half_life,
+            block=settings.block if n <= WHOLE else None,
             inner=weights,
         )
         self.limit = SpeLimit(settings.limits, settings.false_alarm, settings.memory)
@@ -139,6 +148,7 @@ class Judge:
         self._counters = np.zeros(4, np.int64)
         self._last, self._quiet, self._taken = (np.zeros(MOST_OPEN, np.int64) for _ in range(3))
         self._walk = np.array([settings.opens, settings.quiet, COLLECT, MOST_OPEN])
+        self._reach = np.full(n, REACH)
         rows = settings.window + settings.block
         self._fill = 0
         self._z = np.zeros((rows, n))
@@ -161,6 +171,7 @@ class Judge:
         self.vectors = np.ascontiguousarray(self.basis.vectors[: self.rank] * self.inverse)
         self.energies = self.basis.energies[: self.rank]
         self.mean = (self.basis.mean - self.scaling.centre) * self.inverse
+        self._reach[self.scaling.constant] = math.sqrt(MOVED * self.limit.value)
         count = self.basis.effective_count
         if abs(count - self._t2_count) > FOLLOW * self._t2_count:
             self._t2_value = t2_limit(self.rank, count, self.settings.false_alarm)
@@ -200,9 +211,7 @@ class Judge:
             start = self.settings.window + self._fill
             count = min(len(samples) - done, self.settings.block - self._fill)
             rows = slice(start, start + count)
-            standardize(
-                samples[done : done + count], self.scaling.centre, self.inverse, self._z[rows]
-            )
+            self._standardize(samples[done : done + count], self._z[rows])
             self._number[rows] = np.arange(self.count, self.count + count)
             self._time[rows] = columns.time[at + done : at + done + count]
             while start < rows.stop:
@@ -470,8 +479,11 @@ class Judge:
     def standard(self, samples: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return samples, (m, n), about their centre and in noise units."""
         z = np.empty_like(samples)
-        standardize(samples, self.scaling.centre, self.inverse, z)
+        self._standardize(samples, z)
         return z
+
+    def _standardize(self, samples: NDArray[np.float64], out: NDArray[np.float64]) -> None:
+        standardize(samples, self.scaling.centre, self.inverse, self._reach, out)
 
     def shares(self, samples: NDArray[np.float64]) -> NDArray[np.float64]:
         """Return each channel's share in the SPE of one sample in channel units, (1, n)."""
@@ -490,6 +502,7 @@ class Judge:
         if fold.any():
             z = self._z[:block][fold]
             self.basis.take_many(z * self.scaling.scale + self.scaling.centre)
+            self.basis.flush()
         self.limit.take(self._spe[:block][self._pool[:block]])
         for name in BUFFERED:
             array = getattr(self, f"_{name}")
@@ -567,6 +580,7 @@ class Judge:
         judge.energies = state.take("energies", np.float64, (len(judge.vectors),))
         judge.mean = state.take("mean", np.float64, (n,), finite=True)
         judge._check()
+        judge._reach[judge.scaling.constant] = math.sqrt(MOVED * judge.limit.value)
         judge._project()
         return judge
 

@@ -27,6 +27,9 @@ REACH = 10.0
 REFIT = 1.1
 """The tail is fitted again when the pool has grown by a tenth."""
 
+MOST_UNCERTAIN = 2.0
+"""Most variance of the logarithm of the rate that is allowed for."""
+
 
 def box_limit(mean: float, variance: float, false_alarm: float) -> float:
     """Return Box's limit, that of g·χ²_h with the mean and the variance given.
@@ -149,6 +152,17 @@ def pareto_fit(excesses: NDArray[np.float64]) -> tuple[float, float]:
     return 2.0 - mean / gap, 2.0 * mean * weighted / gap
 
 
+def _uncertainty(depth: float, excesses: int) -> float:
+    """Return the variance of the logarithm of the rate at which a fitted limit is exceeded.
+
+    From the asymptotic covariance of the two estimates (Hosking & Wallis 1987, section 3) at shape
+    zero, for a limit ``depth`` natural logarithms beyond the threshold. A rate that scatters
+    log-normally by this variance about the one requested is larger on average, by the exponential
+    of half of it: the limit is set for a rate that is so much smaller.
+    """
+    return max(0.0, (7.0 - 4.0 * depth + depth**2) * depth**2 / (3.0 * excesses))
+
+
 class SpeLimit:
     """The control limit of the squared prediction error, refined by what comes in.
 
@@ -248,10 +262,10 @@ class SpeLimit:
         elif self.method == "jackson-mudholkar":
             self.value = self._jackson_mudholkar()
         elif held >= 2:
-            part = held / self.count
             shape, scale = pareto_fit(self._excesses - self._threshold)
-            ratio = math.log(part / self.false_alarm)
-            beyond = ratio if abs(shape) < 1e-9 else math.expm1(shape * ratio) / shape
+            depth = math.log(held / self.count / self.false_alarm)
+            depth += 0.5 * min(_uncertainty(depth, held), MOST_UNCERTAIN)
+            beyond = depth if abs(shape) < 1e-9 else math.expm1(shape * depth) / shape
             self.value = self._threshold + scale * beyond
         else:
             self.value = self._box()

@@ -29,8 +29,13 @@ if TYPE_CHECKING:
 LEAST_BASELINE = 32
 """Fewer samples give no tail to fit a limit to."""
 
-BLOCK = 256
-"""Samples between two refinements: few enough to follow any half-life of 1,000 samples or more."""
+LARGEST_BLOCK = 2048
+BLOCK_VALUES = 2**18
+"""Samples between two refinements: as many as make the matrix products of a refinement cheap, as
+long as the block stays below these numbers of samples and of values."""
+
+LAG = 0.125
+"""Largest part of the half-life that a block may span, so that the basis does not lag behind."""
 
 FLOAT64 = np.dtype(np.float64)
 
@@ -118,7 +123,10 @@ class NoveltyMonitor:
             raise SettingError(f"same={same}: a cosine above 0 and up to 1")
         if half_life is not None and not 1.0 <= half_life < math.inf:
             raise SettingError(f"half_life={half_life}: at least one sample, or None")
-        block = BLOCK if half_life is None else int(min(BLOCK, max(window, half_life // 4)))
+        block = min(LARGEST_BLOCK, max(64, BLOCK_VALUES // n))
+        if half_life is not None:
+            block = min(block, int(LAG * half_life))
+        block = max(block, window)
         self._settings = Settings(
             float(false_alarm), limits, half_life, opens, window, quiet, float(same), block
         )

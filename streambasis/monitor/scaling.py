@@ -17,6 +17,10 @@ from numpy.typing import NDArray
 NORMAL_MAD = 1.482602218505602
 """Standard deviation of a normal variable over its median absolute deviation."""
 
+SEEN = 5.0
+"""The farthest a nearly constant channel went in the baseline counts as so many standard
+deviations: what it has done before is not news, though it does it seldom."""
+
 ROUNDING = 64.0 * float(np.finfo(np.float64).eps)
 """A spread below this part of the centre is the rounding of a constant."""
 
@@ -103,6 +107,7 @@ def fit_scaling(
     if moving.any():
         noise, found = noise_variances(deviations[:, moving] / spread[moving], rank, most)
         scale[moving] = spread[moving] * np.sqrt(noise)
+        scale[nearly] = np.maximum(scale[nearly], spread[nearly])
     scaling = Scaling(centre, scale, found if rank is None else rank, constant, nearly)
     deviations[:, ~moving] = 0.0
     deviations /= scale
@@ -126,7 +131,7 @@ def robust_start(
     constant = np.nanmax(away, axis=0) == 0.0
     nearly = (spread <= ROUNDING * np.abs(centre)) & ~constant
     if nearly.any():
-        spread[nearly] = np.nanstd(held[:, nearly], axis=0)
+        spread[nearly] = np.nanmax(away[:, nearly], axis=0) / SEEN
     spread[spread <= ROUNDING * np.abs(centre)] = 0.0
     return centre, spread, constant, nearly
 

@@ -98,24 +98,20 @@ class Columns:
         """Return the decision columns as an Arrow table; what is unknown is null."""
         import pyarrow as pa
 
-        def numbers(values: NDArray[Any]) -> pa.Array:
-            return pa.array(values, mask=np.isnan(values))
+        def column(values: NDArray[Any], unknown: NDArray[np.bool_]) -> pa.Array:
+            return pa.array(values, mask=unknown) if unknown.any() else pa.array(values)
 
+        unjudged = np.isnan(self.spe)
+        names = ("spe", "t2", "limit", "t2_limit")
+        numbers = {name: column(getattr(self, name), unjudged) for name in names}
         return pa.table(
             {
                 "sample": pa.array(self.sample),
-                "time": pa.array(
-                    self.time.view("datetime64[ns]"),
-                    pa.timestamp("ns"),
-                    mask=self.time == NO_TIME,
-                ),
-                "spe": numbers(self.spe),
-                "t2": numbers(self.t2),
-                "limit": numbers(self.limit),
-                "t2_limit": numbers(self.t2_limit),
+                "time": column(self.time.view("datetime64[ns]"), self.time == NO_TIME),
+                **numbers,
                 "novel": pa.array(self.novel),
                 "extreme": pa.array(self.extreme),
                 "rank": pa.array(self.rank),
-                "event": pa.array(self.event, mask=self.event == NO_EVENT),
+                "event": column(self.event, self.event == NO_EVENT),
             }
         )
