@@ -7,6 +7,7 @@ from collections.abc import Iterable
 from typing import Any, Self
 
 import numpy as np
+from numpy import ndarray
 from numpy.typing import ArrayLike, DTypeLike, NDArray
 
 from streambasis.audit import Audit, orthogonality
@@ -66,15 +67,16 @@ class StreamBasis:
     """
 
     __slots__ = (
-        "_arrays",
+        "_acquire",
         "_channels",
         "_core",
         "_dtype",
         "_inner",
-        "_kernel",
         "_lock",
         "_plain",
+        "_release",
         "_shape",
+        "_step",
     )
 
     def __init__(
@@ -119,12 +121,12 @@ class StreamBasis:
         self._lock = threading.Lock()
         self._dtype = kind
         self._shape = (count,)
+        self._acquire, self._release = self._lock.acquire, self._lock.release
         self._plain = self._inner.kind == "euclidean"
         self._bind()
 
     def _bind(self) -> None:
-        self._kernel = self._core.kernel
-        self._arrays = self._core.arrays
+        self._step = self._core.step
 
     @property
     def channels(self) -> tuple[str, ...]:
@@ -167,11 +169,13 @@ class StreamBasis:
 
     def push(self, sample: ArrayLike, at: Any = None) -> Decision:
         """Take one sample, shape (n,), and decide whether it adds a direction."""
-        with self._lock:
+        # a with statement costs 70 ns more than this, and a push of 16 channels 1 us in all
+        self._acquire()
+        try:
             if at is not None:
                 self._core.stamp(at)
             if not (
-                sample.__class__ is np.ndarray
+                sample.__class__ is ndarray
                 and sample.dtype is self._dtype
                 and sample.shape == self._shape
                 and sample.flags.carray
@@ -179,25 +183,27 @@ class StreamBasis:
             ):
                 sample = self._entered(sample)
             number, norm, residual, tolerance, grew, reason, rank, passes, expired, dropped = (
-                self._kernel(sample, *self._arrays)
+                self._step(sample)
             )
             if reason < 0:
                 return self._again(sample, reason)
-            return _new(
-                Decision,
-                (
-                    number,
-                    norm,
-                    residual,
-                    tolerance,
-                    grew,
-                    REASONS[reason],
-                    rank,
-                    passes,
-                    expired,
-                    dropped,
-                ),
-            )
+        finally:
+            self._release()
+        return _new(
+            Decision,
+            (
+                number,
+                norm,
+                residual,
+                tolerance,
+                grew,
+                REASONS[reason],
+                rank,
+                passes,
+                expired,
+                dropped,
+            ),
+        )
 
     def _entered(self, sample: ArrayLike) -> NDArray[Any]:
         checked = one_sample(sample, self._channels, self._dtype, number=self._core.count)
@@ -215,7 +221,7 @@ class StreamBasis:
             one_sample(sample, self._channels, self._dtype, number=self._core.count)
         self._core.make_room()
         self._bind()
-        record = self._kernel(sample, *self._arrays)
+        record = self._step(sample)
         return _new(Decision, (*record[:5], REASONS[record[5]], *record[6:]))
 
     def push_many(self, samples: Any, at: Any = None) -> Decisions:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -10,6 +11,8 @@ from numpy.typing import NDArray
 from streambasis.decisions import Decision, Decisions, reason_names
 from streambasis.errors import SnapshotError
 from streambasis.kernels import growth as kernels
+from streambasis.kernels._jit import entry
+from streambasis.memory import aligned_zeros
 from streambasis.state import State, owned
 
 FIRST_ROWS = 8
@@ -22,33 +25,53 @@ class Growth:
     -----
     A basis of rank k holds V (k, n) row by row and the lower triangular factor L (k, k) with
     ``pivot samples = L V``, each pivot sample scaled by its own power of two. Rows are allocated
-    as they are needed, at most doubling, never beyond the capacity and one: the row after the last
-    direction is where the next residual is computed, so that a growth copies nothing.
+    as they are needed, at most doubling, never beyond the capacity.
+
+    ``step(sample)`` is the kernel bound to the arrays, and is made anew whenever they are.
     """
 
-    __slots__ = ("arrays", "directions_held", "factor_held", "integers", "kernel", "reals")
+    __slots__ = (
+        "arrays",
+        "directions_held",
+        "factor_held",
+        "integers",
+        "reals",
+        "step",
+        "work",
+    )
 
     def __init__(
         self, count: int, capacity: int, rtol: float, atol: float, policy: int, dtype: np.dtype[Any]
     ) -> None:
-        self.kernel = kernels.push_growing
-        rows = min(FIRST_ROWS, capacity + 1)
-        self.directions_held = np.zeros((rows, count), dtype)
+        rows = min(FIRST_ROWS, capacity)
+        self.directions_held = aligned_zeros((rows, count), dtype)
         self.factor_held = np.zeros((rows, rows), dtype)
         self.integers = np.zeros(kernels.HEADER + 2 * rows, np.int64)
         self.integers[kernels.CAPACITY] = capacity
         self.integers[kernels.POLICY] = policy
-        self.reals = np.array([rtol, atol])
+        self.reals = np.array([rtol, atol, 0.0])
         self._bind()
 
     def _bind(self) -> None:
-        self.arrays = (self.directions_held, self.factor_held, self.integers, self.reals)
+        rows, count = self.directions_held.shape
+        dtype = self.directions_held.dtype
+        self.work = aligned_zeros(count + rows, dtype)
+        self.arrays = (
+            self.directions_held,
+            self.factor_held,
+            self.work,
+            self.integers,
+            self.reals,
+        )
+        compiled = entry(kernels.push_growing, *self.arrays, np.zeros(count, dtype))
+        self.step = partial(compiled, *self.arrays)
 
     def make_room(self) -> None:
         """Allocate more rows; everything held stays as it is."""
         rows = self.directions_held.shape[0]
-        more = min(2 * rows, int(self.integers[kernels.CAPACITY]) + 1)
-        directions = np.zeros((more, self.directions_held.shape[1]), self.directions_held.dtype)
+        more = min(2 * rows, int(self.integers[kernels.CAPACITY]))
+        count, dtype = self.directions_held.shape[1], self.directions_held.dtype
+        directions = aligned_zeros((more, count), dtype)
         directions[:rows] = self.directions_held
         factor = np.zeros((more, more), directions.dtype)
         factor[:rows, :rows] = self.factor_held
@@ -100,10 +123,10 @@ class Growth:
         """Take Euclidean samples that are known to be finite, (m, n), one after another."""
         records = []
         for sample in samples:
-            record = self.kernel(sample, *self.arrays)
-            while record[5] == kernels.NEEDS_ROOM:
+            record = self.step(sample)
+            if record[5] == kernels.NEEDS_ROOM:
                 self.make_room()
-                record = self.kernel(sample, *self.arrays)
+                record = self.step(sample)
             records.append(record)
         columns = list(zip(*records, strict=True)) or [()] * len(Decision._fields)
         kinds = [np.int64, float, float, float, bool, *[np.int64] * 5]
@@ -147,8 +170,8 @@ class Growth:
                 f"at most {header[kernels.CAPACITY]} are kept"
             )
         if k:
-            # without a spare row, so that the first push makes room: until then a large basis
-            # stays the page of the file that it was read from
+            # without a spare row: until it grows, a large basis stays the page of the file that
+            # it was read from
             self.directions_held, self.factor_held = vectors, factor
             self.integers = np.concatenate([header, pivots, exponents])
         else:

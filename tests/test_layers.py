@@ -14,7 +14,8 @@ PACKAGE = Path(__file__).parent.parent / "streambasis"
 # a module may import from its own layer and from those below it
 LAYERS = [
     {"kernels"},
-    {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "growth",
+    {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "memory",
+     "growth",
      "window", "basis", "ranks", "folding", "gaps", "principal", "compare"},
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
