@@ -18,7 +18,7 @@ CAUTION = (
     "judgement of licensed practitioners."
 )
 
-OK, BUG, USAGE, FEED, OUTPUT, EXTRA, PIPE = 0, 1, 2, 3, 4, 5, 141
+OK, BUG, USAGE, FEED, OUTPUT, EXTRA, SNAPSHOT, PIPE = 0, 1, 2, 3, 4, 5, 6, 141
 EXIT_CODES = (
     (OK, "done, or stopped by Ctrl-C with everything so far kept"),
     (BUG, "an error inside streambasis; --debug shows where"),
@@ -26,10 +26,15 @@ EXIT_CODES = (
     (FEED, "the feed cannot be read, its columns do not fit, or it is shorter than the baseline"),
     (OUTPUT, "a file cannot be written"),
     (EXTRA, "a package that the command needs is not installed"),
+    (SNAPSHOT, "a snapshot is missing or damaged, or does not fit the one it is compared with"),
     (PIPE, "whoever read the output went away"),
 )
 
-SUMMARIES = {"watch": "Watch a feed and report what it has not shown before."}
+SUMMARIES = {
+    "watch": "Watch a feed and report what it has not shown before.",
+    "show": "Show what a snapshot holds.",
+    "compare": "Show how far two snapshots are apart, and on which channels.",
+}
 """The commands, each with its one line of help."""
 
 

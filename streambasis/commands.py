@@ -23,6 +23,7 @@ from streambasis.cli import (
     FEED,
     OK,
     OUTPUT,
+    SNAPSHOT,
     SUMMARIES,
     USAGE,
 )
@@ -31,6 +32,7 @@ from streambasis.errors import (
     HomeError,
     SampleError,
     SettingError,
+    SnapshotError,
     StreambasisError,
 )
 
@@ -163,6 +165,55 @@ def watch(
     shown.summary(summary)
 
 
+@streambasis.command(
+    "show",
+    short_help=SUMMARIES["show"],
+    help="""Show what the snapshot in FILE holds: channels, samples, rank, energies, noise floor,
+    events, and an audit of its directions. The file is verified first.""",
+    epilog=f"""\b
+Example:
+  streambasis show run1/state.arrow
+  streambasis show run1/state.arrow --json | jq .rank
+
+{_CODES}
+
+{CAUTION}""",
+)
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Everything as one JSON object.")
+@_debug
+def show(file: Path, as_json: bool) -> None:
+    """Show a snapshot."""
+    from streambasis.watch.show import show as write
+
+    write(file, sys.stdout, as_json=as_json)
+
+
+@streambasis.command(
+    "compare",
+    short_help=SUMMARIES["compare"],
+    help="""Show how far the snapshots A and B are apart: the principal angles between their
+    subspaces, and the channels on which they differ most. The channels must be the same.""",
+    epilog=f"""\b
+Example:
+  streambasis compare monday.arrow friday.arrow
+  streambasis compare monday.arrow friday.arrow --json | jq .angles_degrees
+
+{_CODES}
+
+{CAUTION}""",
+)
+@click.argument("a", type=click.Path(path_type=Path))
+@click.argument("b", type=click.Path(path_type=Path))
+@click.option("--json", "as_json", is_flag=True, help="Everything as one JSON object.")
+@_debug
+def compare(a: Path, b: Path, as_json: bool) -> None:
+    """Compare two snapshots."""
+    from streambasis.watch.comparison import compare as write
+
+    write(a, b, sys.stdout, as_json=as_json)
+
+
 def _names(given: Sequence[str]) -> list[str] | None:
     """Return the names in lists separated by commas; a name with a comma stands in quotes."""
     if not given:
@@ -192,6 +243,8 @@ def run(arguments: Sequence[str]) -> int:
         return _failed(error, str(error), FEED, arguments)
     except SettingError as error:
         return _failed(error, str(error), USAGE, arguments)
+    except SnapshotError as error:
+        return _failed(error, str(error), SNAPSHOT, arguments)
     except HomeError as error:
         return _failed(error, str(error), OUTPUT, arguments)
     except StreambasisError as error:

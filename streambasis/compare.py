@@ -104,6 +104,43 @@ def subspace_distance(a: Comparable, b: Comparable) -> float:
     return float(min(sines[-1], 1.0)) if len(sines) else 0.0
 
 
+def channel_shares(a: Comparable, b: Comparable) -> NDArray[np.float64]:
+    """Return which channels two subspaces differ on.
+
+    Parameters
+    ----------
+    a, b : StreamBasis, PrincipalBasis or array_like of shape (k, n)
+        As for :func:`principal_angles`.
+
+    Returns
+    -------
+    ndarray of float64, shape (n,)
+        The share of each channel in the squares of what either basis has outside the other;
+        they add up to 1, or are all 0 where the subspaces are the same up to rounding.
+
+    Raises
+    ------
+    SettingError
+        If the channels or the inner products differ.
+
+    Notes
+    -----
+    The squares add up to twice the sum of sin² of the principal angles, and 1 for each direction
+    that one has more: the squared Frobenius norm of the difference of the two projections. Counted
+    in the coordinates of the inner product. O(n·k²) flops.
+    """
+    first, second = _rows_of_both(a, b)
+    squares = np.zeros(first.shape[1])
+    for rows, others in ((first, second), (second, first)):
+        outside = rows
+        for _ in range(2):  # the second time takes off what rounding left of the first
+            outside = outside - (outside @ others.conj().T) @ others
+        squares += (np.abs(outside) ** 2).sum(axis=0)
+    total = float(squares.sum())
+    rounding = len(squares) * float(np.finfo(np.float64).eps)
+    return squares / total if total > rounding**2 * len(first) else np.zeros(len(squares))
+
+
 def merge(a: Basis, b: Basis, *more: Basis) -> Basis:
     """Return one basis of what several have seen, as if the samples of each followed the last.
 

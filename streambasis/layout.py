@@ -122,10 +122,7 @@ def read_arrow(memory: memoryview) -> State:
     base = pa.py_buffer(memory)
     try:
         reader = pa.ipc.open_file(base)
-        metadata = reader.schema.metadata or {}
-        if set(metadata) != {SEAL_KEY, OUTLINE_KEY}:
-            raise Flaw("its schema metadata has other keys than a snapshot")
-        outline = _parsed(metadata[OUTLINE_KEY])
+        outline, _ = _parsed(reader.schema.metadata or {})
         claims = _distinct(_claims(outline, memory.nbytes))
         names = _channels(outline)
         _check_schema(reader.schema, claims, names)
@@ -287,16 +284,34 @@ def _listed(values: Any, length: int) -> Any:
     return pa.FixedSizeListArray.from_arrays(values, type=_list_type(values.type, length))
 
 
-def _parsed(text: bytes) -> dict[str, Any]:
-    """Return the outline in the metadata, checked for its form but not for its claims."""
+def parsed_outline(memory: memoryview) -> tuple[dict[str, Any], str]:
+    """Return the outline in the metadata of a file, and what wrote it.
+
+    Raises
+    ------
+    Flaw
+        If there is none of the right form.
+    """
     try:
-        outline = json.loads(text)
+        metadata = pa.ipc.open_file(pa.py_buffer(memory)).schema.metadata or {}
+    except _ARROW_REFUSES as error:
+        raise Flaw(f"Arrow cannot read it ({type(error).__name__}: {error})") from error
+    return _parsed(metadata)
+
+
+def _parsed(metadata: dict[bytes, bytes]) -> tuple[dict[str, Any], str]:
+    """Return the outline, checked for its form but not for its claims, and what wrote it."""
+    if set(metadata) != {SEAL_KEY, OUTLINE_KEY}:
+        raise Flaw("its schema metadata has other keys than a snapshot")
+    try:
+        outline = json.loads(metadata[OUTLINE_KEY])
     except (ValueError, RecursionError) as error:
         raise Flaw(f"its metadata is not readable JSON ({error})") from error
-    if not isinstance(outline, dict) or not isinstance(outline.pop("written_by", None), str):
+    written_by = outline.pop("written_by", None) if isinstance(outline, dict) else None
+    if not isinstance(written_by, str):
         raise Flaw("its metadata does not say what wrote it")
     _check_outline(outline, _DEEPEST)
-    return outline
+    return outline, written_by
 
 
 def _check_outline(outline: Any, depth: int) -> None:

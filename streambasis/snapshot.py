@@ -22,8 +22,17 @@ from numpy.typing import NDArray
 from streambasis.audit import LEAST_DIMENSION, ORTHOGONALITY_LIMIT, orthogonality, unit_roundoff
 from streambasis.errors import SnapshotError, SnapshotFileError, SnapshotMissingError
 from streambasis.files import OWNER_ONLY, remove_leftovers, replace_file, write_all
-from streambasis.layout import read_arrow, write_arrow
-from streambasis.seal import Digest, Flaw, check_digest, find_seal, read_seal, regions
+from streambasis.layout import parsed_outline, read_arrow, write_arrow
+from streambasis.seal import (
+    FORMAT,
+    VERSION,
+    Digest,
+    Flaw,
+    check_digest,
+    find_seal,
+    read_seal,
+    regions,
+)
 from streambasis.state import State, Stateful
 
 KINDS = ("StreamBasis", "PrincipalBasis", "NoveltyMonitor")
@@ -117,6 +126,7 @@ def load(path: str | os.PathLike[str], *, verify: bool = True) -> Any:
     Returns
     -------
     StreamBasis, PrincipalBasis or NoveltyMonitor
+        Where the file holds more, such as how far a feed was read, the one object in it.
 
     Raises
     ------
@@ -178,6 +188,38 @@ def read_state(path: str | os.PathLike[str], *, verify: bool = True) -> State:
     except OSError as error:
         raise _file_error(path, "cannot be read", error) from error
     return _read(memory, os.fspath(path), verify, given=True)
+
+
+def read_outline(path: str | os.PathLike[str]) -> dict[str, Any]:
+    """Return what a snapshot says of itself, unverified and without reading its arrays.
+
+    Parameters
+    ----------
+    path : path
+        The file.
+
+    Returns
+    -------
+    dict
+        ``format``, ``digest``, ``written_by``, and what the metadata holds: ``kind``, ``facts``
+        as JSON, ``arrays`` and ``parts``.
+
+    Raises
+    ------
+    SnapshotError
+        If it has no such metadata.
+    """
+    try:
+        memory = _memory(path)
+    except OSError as error:
+        raise _file_error(path, "cannot be read", error) from error
+    try:
+        seal = read_seal(memory)
+        outline, written_by = parsed_outline(memory)
+    except Flaw as flaw:
+        raise SnapshotError(f"{os.fspath(path)}: {flaw}") from flaw
+    digest = f"sha256:{seal.digest.decode()}"
+    return {"format": f"{FORMAT} {VERSION}", "digest": digest, "written_by": written_by, **outline}
 
 
 def state_from_bytes(data: bytes | bytearray | memoryview, *, verify: bool = True) -> State:
@@ -306,7 +348,10 @@ def _check_directions(vectors: NDArray[Any]) -> None:
 
 def _built(state: State, name: str) -> Any:
     if state.kind not in KINDS:
-        raise SnapshotError(f"{name}: it holds the state of a {state.kind!r}, not of an object")
+        held = [part for part in state.parts.values() if part.kind in KINDS]
+        if len(held) != 1:
+            raise SnapshotError(f"{name}: it holds the state of a {state.kind!r}, not of an object")
+        state = held[0]
     kind = getattr(importlib.import_module("streambasis"), state.kind)
     try:
         return kind.from_state(state)
