@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import gzip
 import re
 import subprocess
 import sys
@@ -18,7 +17,7 @@ import pytest
 from streambasis import StreambasisError
 from streambasis.errors import FeedError
 from streambasis.feeds import BATCH_ROWS, Batch, open_feed
-from streambasis.feeds.text import BLOCK_BYTES
+from streambasis.feeds.sources import CHUNK_BYTES
 
 ROWS = 10_001
 
@@ -171,7 +170,7 @@ def test_later_fractions_do_not_break_a_column_that_began_with_whole_numbers(
     rows = "".join(f"{i},{i % 7}\n" for i in range(200_000))
     path = text_file(tmp_path, f"time,a\n{rows}200000.5,0.5\n")
     values, times, _ = read_all(path)
-    assert len(rows) > 6 * BLOCK_BYTES
+    assert len(rows) > 6 * CHUNK_BYTES
     assert values[-1, 0] == 0.5
     assert times is not None
     assert times[-1] == 200_000_500_000_000
@@ -200,13 +199,13 @@ REFUSED = [
     ("a,state\n1,on\n", {}, "column 'state' is not numeric (text)"),
     ("a,on\n1,true\n", {}, "column 'on' is not numeric (text)"),
     ("time,a\nMonday,1\n", {}, "time column 'time' cannot be read (text)"),
-    ("time,a\n1,1\n,2\n", {}, "the time of sample 1 is missing (column 'time')"),
-    ("time,a\n1e300,1\n", {}, "is no number of seconds within 292 years"),
+    ("time,a\n1,1\n,2\n", {}, "line 3: the time is missing (column 'time')"),
+    ("time,a\n1e300,1\n", {}, "the time is no number of seconds within 292 years"),
     ("a,b\n", {}, "no samples; the file holds column names and nothing else"),
     ("1,2\n3,4\n", {}, "the first line holds numbers; it should hold column names"),
     ("\n1,2\n", {}, "the first line is blank"),
     ("", {}, "the file is empty"),
-    ("a,b\n1,2\n3\n", {}, "line 3: CSV parse error: Expected 2 columns, got 1: 3"),
+    ("a,b\n1,2\n3\n", {}, "line 3: 2 columns expected, 1 found"),
 ]
 
 
@@ -228,7 +227,7 @@ def test_text_among_numbers_is_named_with_line_and_column(tmp_path: Path) -> Non
     rows = ["1.5,2"] * 100_000
     rows[90_000] = "1.5,broken"
     path = text_file(tmp_path, "\n".join(["a,b", *rows]) + "\n")
-    with pytest.raises(FeedError, match=r"line 90002, column 'b': .*invalid value 'broken'"):
+    with pytest.raises(FeedError, match=r"line 90002: column 'b': invalid value 'broken'"):
         read_all(path)
 
 
@@ -239,10 +238,10 @@ def test_doubled_names_that_nobody_asks_for_do_no_harm(tmp_path: Path) -> None:
 
 
 def test_missing_file_and_folder_are_named(tmp_path: Path) -> None:
-    """A path without a file behind it is an error that says which."""
+    """A path without a file behind it, and a folder with none in it, are named."""
     with pytest.raises(FeedError, match=re.escape(f"{tmp_path / 'none.csv'}: no such file")):
         open_feed(tmp_path / "none.csv")
-    with pytest.raises(FeedError, match="a folder, not a file"):
+    with pytest.raises(FeedError, match="a folder without files"):
         open_feed(tmp_path)
 
 
@@ -261,8 +260,8 @@ def test_a_name_that_promises_another_format_is_pointed_out(tmp_path: Path) -> N
     with pytest.raises(FeedError, match="named like Parquet, but its content is not"):
         open_feed(text_file(tmp_path, "a,b\n1,2\n", "feed.parquet"))
     packed = tmp_path / "feed.csv"
-    packed.write_bytes(gzip.compress(b"a,b\n1,2\n"))
-    with pytest.raises(FeedError, match=r"binary content|not UTF-8"):
+    packed.write_bytes(bytes(range(256)))
+    with pytest.raises(FeedError, match=r"binary content"):
         open_feed(packed)
 
 

@@ -1,8 +1,15 @@
-"""Feeds: files of samples, read as batches of named values in bounded memory."""
+"""Feeds: files, pipes and brokers, read as batches of named samples in bounded memory."""
 
 from __future__ import annotations
 
 from streambasis.feeds.files import open_feed
-from streambasis.feeds.reading import BATCH_ROWS, Batch, Feed
+from streambasis.feeds.reading import (
+    BATCH_ROWS,
+    Batch,
+    Feed,
+    FeedOptions,
+    Malformed,
+    Position,
+)
 
-__all__ = ["BATCH_ROWS", "Batch", "Feed", "open_feed"]
+__all__ = ["BATCH_ROWS", "Batch", "Feed", "FeedOptions", "Malformed", "Position", "open_feed"]

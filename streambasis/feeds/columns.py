@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import re
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -12,11 +12,12 @@ import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
-from streambasis.errors import FeedError, SampleError
-from streambasis.times import many_nanoseconds
+from streambasis.errors import FeedError
 
-UNITS = {"s": 1.0, "sec": 1.0, "ms": 1e-3, "us": 1e-6, "ns": 1e-9}
-"""What one unit is in seconds; the name of a time column may end in one, as in ``time_ms``."""
+UNITS = {"s": 10**9, "sec": 10**9, "ms": 10**6, "us": 10**3, "ns": 1}
+"""Nanoseconds per unit; the name of a time column may end in one, as in ``time_ms``."""
+
+_MOMENT_UNITS = {**UNITS, "day": 86_400 * 10**9}
 
 _TIME_NAME = re.compile(
     r"(?:time|timestamp|time[ _]?stamp|date|date[ _]?time|utc|epoch|unix[ _]?time)"
@@ -24,6 +25,7 @@ _TIME_NAME = re.compile(
     re.IGNORECASE,
 )
 SHOWN_NAMES = 12
+MOST_NANOSECONDS = 2**63 - 1
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,13 +38,13 @@ class Columns:
         Names of the channels, in the order in which their values come.
     time : str or None
         Name of the time column.
-    unit : float or None
-        Seconds per unit where the time column holds numbers; None where it holds timestamps.
+    unit : int or None
+        Nanoseconds per unit where the time column holds numbers; None where it holds timestamps.
     """
 
     channels: tuple[str, ...]
     time: str | None
-    unit: float | None
+    unit: int | None
 
 
 def choose(
@@ -136,7 +138,7 @@ def _find_time(source: str, schema: pa.Schema, taken: list[str]) -> str | None:
     return None
 
 
-def _unit(source: str, schema: pa.Schema, time: str | None) -> float | None:
+def _unit(source: str, schema: pa.Schema, time: str | None) -> int | None:
     if time is None:
         return None
     kind = schema.field(time).type
@@ -148,7 +150,7 @@ def _unit(source: str, schema: pa.Schema, time: str | None) -> float | None:
             "2026-03-02T14:05:00 (with a fraction or a zone if need be) or as seconds"
         )
     match = _TIME_NAME.fullmatch(time)
-    return UNITS[(match.group(1) or "s").lower()] if match else 1.0
+    return UNITS[(match.group(1) or "s").lower()] if match else UNITS["s"]
 
 
 def _is_moment(kind: pa.DataType) -> bool:
@@ -170,40 +172,75 @@ def _described(kind: pa.DataType) -> str:
     return "text" if pa.types.is_string(kind) or pa.types.is_large_string(kind) else str(kind)
 
 
-def values_of(batch: pa.RecordBatch, columns: Columns, out: NDArray[np.float64]) -> None:
-    """Write the channels of an Arrow batch to ``out``, float64 (m, n); a null becomes NaN."""
-    for position, name in enumerate(columns.channels):
-        column = batch.column(name)
+def values_of(columns: Iterable[pa.Array], out: NDArray[np.float64]) -> None:
+    """Write numeric Arrow columns to ``out``, float64 (m, n); a null becomes NaN."""
+    for position, column in enumerate(columns):
         if not pa.types.is_float64(column.type):
             column = column.cast(pa.float64(), safe=False)
         out[:, position] = column.to_numpy(zero_copy_only=False)
 
 
-def times_of(source: str, batch: pa.RecordBatch, columns: Columns, first: int) -> NDArray[np.int64]:
-    """Return the times of an Arrow batch in nanoseconds, int64 (m,).
+def times_of(
+    column: pa.Array, columns: Columns
+) -> tuple[NDArray[np.int64], NDArray[np.bool_], NDArray[np.bool_]]:
+    """Return the times of an Arrow column in nanoseconds, and which of them are none.
 
-    Raises
-    ------
-    FeedError
-        If a time is missing or out of range; the message names the sample.
+    Parameters
+    ----------
+    column : pyarrow.Array, length m
+        The time column.
+    columns : Columns
+        Its unit.
+
+    Returns
+    -------
+    times : ndarray of int64, shape (m,)
+        Nanoseconds; 0 where there is none.
+    missing : ndarray of bool, shape (m,)
+        No time is given.
+    outside : ndarray of bool, shape (m,)
+        A time that 64-bit nanoseconds cannot hold, NaN included.
+
+    Notes
+    -----
+    Whole numbers stay whole numbers, so a Unix time in nanoseconds keeps its last digit.
     """
-    column = batch.column(columns.time)
-    if column.null_count:
-        row = first + int(np.argmax(column.is_null().to_numpy(zero_copy_only=False)))
-        raise FeedError(f"{source}: the time of sample {row} is missing (column {columns.time!r})")
-    given: Any
-    if columns.unit is None:
-        try:
-            given = column.cast(pa.timestamp("ns")).to_numpy(zero_copy_only=False)
-        except pa.ArrowInvalid as error:
-            raise FeedError(f"{source}: column {columns.time!r}: {error}") from None
-    else:
-        given = column.to_numpy(zero_copy_only=False)
-        if pa.types.is_decimal(column.type) or columns.unit != 1.0:
-            given = given.astype(np.float64) * columns.unit
-    try:
-        return many_nanoseconds(given, len(batch))
-    except SampleError as error:
-        raise FeedError(
-            f"{source}: column {columns.time!r}, samples from {first}: {error}"
-        ) from None
+    missing = column.is_null().to_numpy(zero_copy_only=False)
+    kind = column.type
+    unit = columns.unit
+    if unit is None:
+        unit = _MOMENT_UNITS[_moment_unit(kind)]
+        width = pa.int32() if pa.types.is_date32(kind) else pa.int64()
+        column = column.view(width).cast(pa.int64())
+    elif not pa.types.is_integer(kind):
+        column = column.cast(pa.float64(), safe=False)
+    elif pa.types.is_uint64(kind):
+        column = column.cast(pa.int64(), safe=False)
+    ticks = column.fill_null(0).to_numpy(zero_copy_only=False)
+    times, outside = ticks_to_nanoseconds(ticks, unit)
+    return times, missing, outside & ~missing
+
+
+def _moment_unit(kind: pa.DataType) -> str:
+    if pa.types.is_date32(kind):
+        return "day"
+    return "ms" if pa.types.is_date64(kind) else str(kind.unit)
+
+
+def ticks_to_nanoseconds(
+    ticks: NDArray[Any], unit: int
+) -> tuple[NDArray[np.int64], NDArray[np.bool_]]:
+    """Return whole numbers or floats of a unit as nanoseconds, and which are out of range."""
+    most = MOST_NANOSECONDS // unit
+    if ticks.dtype.kind == "f":
+        with np.errstate(invalid="ignore"):
+            outside = ~(np.abs(ticks) < most)
+        kept = np.where(outside, 0.0, ticks)
+        # the whole part and the fraction apart: a Unix time in float64 keeps its last bits, which
+        # a product with 1e9 would round away
+        whole = np.floor(kept)
+        fraction = np.rint((kept - whole) * unit).astype(np.int64)
+        return whole.astype(np.int64) * unit + fraction, outside
+    whole = ticks.astype(np.int64)
+    outside = (whole > most) | (whole < -most)
+    return np.where(outside, 0, whole) * unit, outside

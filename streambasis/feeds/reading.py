@@ -1,21 +1,51 @@
-"""What every feed yields, and how batches of any size become batches of one size."""
+"""What every feed yields, and how pieces of any size become batches cut at the same samples."""
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
-from typing import Protocol
+import threading
+from collections.abc import Callable, Iterable, Iterator
+from dataclasses import dataclass, field
+from types import TracebackType
+from typing import Any, Protocol, Self
 
 import numpy as np
-import pyarrow as pa
 from numpy.typing import NDArray
 
 from streambasis.errors import FeedError
-from streambasis.feeds.columns import Columns, times_of, values_of
+from streambasis.feeds.columns import Columns
 
 BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
 blocks, so that the same samples give bit-identical results from every file."""
+
+MOST_TEXT = 4096
+"""Characters of a malformed row that are kept."""
+
+Position = dict[str, Any]
+"""Where a feed goes on: JSON things only, made by a feed and understood by that kind of feed."""
+
+
+@dataclass(frozen=True, slots=True)
+class Malformed:
+    """A row that holds no sample and was passed over.
+
+    Attributes
+    ----------
+    source : str
+        The file, topic or standard input that it came from.
+    number : int
+        Its line, counted from 1 over the file; in a binary file its row, counted from 1; in a
+        feed of messages the message, counted from 1 since the feed was opened.
+    reason : str
+        What is wrong with it.
+    text : str
+        The row itself, cut after MOST_TEXT characters; empty where the file is binary.
+    """
+
+    source: str
+    number: int
+    reason: str
+    text: str
 
 
 @dataclass(frozen=True, slots=True)
@@ -27,17 +57,72 @@ class Batch:
     first : int
         Number of the first sample, counted from 0 over the feed.
     values : ndarray of float64, shape (m, n)
-        One row per sample, one column per channel; NaN where a value is missing.
+        One row per sample, one column per channel; NaN where a value is missing, never infinite.
     times : ndarray of int64, shape (m,), or None
         Nanoseconds, since the Unix epoch where the feed has timestamps.
+    position : dict
+        Where to go on after this batch; JSON things only. Whoever keeps it together with what
+        came of the samples can open the feed there again, and no sample is lost or taken twice.
+    malformed : tuple of Malformed
+        Rows passed over on the way to that position; always empty from a strict feed. A batch
+        may hold malformed rows and no sample.
     """
 
     first: int
     values: NDArray[np.float64]
     times: NDArray[np.int64] | None
+    position: Position = field(default_factory=dict)
+    malformed: tuple[Malformed, ...] = ()
 
     def __len__(self) -> int:
         return len(self.values)
+
+
+@dataclass(frozen=True, slots=True)
+class Piece:
+    """Samples as a reader finds them, before they are cut into batches.
+
+    Attributes
+    ----------
+    values, times
+        As of a batch.
+    place : callable
+        Given k, returns where to go on after the first k samples; for k = m, after the piece.
+    malformed : list of (int, Malformed)
+        The rows passed over, each with the number of samples of the piece that come before it.
+    """
+
+    values: NDArray[np.float64]
+    times: NDArray[np.int64] | None
+    place: Callable[[int], Position]
+    malformed: list[tuple[int, Malformed]] = field(default_factory=list)
+
+
+@dataclass(frozen=True, slots=True)
+class FeedOptions:
+    """How a feed is read.
+
+    Attributes
+    ----------
+    format : str or None
+        "csv" or "json" where the first bytes should not decide; binary formats are always told
+        by their first bytes.
+    strict : bool
+        A malformed row is a FeedError; otherwise it is passed over and reported with the batch.
+    follow : bool
+        The file still grows: at its end wait for more, through rotation and truncation.
+    wait : float or None
+        Seconds after which a feed that still grows gives what it has as a short batch; None gives
+        whole batches only, cut at the same sample numbers in every run.
+    stop : threading.Event
+        Set by whoever wants a waiting feed to end.
+    """
+
+    format: str | None = None
+    strict: bool = True
+    follow: bool = False
+    wait: float | None = 0.01
+    stop: threading.Event = field(default_factory=threading.Event)
 
 
 class Feed(Protocol):
@@ -51,52 +136,247 @@ class Feed(Protocol):
         Its channels and its time column.
     rows : int or None
         How many samples it holds, estimated for text; None where nobody knows.
+    live : bool
+        Samples are given as they arrive, so that a batch may be short without being the last.
+    repeatable : bool
+        The samples after a position can be read again: from a file, or from a broker that keeps
+        what was not committed. A pipe gives every sample once.
+    due : bool
+        The feed holds back samples until what it gave is committed.
+    counts : dict of str to int
+        What the feed counts beside samples, such as ``malformed`` and ``dropped``.
     """
 
     name: str
     columns: Columns
     rows: int | None
+    live: bool
+    repeatable: bool
+
+    @property
+    def due(self) -> bool: ...
+
+    @property
+    def counts(self) -> dict[str, int]: ...
 
     def batches(self) -> Iterator[Batch]:
-        """Yield the samples in order, once, in batches of BATCH_ROWS and a shorter last one."""
+        """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
         ...
 
+    def commit(self, position: Position) -> None:
+        """Hear that everything up to a position is kept and need not be given again."""
+        ...
 
-def recut(
-    name: str, columns: Columns, source: Iterator[pa.RecordBatch], rows: int = BATCH_ROWS
-) -> Iterator[Batch]:
-    """Turn Arrow batches of any size into batches of ``rows`` samples and a shorter last one.
+    def close(self) -> None:
+        """Let go of files, threads and connections."""
+        ...
+
+    def __enter__(self) -> Self: ...
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None: ...
+
+
+class PieceFeed:
+    """What feeds have in common: a subclass yields pieces, this cuts them into batches.
+
+    Parameters
+    ----------
+    name : str
+        What the feed is called in messages.
+    options : FeedOptions
+        How it is read.
+    position : dict or None
+        Where to go on.
+    """
+
+    kind = ""
+    """What the positions of this feed say they are for."""
+
+    columns: Columns
+    rows: int | None = None
+    live = False
+    repeatable = True
+
+    def __init__(self, name: str, options: FeedOptions, position: Position | None) -> None:
+        self.name = name
+        self.options = options
+        self._first = 0
+        self._malformed = 0
+        if position is not None:
+            self._first = whole_number(name, position, "sample")
+            self._malformed = whole_number(name, position, "malformed")
+            if position.get("kind") != self.kind:
+                raise FeedError(
+                    f"{name}: the run left off in another kind of feed "
+                    f"({position.get('kind')!r}, not {self.kind!r}); start in a new folder"
+                )
+
+    @property
+    def due(self) -> bool:
+        """Whether the feed waits for a commit."""
+        return False
+
+    @property
+    def counts(self) -> dict[str, int]:
+        """Malformed rows up to the last batch given."""
+        return {"malformed": self._malformed}
+
+    def pieces(self) -> Iterator[Piece | None]:
+        """Yield the samples as they are found; None when nothing has come for a while."""
+        raise NotImplementedError
+
+    def batches(self) -> Iterator[Batch]:
+        """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
+        given = self._first > 0
+        for batch in cut(self.pieces(), self.columns, self._first, self._keeps_rest):
+            self._malformed += len(batch.malformed)
+            batch.position.update(kind=self.kind, malformed=self._malformed)
+            given = True
+            yield batch
+        if not given and not self.options.stop.is_set():
+            raise FeedError(
+                f"{self.name}: no samples; the file holds column names and nothing else"
+            )
+
+    def _keeps_rest(self) -> bool:
+        """Return whether what does not fill a batch is given when the pieces end."""
+        # asked to stop in the middle: a sample that can be read again stays for the next run,
+        # which then cuts its batches where this one would have
+        return not (self.repeatable and self.options.stop.is_set())
+
+    def commit(self, position: Position) -> None:
+        """Hear that everything up to a position is kept."""
+
+    def close(self) -> None:
+        """Let go of what is open."""
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self.close()
+
+
+def whole_number(name: str, position: Position, key: str) -> int:
+    """Return a count that a position holds.
 
     Raises
     ------
     FeedError
-        If a time is missing, or there is no sample at all.
+        If it is no count.
+    """
+    value = position.get(key)
+    if not isinstance(value, int) or isinstance(value, bool) or not 0 <= value < 2**63:
+        raise FeedError(f"{name}: the position to go on from is damaged ({key} = {value!r})")
+    return value
+
+
+def cut(
+    pieces: Iterable[Piece | None],
+    columns: Columns,
+    first: int = 0,
+    keeps_rest: Callable[[], bool] = lambda: True,
+    rows: int = BATCH_ROWS,
+) -> Iterator[Batch]:
+    """Cut pieces of any size into batches that end where the sample number divides by ``rows``.
+
+    Parameters
+    ----------
+    pieces : iterable of Piece or None
+        None asks for what there is as a short batch.
+    columns : Columns
+        The channels, and whether there is a time.
+    first : int
+        Number of the first sample.
+    keeps_rest : callable
+        Asked at the end whether a last short batch is given.
+    rows : int
+        Samples per batch.
 
     Notes
     -----
-    Holds one batch of samples beside the Arrow batch in hand, whatever the length of the feed.
+    Holds less than one batch of samples beside the piece in hand, whatever the length of the feed;
+    malformed rows count as samples in that.
     """
-    shape = (rows, len(columns.channels))
-    first = filled = 0
-    values = np.empty(shape)
-    times = None if columns.time is None else np.empty(rows, np.int64)
-    for whole in source:
-        start = 0
-        while start < len(whole):
-            part = whole.slice(start, rows - filled)
-            here = slice(filled, filled + len(part))
-            values_of(part, columns, values[here])
-            if times is not None:
-                times[here] = times_of(name, part, columns, first + filled)
-            start += len(part)
-            filled += len(part)
-            if filled == rows:
-                yield Batch(first, values, times)
-                first, filled = first + rows, 0
-                # fresh arrays: whoever got the last batch may keep it
-                values = np.empty(shape)
-                times = None if times is None else np.empty(rows, np.int64)
-    if filled:
-        yield Batch(first, values[:filled], None if times is None else times[:filled])
-    elif first == 0:
-        raise FeedError(f"{name}: no samples; the file holds column names and nothing else")
+    held = _Held(first, columns)
+    for piece in pieces:
+        if piece is None:
+            if held:
+                yield held.give()
+            continue
+        start, length = 0, len(piece.values)
+        while True:
+            stop = min(length, start + rows - (held.first + held.count) % rows)
+            held.take(piece, start, stop)
+            if (stop > start and (held.first + held.count) % rows == 0) or held.full(rows):
+                yield held.give()
+            start = stop
+            if start == length:
+                break
+    if held and keeps_rest():
+        yield held.give()
+
+
+class _Held:
+    """The samples and malformed rows of the batch that is being filled."""
+
+    def __init__(self, first: int, columns: Columns) -> None:
+        self.first = first
+        self._width = len(columns.channels)
+        self._timed = columns.time is not None
+        self._clear()
+
+    def _clear(self) -> None:
+        self.count = 0
+        self._values: list[NDArray[np.float64]] = []
+        self._times: list[NDArray[np.int64]] = []
+        self._malformed: list[Malformed] = []
+
+    def __bool__(self) -> bool:
+        return bool(self.count or self._malformed)
+
+    def full(self, rows: int) -> bool:
+        return len(self._malformed) >= rows
+
+    def take(self, piece: Piece, start: int, stop: int) -> None:
+        self._values.append(piece.values[start:stop])
+        if piece.times is not None:
+            self._times.append(piece.times[start:stop])
+        self.count += stop - start
+        last = stop == len(piece.values)
+        self._malformed += [
+            row
+            for before, row in piece.malformed
+            # what stands behind the last sample taken would be met again from its position
+            if before >= start and (before < stop or last)
+        ]
+        self._place, self._rows = piece.place, stop
+
+    def give(self) -> Batch:
+        values = (
+            self._values[0] if len(self._values) == 1 else np.concatenate(self._values)
+        ).reshape(self.count, self._width)
+        times = None
+        if self._timed:
+            times = self._times[0] if len(self._times) == 1 else np.concatenate(self._times)
+        position = {"sample": self.first + self.count, **self._place(self._rows)}
+        batch = Batch(self.first, values, times, position, tuple(self._malformed))
+        self.first += self.count
+        self._clear()
+        return batch
+
+
+def shortened(row: bytes) -> str:
+    """Return a row as text that can be shown and kept: printable, of bounded length."""
+    text = row[:MOST_TEXT].decode("utf-8", "backslashreplace").rstrip("\r\n")
+    return "".join(c if c.isprintable() or c == "\t" else ascii(c)[1:-1] for c in text)

@@ -1,130 +1,238 @@
-"""CSV files as feeds."""
+"""CSV: names from the first line, rows from the others, faults told row by row."""
 
 from __future__ import annotations
 
 import csv
 import io
-import re
-from collections.abc import Iterator, Sequence
-from pathlib import Path
+from collections.abc import Sequence
+from typing import Any
 
+import numpy as np
 import pyarrow as pa
+from numpy.typing import NDArray
 from pyarrow import csv as arrow_csv
 
 from streambasis.errors import FeedError
-from streambasis.feeds.columns import choose
-from streambasis.feeds.reading import Batch, recut
+from streambasis.feeds.columns import choose, times_of, values_of
+from streambasis.feeds.lines import Lines
+from streambasis.feeds.rows import Rows
 
-PEEK_BYTES = 1 << 18
-"""How much of the file is read to learn its separator, names and types."""
-
-BLOCK_BYTES = 1 << 18
 _SEPARATORS = (",", ";", "\t")
-_ROW = re.compile(r"Row #(\d+): ?")
-_COLUMN = re.compile(r"In CSV column #(\d+): ")
+_NO_VALUE = frozenset(arrow_csv.ConvertOptions().null_values)
+_SHOWN = 40
 
 
-class CsvFeed:
-    """A CSV file with a line of column names, read block by block.
+class CsvRows:
+    """Parses the lines of a CSV file.
+
+    Parameters
+    ----------
+    name : str
+        What the feed is called in messages.
+    peek : bytes
+        The first lines of the file.
+    channels, time
+        As of :func:`streambasis.feeds.open_feed`.
 
     Notes
     -----
-    The separator is a comma, a semicolon or a tab. Every channel is read as float64: what the
-    first block looks like never decides how a later one is parsed. Empty fields and the usual
-    words for a missing value (``NA``, ``NaN``, ``null``) become NaN.
+    The separator is a comma, a semicolon or a tab. Whether a column holds numbers or timestamps is
+    what most of its first values are: an odd word is a malformed row. Every channel is read as
+    float64: what the first block looks like never decides how a later one is parsed. Empty fields
+    and the usual words for a missing value (``NA``, ``NaN``, ``null``) become NaN.
     """
 
-    def __init__(self, path: Path, channels: Sequence[str] | None, time: str | None) -> None:
-        self.name = str(path)
-        peek = self._peek(path)
-        lines = peek.splitlines()
-        separator = max(_SEPARATORS, key=lines[0].count)
-        self._names = names = next(csv.reader([lines[0]], delimiter=separator), [])
-        if not any(names):
-            raise FeedError(f"{self.name}: the first line is blank; it should hold column names")
-        if all(_is_number(name) for name in names):
+    def __init__(
+        self, name: str, peek: bytes, channels: Sequence[str] | None, time: str | None
+    ) -> None:
+        self._name = name
+        first, _, body = peek.partition(b"\n")
+        try:
+            header = first.decode("utf-8-sig").rstrip("\r")
+        except UnicodeDecodeError as error:
             raise FeedError(
-                f"{self.name}: the first line holds numbers; it should hold column names"
-            )
-        self._parse = arrow_csv.ParseOptions(delimiter=separator)
-        schema = self._types(peek)
-        self.columns = choose(self.name, schema, channels, time)
-        kinds = {name: pa.float64() for name in self.columns.channels}
+                f"{name}: byte {error.start} is not UTF-8 text; save the file as UTF-8"
+            ) from None
+        self._separator = max(_SEPARATORS, key=header.count)
+        self._use_names(self._split(header))
+        if not any(self._names):
+            raise FeedError(f"{name}: the first line is blank; it should hold column names")
+        if all(_is_number(column) for column in self._names):
+            raise FeedError(f"{name}: the first line holds numbers; it should hold column names")
+        schema = self._types(body)
+        self.columns = choose(name, schema, channels, time)
+        self._kinds = {column: pa.float64() for column in self.columns.channels}
         if self.columns.time is not None:
-            found = schema.field(self.columns.time).type
-            kinds[self.columns.time] = (
-                pa.timestamp("ns", found.tz) if pa.types.is_timestamp(found) else found
-            )
-            if self.columns.unit is not None:
-                # whole seconds in the first rows may be followed by fractions
-                kinds[self.columns.time] = pa.float64()
+            self._kinds[self.columns.time] = self._time_kind(schema.field(self.columns.time).type)
+        self._prepare()
+
+    def _time_kind(self, found: pa.DataType) -> pa.DataType:
+        if self.columns.unit is None:
+            return pa.timestamp("ns", found.tz if pa.types.is_timestamp(found) else None)
+        # whole seconds in the first rows may be followed by fractions; of nanoseconds there are
+        # none, and float64 would not hold them
+        return pa.int64() if self.columns.unit == 1 else pa.float64()
+
+    def _split(self, header: str) -> list[str]:
+        return next(csv.reader([header], delimiter=self._separator), [])
+
+    def _use_names(self, names: list[str]) -> None:
+        self._names = names
+        # numbers instead of names: a name may come twice among the columns that nobody asks for
+        numbered = [str(number) for number in range(len(names))]
+        self._read: dict[str, Any] = {"column_names": numbered, "use_threads": False}
+
+    def _prepare(self) -> None:
+        """Set up the parser for the names of the file in hand."""
+        self._parse = arrow_csv.ParseOptions(delimiter=self._separator)
+        numbers = {self._names.index(name): kind for name, kind in self._kinds.items()}
+        self._order = [str(number) for number in numbers]
         self._convert = arrow_csv.ConvertOptions(
-            column_types=kinds,
-            include_columns=list(kinds),
+            column_types={str(number): kind for number, kind in numbers.items()},
+            include_columns=self._order,
             true_values=[],
             false_values=[],
         )
-        longest = max(len(line) for line in lines)
-        self._block = max(BLOCK_BYTES, 16 * longest)
-        body = len(peek) - len(lines[0])
-        self.rows: int | None = (
-            round((path.stat().st_size - len(lines[0])) * (len(lines) - 1) / body) if body else 0
+        self._as_text = arrow_csv.ConvertOptions(
+            column_types={number: pa.string() for number in self._order},
+            include_columns=self._order,
         )
-        self._path = path
 
-    def _peek(self, path: Path) -> str:
-        with path.open("rb") as file:
-            beginning = file.read(PEEK_BYTES)
-            # a line must be whole to be understood; with thousands of channels one line is long
-            while b"\n" not in beginning and (more := file.read(PEEK_BYTES)):
-                beginning += more
-            whole = len(beginning) < PEEK_BYTES
-        if not whole:
-            beginning = beginning[: beginning.rfind(b"\n") + 1]
-        try:
-            return beginning.decode("utf-8-sig")
-        except UnicodeDecodeError as error:
-            raise FeedError(
-                f"{self.name}: byte {error.start} is not UTF-8 text; save the file as UTF-8"
-            ) from None
-
-    def _types(self, peek: str) -> pa.Schema:
-        """Return names and types as the beginning of the file shows them."""
+    def _types(self, body: bytes) -> pa.Schema:
+        """Return names and types as the first rows show them."""
+        text = body.decode("utf-8", "backslashreplace").encode()
         try:
             table = arrow_csv.read_csv(
-                io.BytesIO(peek.encode()),
-                read_options=arrow_csv.ReadOptions(use_threads=False),
-                parse_options=self._parse,
+                io.BytesIO(text),
+                read_options=arrow_csv.ReadOptions(**self._read, block_size=len(text) + 1),
+                parse_options=arrow_csv.ParseOptions(
+                    delimiter=self._separator, invalid_row_handler=lambda _: "skip"
+                ),
             )
-        except pa.ArrowInvalid as error:
-            raise self._named(error) from None
-        # true and false are words here, and words are no channel
-        kinds = [pa.string() if pa.types.is_boolean(k) else k for k in table.schema.types]
-        return pa.schema(list(zip(self._names, kinds, strict=True)))
+        except pa.ArrowInvalid:
+            # nothing to go by: no row at all, or none that can be parsed
+            return pa.schema([(name, pa.null()) for name in self._names])
+        return pa.schema([(name, _type(table.column(i))) for i, name in enumerate(self._names)])
 
-    def _named(self, error: pa.ArrowInvalid) -> FeedError:
-        """Return what Arrow says with the file, the line and the column by name."""
-        text = str(error).partition("\n")[0]
-        row, column = _ROW.search(text), _COLUMN.search(text)
-        line = f", line {row.group(1)}" if row else ""
-        name = f", column {self._names[int(column.group(1))]!r}" if column else ""
-        return FeedError(f"{self.name}{line}{name}: {_COLUMN.sub('', _ROW.sub('', text))}")
+    def begin(self, line: bytes) -> bool:
+        """Hear the first line of a file; return whether it holds names.
 
-    def batches(self) -> Iterator[Batch]:
-        """Yield the samples in order."""
-        yield from recut(self.name, self.columns, self._read())
-
-    def _read(self) -> Iterator[pa.RecordBatch]:
+        Raises
+        ------
+        FeedError
+            If it holds names, but not all that are needed.
+        """
         try:
-            with arrow_csv.open_csv(
-                self._path,
-                read_options=arrow_csv.ReadOptions(use_threads=False, block_size=self._block),
+            names = self._split(line.decode("utf-8-sig").rstrip("\r\n"))
+        except UnicodeDecodeError:
+            return False
+        if names == self._names:
+            return True
+        missing = [name for name in self._kinds if names.count(name) != 1]
+        if len(missing) == len(self._kinds):
+            # the writer goes on without repeating the names
+            return False
+        if missing:
+            raise FeedError(f"{self._name}: a new file begins without a column {missing[0]!r}")
+        self._use_names(names)
+        self._prepare()
+        return True
+
+    def parse(self, lines: Lines) -> Rows:
+        """Parse lines; blank ones hold no row."""
+        rows = Rows.empty(len(self.columns.channels), self.columns.time is not None)
+        if not len(lines):
+            return rows
+        data = np.frombuffer(lines.data, np.uint8)
+        starts = np.concatenate([[0], lines.ends[:-1]])
+        lengths = lines.ends - starts
+        leading = data[starts]
+        blank = (leading == 10) | ((leading == 13) & (lengths <= 2))
+        kept = np.flatnonzero(~blank)
+        if not len(kept):
+            return rows
+        table = self._table(lines.data, len(kept))
+        if table is None:
+            faults = self._faults(lines, kept)
+            good = np.array([i for i in kept if int(i) not in faults], dtype=np.int64)
+            rows.faults.update(faults)
+            self._halve(lines, good, rows)
+        else:
+            self._take(table, kept, rows)
+        return rows
+
+    def _table(self, data: bytes, rows: int) -> pa.Table | None:
+        """Parse bytes that should hold so many rows; return None if they do not."""
+        try:
+            table = arrow_csv.read_csv(
+                pa.BufferReader(data),
+                read_options=arrow_csv.ReadOptions(**self._read, block_size=len(data) + 1),
                 parse_options=self._parse,
                 convert_options=self._convert,
-            ) as reader:
-                yield from reader
-        except pa.ArrowInvalid as error:
-            raise self._named(error) from None
+            )
+        except pa.ArrowInvalid:
+            return None
+        return table if len(table) == rows else None
+
+    def _take(self, table: pa.Table, kept: NDArray[np.int64], rows: Rows) -> None:
+        batch = table.combine_chunks().to_batches()[0]
+        values = np.empty((len(batch), len(self.columns.channels)))
+        values_of(batch.columns[: values.shape[1]], values)
+        times = None
+        if self.columns.time is not None:
+            times, missing, outside = times_of(batch.columns[-1], self.columns)
+            rows.note_times(kept, missing, outside, self.columns.time)
+        rows.add(values, times, kept, self.columns.channels)
+
+    def _faults(self, lines: Lines, kept: NDArray[np.int64]) -> dict[int, str]:
+        """Return the lines that are seen to be malformed, with the reason of each."""
+        faults: dict[int, str] = {}
+        good: list[int] = []
+        for i in kept.tolist():
+            line = lines.text(i)
+            count = line.count(self._separator.encode()) + 1
+            if b'"' in line:
+                count = len(self._split(line.decode("utf-8", "replace").rstrip("\r\n")))
+            if count != len(self._names):
+                faults[i] = f"{len(self._names)} columns expected, {count} found"
+            else:
+                good.append(i)
+        joined = b"".join(lines.text(i).rstrip(b"\r\n") + b"\n" for i in good)
+        try:
+            table = arrow_csv.read_csv(
+                pa.BufferReader(joined),
+                read_options=arrow_csv.ReadOptions(**self._read, block_size=len(joined) + 1),
+                parse_options=self._parse,
+                convert_options=self._as_text,
+            )
+        except pa.ArrowInvalid:
+            return faults
+        if len(table) != len(good):
+            return faults
+        for position, name in enumerate(self._kinds):
+            kind = self._kinds[name]
+            for i, text in zip(good, table.column(position).to_pylist(), strict=True):
+                if i not in faults and not _fits(text, kind):
+                    shown = text if len(text) <= _SHOWN else text[:_SHOWN] + "..."
+                    faults[i] = f"column {name!r}: invalid value {shown!r}"
+        return faults
+
+    def _halve(self, lines: Lines, kept: NDArray[np.int64], rows: Rows) -> None:
+        """Parse lines, and where that fails each half of them, down to the lines that do."""
+        waiting = [kept] if len(kept) else []
+        while waiting:
+            part = waiting.pop()
+            data = b"".join(lines.text(int(i)) for i in part)
+            # a carriage return inside a line would count as the end of a row
+            whole = data.count(b"\r") == data.count(b"\r\n")
+            table = self._table(data, len(part)) if whole else None
+            if table is not None:
+                self._take(table, part, rows)
+            elif len(part) == 1:
+                rows.faults[int(part[0])] = "cannot be parsed"
+            else:
+                middle = len(part) // 2
+                waiting += [part[middle:], part[:middle]]
 
 
 def _is_number(text: str) -> bool:
@@ -133,3 +241,30 @@ def _is_number(text: str) -> bool:
     except ValueError:
         return False
     return True
+
+
+def _fits(text: str, kind: pa.DataType) -> bool:
+    text = text.strip()
+    if text in _NO_VALUE:
+        return True
+    if pa.types.is_timestamp(kind):
+        try:
+            pa.scalar(text).cast(kind)
+        except pa.ArrowInvalid:
+            return False
+        return True
+    return _is_number(text)
+
+
+def _type(column: pa.ChunkedArray) -> pa.DataType:
+    """Return the type of a column; among texts, the one that most of the values have."""
+    if pa.types.is_boolean(column.type):
+        # true and false are words here, and words are no channel
+        return pa.string()
+    if not pa.types.is_string(column.type):
+        return column.type
+    texts = [text for text in column.to_pylist() if text and text.strip() not in _NO_VALUE]
+    for kind in (pa.float64(), pa.timestamp("ns"), pa.timestamp("ns", "UTC")):
+        if 2 * sum(_fits(text, kind) for text in texts) > len(texts):
+            return kind
+    return pa.string()
