@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import mmap
+import re
 import stat
 from pathlib import Path
 from typing import Any
@@ -156,6 +157,19 @@ def test_a_second_arrow_implementation_reads_the_same(tmp_path: Path) -> None:
     assert names == state.facts["channels"]
     directions = frame.select("vectors").explode("vectors")["vectors"].to_numpy()
     assert np.array_equal(directions, state.parts["core"].arrays["vectors"])
+
+
+def test_the_example_in_the_format_description_runs(tmp_path: Path) -> None:
+    """The code in DEVELOPERS.md that reads a snapshot without streambasis does so."""
+    text = (Path(__file__).parent.parent / "DEVELOPERS.md").read_text()
+    (code,) = re.findall(r"```python\n(import json\n.*?)```", text, re.DOTALL)
+    basis = streambasis.StreamBasis(["inlet", "Auslaß"])
+    basis.push([3.0, 4.0])
+    save(basis, tmp_path / "state.arrow")
+    found: dict[str, Any] = {"path": str(tmp_path / "state.arrow")}
+    exec(code, found)
+    assert found["state"]["kind"] == "StreamBasis"
+    assert found["directions"] == [{"inlet": 0.6, "Auslaß": 0.8}]
 
 
 def test_sql_reads_the_same(tmp_path: Path) -> None:
