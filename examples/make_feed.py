@@ -71,7 +71,9 @@ REGIME = {
     "power_b_kw": 7.0, "vibration_a_mms": 5.0, "winding_b_c": -5.0,
 }  # fmt: skip
 DRIFT = {"bearing_b_c": 2.5, "noise_db": -2.0}
-"""How much more (in noise per standard deviation) each follows the demand at the end."""
+"""How much more (in noise per standard deviation) each follows the demand after 20,000 samples or
+at the end, whichever is later: a shorter feed drifts as slowly, and so less far."""
+DRIFT_SAMPLES = 20_000
 
 KINDS = {"step": (2, 8.5), "ramp": (1, 16.0), "oscillation": (3, 10.0)}
 """Channels and strength (in noise) of each kind of fault."""
@@ -145,6 +147,7 @@ def make(seed: int, samples: int) -> tuple[np.ndarray, dict[str, Any]]:
     for j, source in enumerate(sources):
         in_noise += source[:, None] * LOADS[:, j]
     progress = np.clip((np.arange(samples) - drift_start) / (samples - drift_start), 0.0, 1.0)
+    progress *= min(1.0, samples / DRIFT_SAMPLES)
     for name, load in DRIFT.items():
         in_noise[:, NAMES.index(name)] += load * progress * sources[0]
     for name, shift in REGIME.items():

@@ -109,9 +109,12 @@ In the folder of --home:
 )
 @click.option(
     "--half-life",
-    type=float,
+    type=click.FloatRange(min=0),
+    default=5000,
+    show_default=True,
     metavar="N",
-    help="Samples after which the basis has forgotten half of what it saw.",
+    help="Samples after which the basis has forgotten half of what it saw, so that slow drift "
+    "is followed; 0 never forgets.",
 )
 @click.option(
     "--adopt-after",
@@ -136,7 +139,7 @@ def watch(
     time: str | None,
     baseline: int,
     false_alarm: float,
-    half_life: float | None,
+    half_life: float,
     adopt_after: int,
     home: Path | None,
     as_json: bool,
@@ -152,7 +155,10 @@ def watch(
 
     feed = open_feed(file, channels=_names(channels), time=time)
     monitor = NoveltyMonitor(
-        feed.columns.channels, baseline=baseline, false_alarm=false_alarm, half_life=half_life
+        feed.columns.channels,
+        baseline=baseline,
+        false_alarm=false_alarm,
+        half_life=half_life or None,
     )
     kept = Home(home) if home is not None else None
     shown = Terminal(sys.stdout, sys.stderr, total=feed.rows, as_json=as_json, quiet=quiet)

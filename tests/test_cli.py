@@ -130,7 +130,7 @@ REFUSED = [
     (["feed.csv"], "300 samples, fewer than the baseline of 2000", cli.FEED),
     (["infinite.csv", "--baseline", "200"], "is not finite", cli.FEED),
     (["feed.csv", "--false-alarm", "2"], "false_alarm=2", cli.USAGE),
-    (["feed.csv", "--half-life", "-1"], "half_life=-1", cli.USAGE),
+    (["feed.csv", "--half-life", "0.5"], "half_life=0.5", cli.USAGE),
     (["feed.csv", "--home", "feed.csv/x"], "feed.csv/x: cannot be written", cli.OUTPUT),
     (["feed.csv", "--home", "full"], "holds an earlier run", cli.OUTPUT),
 ]

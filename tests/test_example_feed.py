@@ -22,7 +22,7 @@ SHIPPED = ROOT / "examples" / "pump_station.csv"
 TRUTH = ROOT / "examples" / "pump_station.truth.json"
 
 MOST_FALSE_EVENTS = 2
-UNSEEN = (1, 2, 3, 5, 8, 13, 21, 34, 55, 89)
+UNSEEN = (1, 2, 3, 5, 8, 13, 21, 34, 55, 128)
 
 
 def load_script() -> ModuleType:
@@ -126,11 +126,14 @@ def test_planted_faults_are_found_on_other_seeds(tmp_path: Path, seed: int) -> N
     assert shortcomings(watch(feed), truth) == []
 
 
-@pytest.mark.parametrize("samples", [12_000, 60_000])
-def test_planted_faults_are_found_at_other_lengths(tmp_path: Path, samples: int) -> None:
-    """The shortest feed allowed and a longer one give up their faults as well."""
+@pytest.mark.parametrize(("seed", "samples"), [(6, 12_000), (128, 12_000), (6, 60_000)])
+def test_planted_faults_are_found_at_other_lengths(tmp_path: Path, seed: int, samples: int) -> None:
+    """The shortest feed allowed and a longer one give up their faults as well.
+
+    Seed 128 once lost all but two: a slow ramp had lifted the limit out of reach.
+    """
     feed = tmp_path / "feed.arrow"
-    truth = make(6, samples, feed)
+    truth = make(seed, samples, feed)
     assert shortcomings(watch(feed), truth) == []
 
 

@@ -17,6 +17,7 @@ from streambasis.monitor.contributions import leading, shares
 from streambasis.monitor.events import COLLECT, Event, History, OpenEvent
 from streambasis.monitor.learning import Learnt
 from streambasis.monitor.limits import SpeLimit, t2_limit
+from streambasis.monitor.precursors import Precursors
 from streambasis.monitor.projection import NO_EVENT, Projection
 from streambasis.monitor.quantiles import chi2_quantile
 from streambasis.monitor.scaling import Scaling
@@ -92,7 +93,7 @@ class Judge:
     Samples are scored against fixed directions up to the end of a block, blocks being cut at the
     same sample numbers however the feed comes in. At its end the basis takes the samples that it
     explains, and the limit those outside events, both late by one persistence window: only then
-    is it known whether an event has begun in them.
+    is it known whether an event has begun in them. Exceedances wait for a quiet run as well.
 
     The newest open event is *forming* while its directions are being learnt, and every sample
     beyond the limit counts to it. Once they explain what it shows, it is *standing*: its
@@ -140,6 +141,7 @@ class Judge:
         )
         self.limit = SpeLimit(settings.limits, settings.false_alarm, settings.memory)
         self.history = History(n, settings.same)
+        self.precursors = Precursors(settings.quiet)
         self.known = StreamBasis(names, inner=weights)
         self.adopted = np.zeros(0, np.int64)
         self.behaviour = np.zeros((0, n))
@@ -338,6 +340,10 @@ class Judge:
         special = np.zeros(size, np.bool_)
         special[[i for i in scored.special if i < size]] = True
         self._pool[rows] &= ~special
+        early = self._pool[rows] & scored.beyond[:size]
+        if early.any():
+            self.precursors.hold(self._number[rows][early], scored.spe[:size][early])
+            self._pool[rows] &= ~early
         if self._projection.known or self._parts:
             special[:] = True
         special |= scored.t2[:size] > self._t2_value
@@ -362,6 +368,7 @@ class Judge:
         event.end_time = int(self._time[rows[-1]])
         self._loose[rows] = False
         self._pool[first:stop] = False
+        self.precursors.claim(event.start)
         self.open.append(event)
         at = len(self.open) - 1
         self._last[at], self._quiet[at], self._taken[at] = self.count - 1, 0, len(rows)
@@ -503,7 +510,8 @@ class Judge:
             z = self._z[:block][fold]
             self.basis.take_many(z * self.scaling.scale + self.scaling.centre)
             self.basis.flush()
-        self.limit.take(self._spe[:block][self._pool[:block]])
+        chance = self.precursors.release(self.count)
+        self.limit.take(np.concatenate([self._spe[:block][self._pool[:block]], chance]))
         for name in BUFFERED:
             array = getattr(self, f"_{name}")
             array[:window] = array[block : block + window].copy()
@@ -541,6 +549,7 @@ class Judge:
             "basis": self.basis.to_state(),
             "limit": self.limit.to_state(),
             "history": self.history.to_state(),
+            "precursors": self.precursors.to_state(),
             "known": self.known.to_state(),
         }
         parts |= {f"event_{i}": event.to_state() for i, event in enumerate(self.open)}
@@ -562,6 +571,7 @@ class Judge:
         judge.basis = PrincipalBasis.from_state(parts["basis"])
         judge.limit = SpeLimit.from_state(parts["limit"])
         judge.history = History.from_state(parts["history"])
+        judge.precursors = Precursors.from_state(parts["precursors"])
         judge.known = StreamBasis.from_state(parts["known"])
         judge.open = [OpenEvent.from_state(parts[f"event_{i}"]) for i in range(facts["open"])]
         judge.count, judge._fill = facts["count"], facts["fill"]
