@@ -1,4 +1,4 @@
-"""The folder that keeps a run: decisions as Arrow files, events as JSON lines."""
+"""The folder that keeps a run: decisions as Arrow files, events as JSON lines, the monitor."""
 
 from __future__ import annotations
 
@@ -11,8 +11,10 @@ from typing import Any
 
 import pyarrow as pa
 
-from streambasis.errors import HomeError
+from streambasis.errors import HomeError, SnapshotFileError
 from streambasis.files import replace_file, write_all
+from streambasis.monitor import NoveltyMonitor
+from streambasis.snapshot import save
 
 SEGMENT_ROWS = 1 << 16
 """Decisions per file, about 4 MB: few files over months, and little held in memory."""
@@ -53,16 +55,24 @@ class Home:
         except OSError as error:
             raise _named(path, error) from None
 
-    def take(self, decisions: pa.Table) -> None:
-        """Keep the decisions of a batch; full segments are written at once."""
+    def take(self, decisions: pa.Table) -> bool:
+        """Keep the decisions of a batch; full segments are written at once.
+
+        Returns
+        -------
+        bool
+            Whether a segment was written.
+        """
         self._pending.append(decisions)
         self._rows += len(decisions)
-        if self._rows >= SEGMENT_ROWS:
-            whole = pa.concat_tables(self._pending)
-            while len(whole) >= SEGMENT_ROWS:
-                self._write(whole.slice(0, SEGMENT_ROWS))
-                whole = whole.slice(SEGMENT_ROWS)
-            self._pending, self._rows = [whole], len(whole)
+        if self._rows < SEGMENT_ROWS:
+            return False
+        whole = pa.concat_tables(self._pending)
+        while len(whole) >= SEGMENT_ROWS:
+            self._write_decisions(whole.slice(0, SEGMENT_ROWS))
+            whole = whole.slice(SEGMENT_ROWS)
+        self._pending, self._rows = [whole], len(whole)
+        return True
 
     def take_event(self, event: Mapping[str, Any]) -> None:
         """Append a closed event."""
@@ -72,10 +82,21 @@ class Home:
         except OSError as error:
             raise _named(self.path, error) from None
 
+    def keep_progress(self, readings: pa.Table) -> None:
+        """Replace the readings of the basis over the run by newer ones."""
+        self._write("progress.arrow", readings)
+
+    def keep_snapshot(self, monitor: NoveltyMonitor) -> None:
+        """Replace the snapshot of the monitor by a newer one."""
+        try:
+            save(monitor, self.path / "state.arrow", mode=READABLE)
+        except SnapshotFileError as error:
+            raise _named(self.path, error) from None
+
     def close(self) -> None:
         """Write what is left and force the events to the disk."""
         if self._rows:
-            self._write(pa.concat_tables(self._pending))
+            self._write_decisions(pa.concat_tables(self._pending))
             self._pending, self._rows = [], 0
         try:
             os.fsync(self._events.fileno())
@@ -83,16 +104,18 @@ class Home:
         except OSError as error:
             raise _named(self.path, error) from None
 
-    def _write(self, decisions: pa.Table) -> None:
+    def _write_decisions(self, decisions: pa.Table) -> None:
+        self._write(f"decisions/{decisions['sample'][0].as_py():012d}.arrow", decisions)
+
+    def _write(self, name: str, table: pa.Table) -> None:
         def fill(descriptor: int) -> None:
             sink = pa.BufferOutputStream()
-            with pa.ipc.new_file(sink, decisions.schema) as file:
-                file.write_table(decisions.combine_chunks())
+            with pa.ipc.new_file(sink, table.schema) as file:
+                file.write_table(table.combine_chunks())
             write_all(descriptor, sink.getvalue())
 
-        first = decisions["sample"][0].as_py()
         try:
-            replace_file(self._decisions / f"{first:012d}.arrow", fill, mode=READABLE)
+            replace_file(self.path / name, fill, mode=READABLE)
         except OSError as error:
             raise _named(self.path, error) from None
 

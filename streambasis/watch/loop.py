@@ -14,6 +14,7 @@ from streambasis.errors import FeedError
 from streambasis.feeds import Batch, Feed
 from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.watch.home import Home
+from streambasis.watch.progress import Progress
 
 
 class Reporter(Protocol):
@@ -103,6 +104,16 @@ class Run:
         self._home = home
         self._adopt_after = adopt_after
         self._opened = self._closed = self._repeats = self._adopted = 0
+        columns = feed.columns
+        clock = "seconds" if columns.unit else "timestamps"
+        self._progress = Progress(
+            {
+                "feed": feed.name,
+                "channels": list(columns.channels),
+                "clock": None if columns.time is None else clock,
+                "adopt_after": adopt_after,
+            }
+        )
 
     def __call__(self, asked: threading.Event) -> Summary:
         """Read the feed to its end, or until asked to stop.
@@ -125,6 +136,7 @@ class Run:
                 first_time = int(batch.times[0]) if first_time is None else first_time
                 last_time = int(batch.times[-1])
             self._take(batch)
+            self._progress.take(self._monitor)
             samples += len(batch)
             self._reporter.advance(samples)
             if asked.is_set():
@@ -137,6 +149,9 @@ class Run:
             )
         monitor.finish()
         self._tell()
+        if self._home is not None:
+            self._home.keep_progress(self._progress.table(monitor))
+            self._home.keep_snapshot(monitor)
         return Summary(
             samples,
             first_time,
@@ -167,8 +182,8 @@ class Run:
     ) -> None:
         at = None if times is None else times[first : first + len(values)].view("datetime64[ns]")
         decisions = self._monitor.push_many(values, at=at)
-        if self._home is not None:
-            self._home.take(decisions)
+        if self._home is not None and self._home.take(decisions):
+            self._home.keep_progress(self._progress.table(self._monitor))
         self._tell()
 
     def _open_events(self) -> list[Event]:
