@@ -14,6 +14,7 @@ if TYPE_CHECKING:
 
 REASONS = ("independent", "dependent", "full", "zero")
 """Why a sample grew the basis or did not; the kernels speak of them by their position here."""
+_NAMES = np.array(REASONS)
 
 
 class Decision(NamedTuple):
@@ -134,5 +135,5 @@ class Scores(_Columns):
 
 def reason_names(codes: NDArray[Any]) -> NDArray[np.str_]:
     """Turn an array of reason codes into an array of their names."""
-    names: NDArray[np.str_] = np.array(REASONS)[codes]
+    names: NDArray[np.str_] = _NAMES[codes]
     return names

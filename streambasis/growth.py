@@ -8,14 +8,23 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from streambasis.decisions import Decision, Decisions, reason_names
+from streambasis.decisions import Decisions, reason_names
 from streambasis.errors import SnapshotError
+from streambasis.kernels import block as blocks
 from streambasis.kernels import growth as kernels
 from streambasis.kernels._jit import entry
 from streambasis.memory import aligned_zeros
 from streambasis.state import State, owned
 
 FIRST_ROWS = 8
+BLOCK_BYTES = 2**21
+"""Size of a block of samples that push_many projects at once, if that is at least LEAST_ROWS."""
+LEAST_ROWS = 64
+"""Samples that are projected at once however long they are: fewer would leave a matrix product as
+slow as reading the directions."""
+MOST_ROWS = 512
+SPARSE = 4
+"""A block is projected if at most one in this many samples before it grew the basis."""
 
 
 class Growth:
@@ -120,19 +129,75 @@ class Growth:
         """Take note of the time of the next sample; a basis that never forgets has no use."""
 
     def push_block(self, samples: NDArray[Any], _at: Any = None) -> Decisions:
-        """Take Euclidean samples that are known to be finite, (m, n), one after another."""
-        records = []
-        for sample in samples:
-            record = self.step(sample)
-            if record[5] == kernels.NEEDS_ROOM:
-                self.make_room()
-                record = self.step(sample)
-            records.append(record)
-        columns = list(zip(*records, strict=True)) or [()] * len(Decision._fields)
-        kinds = [np.int64, float, float, float, bool, *[np.int64] * 5]
-        out = [np.array(c, k) for c, k in zip(columns, kinds, strict=True)]
-        out[5] = reason_names(out[5])
-        return Decisions(*out)
+        """Take Euclidean samples that are known to be finite, (m, n), as if one after another.
+
+        Notes
+        -----
+        Blocks of samples are projected by two matrix products, 4·n·rank flops a sample like a
+        single push, but at the speed of a matrix product. A sample that grows the basis costs a
+        push and a correction of the rest of its block by the new direction; while more than one in
+        ``SPARSE`` samples grows it, samples are pushed one by one. The workspace is bounded by
+        ``BLOCK_BYTES``, or ``LEAST_ROWS`` samples.
+        """
+        count = len(samples)
+        first = self.count
+        floats = np.empty((3, count))
+        whole = np.empty((3, count), np.int64)
+        rows = BLOCK_BYTES // max(1, samples.itemsize * samples.shape[1])
+        rows = min(max(rows, LEAST_ROWS), MOST_ROWS)
+        room: NDArray[Any] = np.empty((min(rows, count), samples.shape[1]), samples.dtype)
+        start, rank, dense = 0, self.rank, self.rank == 0
+        while start < count:
+            stop = min(count, start + (LEAST_ROWS if dense else rows))
+            self._push_rows(
+                samples[start:stop],
+                room[: 0 if dense else stop - start],
+                floats[:, start:stop],
+                whole[:, start:stop],
+            )
+            dense = (self.rank - rank) * SPARSE > stop - start
+            start, rank = stop, self.rank
+        nothing = np.zeros(count, np.int64)
+        return Decisions(
+            sample=np.arange(first, first + count),
+            norm=floats[blocks.NORM],
+            residual=floats[blocks.RESIDUAL],
+            tolerance=floats[blocks.TOLERANCE],
+            grew=whole[blocks.REASON] == kernels.INDEPENDENT,
+            reason=reason_names(whole[blocks.REASON]),
+            rank=whole[blocks.RANK_AFTER],
+            passes=whole[blocks.PASSES],
+            expired=nothing,
+            dropped=nothing.copy(),
+        )
+
+    def _push_rows(
+        self,
+        samples: NDArray[Any],
+        room: NDArray[Any],
+        floats: NDArray[Any],
+        whole: NDArray[Any],
+    ) -> None:
+        """Take one block, with its projections if there is room for them."""
+        measures = np.empty((3, len(room)))
+        if len(room):
+            directions = self.directions
+            with np.errstate(all="ignore"):  # what leaves the range is pushed one by one
+                if samples.dtype.kind == "c":
+                    # a conjugated copy of the samples is smaller than one of the directions
+                    np.conjugate(samples, out=room)
+                    coefficients = room @ directions.T
+                    np.conjugate(coefficients, out=coefficients)
+                else:
+                    coefficients = samples @ directions.T
+                np.matmul(coefficients, directions, out=room)
+            blocks.measure_block(samples, room, coefficients, measures)
+        start = 0
+        while True:
+            start = blocks.decide_block(*self.arrays, samples, room, measures, start, floats, whole)
+            if start == len(samples):
+                return
+            self.make_room()
 
     def to_state(self) -> State:
         """Hand over the arrays as far as they are in use."""
