@@ -284,7 +284,18 @@ class PrincipalBasis:
     def take_many(self, samples: Any) -> None:
         """Take a batch without asking for its scores."""
         with self._lock:
-            self._take(self._checked(samples), fold=True)
+            checked = self._checked(samples)
+            if np.isnan(checked).any():
+                self._take(checked, fold=True)
+                return
+            entered = self._entered(checked)
+            start = 0
+            while start < len(entered):
+                room = int(self._header[kernels.DUE] - self._header[kernels.FILL])
+                piece = entered[start : start + room]
+                self._header[kernels.COUNT] += len(piece)
+                self._append(piece, None)
+                start += len(piece)
 
     def flush(self) -> None:
         """Fold the samples that wait for their block to fill."""
