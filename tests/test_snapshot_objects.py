@@ -22,7 +22,7 @@ from streambasis.state import State
 CHANNELS = 6
 ANY_LENGTH = {
     ("PrincipalBasis", "block"),
-    ("Judge", "first_vectors"),
+    ("Model", "first_vectors"),
     ("SpeLimit", "excesses"),
     ("SpeLimit", "roots"),
     ("OpenEvent", "rows"),

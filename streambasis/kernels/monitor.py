@@ -8,19 +8,43 @@ NOTHING, OPENED, COLLECTED, CLOSED = 0, 1, 2, 3
 
 
 @kernel(reassociate=True)
-def standardize(samples, centre, inverse, reach, out):
+def standardize(samples, centre, inverse, reach, freeze, patience, held, runs, out):
     """Write samples about their centre and in noise units to ``out``; NaN stays NaN.
 
-    A value further than ``reach`` from the centre of its channel is put there.
+    Parameters
+    ----------
+    samples, out : (m, n)
+        Samples in channel units, and where they are written.
+    centre, inverse : (n,)
+        What is taken off, and what is multiplied by.
+    reach : (n,)
+        A value further than this from the centre, in noise units, is put there.
+    freeze, patience : (n,)
+        Where a channel is put, in noise units, that has repeated a value so many times or more.
+    held, runs : (n,)
+        Last value of each channel and how many times it has come again; updated.
+
+    Returns
+    -------
+    int
+        How many values are NaN.
     """
+    gaps = 0
     for i in range(samples.shape[0]):
         for j in range(samples.shape[1]):
-            value = (samples[i, j] - centre[j]) * inverse[j]
+            sample = samples[i, j]
+            value = (sample - centre[j]) * inverse[j]
             if value > reach[j]:
                 value = reach[j]
             elif value < -reach[j]:
                 value = -reach[j]
+            runs[j] = runs[j] + 1 if sample == held[j] else 0
+            held[j] = sample
+            if runs[j] >= patience[j]:
+                value = freeze[j]
+            gaps += math.isnan(value)
             out[i, j] = value
+    return gaps
 
 
 @kernel(reassociate=True)

@@ -14,9 +14,10 @@ from numpy.typing import ArrayLike, NDArray
 from streambasis.basis import StreamBasis
 from streambasis.errors import SampleError, SettingError, SnapshotError
 from streambasis.monitor.events import Event
-from streambasis.monitor.judging import Judge, Settings
+from streambasis.monitor.judging import Judge
 from streambasis.monitor.learning import learn
 from streambasis.monitor.limits import METHODS
+from streambasis.monitor.model import Model, Settings
 from streambasis.monitor.verdict import Columns, Verdict
 from streambasis.principal import PrincipalBasis
 from streambasis.samples import Channels, many_samples, one_sample
@@ -47,10 +48,11 @@ class NoveltyMonitor:
     ----------
     channels : int or sequence of str
         How many channels, or their distinct names.
-    baseline : int
-        The first samples, which set centre and noise of each channel, the basis and the limits;
-        they should show ordinary running. A sample with fewer than half of its channels is not
-        counted.
+    baseline : int, array_like of shape (m, n), or Arrow
+        Samples that set centre and noise of each channel, the basis and the limits; they should
+        show ordinary running. As a number: so many at the start of the feed, which are not
+        judged. As samples: these, such as the rows of a file, and the feed is judged from its
+        first sample. A sample with fewer than half of its channels is not counted.
     false_alarm : float
         Probability with which an ordinary sample exceeds a limit.
     limits : {"tail", "box", "jackson-mudholkar"}
@@ -90,7 +92,7 @@ class NoveltyMonitor:
         self,
         channels: int | Iterable[str],
         *,
-        baseline: int = 2000,
+        baseline: int | Any = 2000,
         false_alarm: float = 1e-4,
         limits: str = "tail",
         rank: int | None = None,
@@ -102,8 +104,15 @@ class NoveltyMonitor:
     ) -> None:
         self._channels = Channels(channels)
         n = self._channels.count
-        if not isinstance(baseline, int | np.integer) or baseline < LEAST_BASELINE:
-            raise SettingError(f"baseline={baseline!r}: a whole number of samples, at least 32")
+        given = None
+        if not isinstance(baseline, int | np.integer):
+            given = many_samples(baseline, self._channels, FLOAT64, missing=True)
+            given = given[_usable(given)]
+            baseline = len(given)
+        if isinstance(baseline, bool) or baseline < LEAST_BASELINE:
+            raise SettingError(
+                f"baseline={baseline}: at least {LEAST_BASELINE} samples, or those of a file"
+            )
         if not 0.0 < false_alarm <= 0.2:
             raise SettingError(f"false_alarm={false_alarm}: a probability above 0 and up to 0.2")
         if limits not in METHODS:
@@ -135,6 +144,8 @@ class NoveltyMonitor:
         self._count = 0
         self._judge: Judge | None = None
         self._lock = threading.Lock()
+        if given is not None:
+            self._learn(given, 0)
 
     @property
     def channels(self) -> tuple[str, ...]:
@@ -159,30 +170,31 @@ class NoveltyMonitor:
     @property
     def rank(self) -> int:
         """Directions of the basis; 0 during the baseline."""
-        return self._judge.rank if self._judge else 0
+        return self._judge.model.rank if self._judge else 0
 
     @property
     def noise(self) -> float:
         """Variance per residual dimension in units of each channel's noise; NaN at first."""
-        return self._judge.basis.noise if self._judge else math.nan
+        return self._judge.model.basis.noise if self._judge else math.nan
 
     @property
     def drift(self) -> float:
         """Largest principal angle between the baseline's subspace and today's, in radians."""
         with self._lock:
-            if self._judge is None or self._judge.rank == 0:
+            if self._judge is None or self._judge.model.rank == 0:
                 return 0.0
-            return _largest_angle(self._judge.first_vectors, self._judge.vectors)
+            model = self._judge.model
+            return _largest_angle(model.first_vectors, model.vectors)
 
     @property
     def basis(self) -> PrincipalBasis:
         """The basis, in channel units and orthonormal in units of each channel's noise."""
-        return self._need().basis
+        return self._need().model.basis
 
     @property
     def known(self) -> StreamBasis:
         """The basis of adopted behaviour, in the same units."""
-        return self._need().known
+        return self._need().model.known
 
     @property
     def events(self) -> list[Event]:
@@ -200,7 +212,7 @@ class NoveltyMonitor:
         time = None if at is None else np.array([nanoseconds(at)])
         with self._lock:
             columns = self._take(checked[None], time)
-            known = self._judge.shown(checked) if self._judge else ()
+            known = self._judge.model.shown(checked) if self._judge else ()
         gaps = np.flatnonzero(np.isnan(checked))
         return columns.verdict(tuple(self.channels[i] for i in gaps), known)
 
@@ -223,17 +235,39 @@ class NoveltyMonitor:
 
     def _learn_from(self, samples: NDArray[np.float64]) -> int:
         """Take samples for the baseline; return how many."""
-        usable = 2 * np.count_nonzero(~np.isnan(samples), axis=1) >= samples.shape[1]
         needed = self._baseline - len(self._first)
-        positions = np.flatnonzero(usable)[:needed]
+        positions = np.flatnonzero(_usable(samples))[:needed]
         self._first = np.concatenate([self._first, samples[positions]])
         if len(self._first) < self._baseline:
             return len(samples)
-        learnt = learn(self._first, self._rank, self._most)
         stop = int(positions[-1]) + 1
-        self._judge = Judge(self.channels, self._settings, learnt, self._count + stop)
+        self._learn(self._first, self._count + stop)
         self._first = np.zeros((0, samples.shape[1]))
         return stop
+
+    def _learn(self, samples: NDArray[np.float64], first: int) -> None:
+        """Learn from a baseline; sample ``first`` is the first to be judged."""
+        learnt = learn(samples, self._rank, self._most)
+        self._judge = Judge(Model(self.channels, self._settings, learnt), first)
+
+    def fresh(self) -> Self:
+        """Return a monitor that has learnt what this one has, at the start of another feed.
+
+        Basis, limits and adopted behaviour are taken over; samples are counted from 0, events on
+        from here, and the events so far are not compared with. With :func:`~streambasis.load` a
+        snapshot so serves as the baseline of another run.
+        """
+        state = self.to_state()
+        with self._lock:
+            number = self._need().history.next
+        core = state.parts.pop("core")
+        state.facts["count"] = 0
+        monitor = type(self).from_state(state)
+        model = Model.from_state(self.channels, self._settings, core.parts["model"])
+        model.restart()
+        monitor._judge = Judge(model, 0)
+        monitor._judge.history.next = number
+        return monitor
 
     def finish(self) -> None:
         """Close what is open, at the end of a feed."""
@@ -262,7 +296,7 @@ class NoveltyMonitor:
     @property
     def adopted(self) -> tuple[int, ...]:
         """The event that each adopted direction comes from, one per column of the loadings."""
-        return tuple(self._judge.adopted.tolist()) if self._judge else ()
+        return tuple(self._judge.model.adopted.tolist()) if self._judge else ()
 
     def loadings(self, samples: Any) -> NDArray[np.float64]:
         """Return how much of each adopted direction is in samples.
@@ -279,31 +313,37 @@ class NoveltyMonitor:
         """
         checked = many_samples(samples, self._channels, FLOAT64, missing=True)
         with self._lock:
-            judge = self._need()
-            rows = [judge.loadings(row)[0] for row in judge.standard(checked)]
-        return np.array(rows).reshape(len(checked), len(judge.adopted))
+            model = self._need().model
+            rows = [model.loadings(row)[0] for row in checked]
+        return np.array(rows).reshape(len(checked), len(model.adopted))
 
     def contributions(self, sample: ArrayLike) -> dict[str, float]:
         """Return each channel's share in the SPE of one sample, largest first; nothing changes."""
         checked = one_sample(sample, self._channels, FLOAT64, missing=True)
         with self._lock:
-            parts = self._need().shares(checked[None])
+            parts = self._need().model.shares(checked)
         return {self.channels[i]: float(parts[i]) for i in np.argsort(-parts, kind="stable")}
 
     @property
     def scale(self) -> NDArray[np.float64]:
         """Standard deviation of each channel's noise, in its units, (n,)."""
-        return owned(self._need().scaling.scale)
+        return owned(self._need().model.scaling.scale)
 
     @property
     def constant(self) -> tuple[str, ...]:
         """Channels that held one value all through the baseline; any movement is novel."""
-        return self._named(self._need().scaling.constant)
+        return self._named(self._need().model.scaling.constant)
 
     @property
     def nearly_constant(self) -> tuple[str, ...]:
         """Channels that held one value for half of the baseline or more, or moved by rounding."""
-        return self._named(self._need().scaling.nearly)
+        return self._named(self._need().model.scaling.nearly)
+
+    @property
+    def frozen(self) -> tuple[str, ...]:
+        """Channels that now repeat one value, far longer than ever in the baseline."""
+        with self._lock:
+            return self._named(self._judge.model.frozen) if self._judge else ()
 
     def _named(self, which: NDArray[np.bool_]) -> tuple[str, ...]:
         return tuple(self.channels[i] for i in np.flatnonzero(which))
@@ -355,6 +395,11 @@ class NoveltyMonitor:
                 f"the baseline is not complete: {len(self._first)} of {self._baseline} samples"
             )
         return self._judge
+
+
+def _usable(samples: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Return which samples have half of their channels or more."""
+    return np.asarray(2 * np.count_nonzero(~np.isnan(samples), axis=1) >= samples.shape[1])
 
 
 def _largest_angle(a: NDArray[Any], b: NDArray[Any]) -> float:

@@ -24,6 +24,12 @@ deviations: what it has done before is not news, though it does it seldom."""
 ROUNDING = 64.0 * float(np.finfo(np.float64).eps)
 """A spread below this part of the centre is the rounding of a constant."""
 
+FREEZE = 4
+LEAST_FREEZE = 32
+"""A channel counts as frozen when it repeats its value four times as often as ever in the baseline,
+and so many times at least: a run of independent repetitions that long has about the fourth power
+of the probability of the longest."""
+
 FEW_CHANNELS = 20
 """Up to here the rank is chosen by BIC over fitted models: the eigenvalue rules need a tail of
 noise eigenvalues that few channels do not give."""
@@ -59,6 +65,8 @@ class Scaling:
     constant, nearly : ndarray of bool, shape (n,)
         Channels that held one value all through the baseline, and those that held one value for
         half of it or more, or varied by no more than rounding.
+    patience : ndarray of int64, shape (n,)
+        Repetitions of a value after which the channel counts as frozen.
     """
 
     centre: NDArray[np.float64]
@@ -66,6 +74,7 @@ class Scaling:
     rank: int
     constant: NDArray[np.bool_]
     nearly: NDArray[np.bool_]
+    patience: NDArray[np.int64]
 
 
 def fit_scaling(
@@ -108,7 +117,9 @@ def fit_scaling(
         noise, found = noise_variances(deviations[:, moving] / spread[moving], rank, most)
         scale[moving] = spread[moving] * np.sqrt(noise)
         scale[nearly] = np.maximum(scale[nearly], spread[nearly])
-    scaling = Scaling(centre, scale, found if rank is None else rank, constant, nearly)
+    patience = np.maximum(LEAST_FREEZE, FREEZE * longest_runs(samples))
+    patience[constant | nearly] = np.iinfo(np.int64).max
+    scaling = Scaling(centre, scale, found if rank is None else rank, constant, nearly, patience)
     deviations[:, ~moving] = 0.0
     deviations /= scale
     return scaling, deviations
@@ -134,6 +145,23 @@ def robust_start(
         spread[nearly] = np.nanmax(away[:, nearly], axis=0) / SEEN
     spread[spread <= ROUNDING * np.abs(centre)] = 0.0
     return centre, spread, constant, nearly
+
+
+def longest_runs(samples: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Return how many times each channel, at most, repeated its value without a break, (n,).
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> longest_runs(np.array([[1.0, 2.0], [1.0, 3.0], [1.0, 3.0], [2.0, np.nan]]))
+    array([2, 1])
+    """
+    longest = np.zeros(samples.shape[1], np.int64)
+    current = np.zeros(samples.shape[1], np.int64)
+    for same in samples[1:] == samples[:-1]:
+        current = np.where(same, current + 1, 0)
+        np.maximum(longest, current, out=longest)
+    return longest
 
 
 def most_directions(channels: int) -> int:

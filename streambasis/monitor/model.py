@@ -1,0 +1,400 @@
+"""What is ordinary for a feed: basis, limits and adopted behaviour, and scoring by them."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from streambasis.basis import StreamBasis
+from streambasis.errors import SnapshotError
+from streambasis.kernels.monitor import standardize, take_off
+from streambasis.monitor.contributions import shares
+from streambasis.monitor.learning import Learnt
+from streambasis.monitor.limits import SpeLimit, t2_limit
+from streambasis.monitor.projection import Projection
+from streambasis.monitor.quantiles import chi2_quantile
+from streambasis.monitor.scaling import Scaling
+from streambasis.principal import WHOLE, PrincipalBasis
+from streambasis.state import State, owned
+
+NEARLY = 0.01
+"""An open event explains a sample within this squared sine of its directions, whatever the limit:
+its directions are known no better than that when it suddenly grows."""
+
+FOLLOW = 0.1
+"""Relative change in the number of samples behind the basis at which the T² limit follows."""
+
+MOST_PATTERNS = 16
+"""Most patterns of missing channels whose directions are kept ready."""
+
+REACH = 1e8
+"""A value further than this many noise standard deviations is scored as if it stood there: no
+answer depends on more, and no sum of squares can overflow."""
+
+MOVED = 1.5
+"""SPE over its limit that any movement of a constant channel alone makes, and a frozen channel at
+least. The noise of neither is known: that it happened is news, how far it went says nothing."""
+
+
+@dataclass(frozen=True, slots=True)
+class Settings:
+    """What a monitor goes by after its baseline; described at ``NoveltyMonitor``."""
+
+    false_alarm: float
+    limits: str
+    half_life: float | None
+    opens: int
+    window: int
+    quiet: int
+    same: float
+    block: int
+
+    @property
+    def memory(self) -> float:
+        """Samples over which the limit remembers."""
+        return math.inf if self.half_life is None else max(20_000.0, 20.0 * self.half_life)
+
+
+@dataclass(slots=True)
+class Scored:
+    """Samples in noise units, split over the directions and compared with the limit.
+
+    Attributes
+    ----------
+    z : ndarray of float64, shape (m, n)
+        The samples.
+    coordinates : ndarray of float64, shape (m, q)
+        Along the directions of the projection.
+    spe, rest, t2, limit : ndarray of float64, shape (m,)
+        Squared prediction error, what of it standing events leave, T², and the limit; NaN for a
+        sample that cannot be judged.
+    judged, beyond : ndarray of bool, shape (m,)
+        Whether it can be, and whether standing events leave something beyond the limit.
+    shows : ndarray of bool, shape (m, events)
+        Whether each standing event shows in the sample.
+    special : dict of int to Projection
+        The projection of each sample with gaps, by row.
+    """
+
+    z: NDArray[np.float64]
+    coordinates: NDArray[np.float64]
+    spe: NDArray[np.float64]
+    rest: NDArray[np.float64]
+    t2: NDArray[np.float64]
+    limit: NDArray[np.float64]
+    judged: NDArray[np.bool_]
+    beyond: NDArray[np.bool_]
+    shows: NDArray[np.bool_]
+    special: dict[int, Projection]
+
+
+class Model:
+    """What is ordinary, as learnt from the baseline and from explained samples since.
+
+    Parameters
+    ----------
+    names : tuple of str
+        The channels.
+    settings : Settings
+        What to go by.
+    learnt : Learnt
+        What the baseline taught.
+    """
+
+    def __init__(self, names: tuple[str, ...], settings: Settings, learnt: Learnt) -> None:
+        self.scaling = learnt.scaling
+        self._set_up(names, settings)
+        self.basis.take_many(learnt.z * self.scaling.scale + self.scaling.centre)
+        self.basis.flush()
+        self.limit.start(learnt.spe, learnt.roots)
+        self.refresh([])
+        self.first_vectors = self.vectors
+
+    def _set_up(self, names: tuple[str, ...], settings: Settings) -> None:
+        """Make everything that the scaling and the settings determine."""
+        n = len(names)
+        self.names = names
+        self.settings = settings
+        self.inverse = 1.0 / self.scaling.scale
+        weights = self.inverse**2
+        self.basis = PrincipalBasis(
+            names,
+            rank=max(self.scaling.rank, 1),
+            centre=True,
+            half_life=settings.half_life,
+            block=settings.block if n <= WHOLE else None,
+            inner=weights,
+        )
+        self.limit = SpeLimit(settings.limits, settings.false_alarm, settings.memory)
+        self.known = StreamBasis(names, inner=weights)
+        self.adopted = np.zeros(0, np.int64)
+        self.behaviour = np.zeros((0, n))
+        self.t2_limit, self._t2_count = math.inf, 0.0
+        # values and lengths of the runs that channels are in
+        self._held, self._runs = np.full(n, np.nan), np.zeros(n, np.int64)
+        self._reach, self._freeze = np.full(n, REACH), np.zeros(n)
+
+    @property
+    def rank(self) -> int:
+        """Directions of the basis; a feed whose channels share nothing has none."""
+        return self.basis.rank if self.scaling.rank else 0
+
+    @property
+    def free(self) -> int:
+        """Dimensions that a residual has with nothing but the basis and what is known taken off."""
+        moving = int(np.count_nonzero(~self.scaling.constant))
+        return moving - len(self.vectors) - self.known.rank
+
+    @property
+    def frozen(self) -> NDArray[np.bool_]:
+        """Channels that have repeated one value far longer than ever in the baseline, (n,)."""
+        return self._runs >= self.scaling.patience
+
+    def refresh(self, standing: list[NDArray[np.float64]]) -> None:
+        """Read the basis as it stands, and let what follows from it follow."""
+        self.vectors = np.ascontiguousarray(self.basis.vectors[: self.rank] * self.inverse)
+        self.energies = self.basis.energies[: self.rank]
+        self.mean = (self.basis.mean - self.scaling.centre) * self.inverse
+        count = self.basis.effective_count
+        if abs(count - self._t2_count) > FOLLOW * self._t2_count:
+            self.t2_limit = t2_limit(self.rank, count, self.settings.false_alarm)
+            self._t2_count = count
+        self._stand_out()
+        self.project(standing)
+
+    def _stand_out(self) -> None:
+        """Find where constant channels that move, and channels that freeze, are put.
+
+        A frozen channel is put beyond three standard deviations of what the basis may expect of
+        it, so that it stands out whatever the other channels do.
+        """
+        squares = self.vectors**2
+        own = np.maximum(1.0 - squares.sum(axis=0), 1e-6)
+        floor = MOVED * self.limit.value
+        self._freeze = self.mean + np.sqrt(floor / own) + 3.0 * np.sqrt(self.energies @ squares)
+        self._reach[self.scaling.constant] = math.sqrt(floor)
+
+    def project(self, standing: list[NDArray[np.float64]]) -> None:
+        """Set up the directions that samples are split over, those of standing events last."""
+        self._standing = standing
+        known = np.ascontiguousarray(self.known.vectors * self.inverse)
+        events = np.vstack([np.zeros((0, len(self.names))), *standing])
+        self._directions = known, self.vectors, events, self.energies, self.mean
+        self._patterns: dict[bytes, tuple[Projection, float]] = {}
+        self.projection = Projection(*self._directions)
+
+    @property
+    def parts(self) -> list[slice]:
+        """Where the directions of each standing event lie, counted from the first of them."""
+        ends = np.cumsum([len(directions) for directions in self._standing]).tolist()
+        return [slice(e - len(d), e) for e, d in zip(ends, self._standing, strict=True)]
+
+    def standard(
+        self, samples: NDArray[np.float64], out: NDArray[np.float64], *, follow: bool
+    ) -> bool:
+        """Write samples, (m, n), about their centre and in noise units to ``out``.
+
+        ``follow`` says that they are the next of the feed, so that frozen channels are told.
+        Returns whether a value is missing.
+        """
+        held, runs = (self._held, self._runs) if follow else (self._held.copy(), self._runs.copy())
+        gaps: int = standardize(
+            samples, self.scaling.centre, self.inverse, self._reach, self._freeze,
+            self.scaling.patience, held, runs, out,
+        )  # fmt: skip
+        return gaps > 0
+
+    def score(self, z: NDArray[np.float64], *, gaps: bool) -> Scored:
+        """Split samples over the directions and compare what is left with the limit."""
+        m = len(z)
+        projection, parts = self.projection, self.parts
+        coordinates = np.empty((m, len(projection.directions)))
+        spe, rest, t2 = np.empty(m), np.empty(m), np.empty(m)
+        projection.score(z, coordinates, spe, rest, t2)
+        limit = np.full(m, self.limit.value)
+        judged = np.ones(m, np.bool_)
+        special: dict[int, Projection] = {}
+        for i in np.flatnonzero(np.isnan(z).any(axis=1)).tolist() if gaps else ():
+            special[i], limit[i] = self.pattern(~np.isnan(z[i]))
+            one = slice(i, i + 1)
+            special[i].score(z[one], coordinates[one], spe[one], rest[one], t2[one])
+            if np.isnan(limit[i]):
+                judged[i] = False
+                spe[i] = rest[i] = t2[i] = np.nan
+        beyond = rest > limit
+        shows = np.zeros((m, len(parts)), np.bool_)
+        if parts:
+            along = coordinates[:, projection.first :] ** 2
+            beyond &= rest > NEARLY * along.sum(axis=1)
+            floor = np.minimum(rest, self.limit.mean)
+            for j, part in enumerate(parts):
+                shows[:, j] = floor + along[:, part].sum(axis=1) > limit
+        return Scored(z, coordinates, spe, rest, t2, limit, judged, beyond, shows, special)
+
+    def pattern(self, observed: NDArray[np.bool_]) -> tuple[Projection, float]:
+        """Return the directions as the observed channels show them, and the limit for those.
+
+        The limit is that of all channels in proportion to the quantiles of chi-squared variables
+        with the degrees of freedom left; NaN where fewer than half of the channels are observed or
+        no freedom is left.
+        """
+        key = observed.tobytes()
+        if key not in self._patterns:
+            if len(self._patterns) == MOST_PATTERNS:
+                self._patterns.clear()
+            projection = Projection(*self._directions, observed)
+            moving = ~self.scaling.constant
+            free = int(np.count_nonzero(observed & moving)) - projection.seen
+            full = int(np.count_nonzero(moving)) - self.projection.seen
+            value = math.nan
+            if free > 0 and 2 * int(observed.sum()) >= len(observed):
+                p = self.settings.false_alarm
+                value = self.limit.value * chi2_quantile(p, free) / chi2_quantile(p, full)
+            self._patterns[key] = projection, value
+        return self._patterns[key]
+
+    def residuals(
+        self, scored: Scored, picked: NDArray[np.int64], event: slice
+    ) -> NDArray[np.float64]:
+        """Return what the rows picked have outside all directions but those of one event."""
+        out = self.projection.residuals(scored.z[picked], scored.coordinates[picked], event)
+        for position, i in enumerate(picked.tolist()) if scored.special else ():
+            if i in scored.special:
+                one = slice(i, i + 1)
+                out[position] = scored.special[i].residuals(
+                    scored.z[one], scored.coordinates[one], event
+                )[0]
+        return out
+
+    def clean(self, scored: Scored, which: NDArray[np.bool_]) -> None:
+        """Make rows of ``scored.z`` fit to be folded into the basis, in place.
+
+        Adopted behaviour and standing events are taken off, missing values filled in with what the
+        basis expects, and coordinates beyond the T² limit drawn in to it.
+        """
+        projection = self.projection
+        odd = which & (scored.t2 > self.t2_limit)
+        odd[list(scored.special)] = which[list(scored.special)]
+        count = len(projection.directions)
+        if projection.known or count > projection.first:
+            rows = np.flatnonzero(which & ~odd)
+            z, coordinates = scored.z[rows], scored.coordinates[rows]
+            take_off(z, coordinates, projection.directions, 0, projection.known)
+            take_off(z, coordinates, projection.directions, projection.first, count)
+            scored.z[rows] = z
+        for i in np.flatnonzero(odd).tolist():
+            scored.z[i] = scored.special.get(i, projection).plain(
+                scored.z[i], scored.coordinates[i], float(scored.t2[i]), self.t2_limit
+            )
+
+    def fold(self, z: NDArray[np.float64]) -> None:
+        """Take samples in noise units, fit to be folded, into the basis."""
+        if len(z):
+            rows = z * self.scaling.scale
+            rows += self.scaling.centre
+            self.basis.take_many(rows)
+            self.basis.flush()
+
+    def adopt(self, number: int, directions: NDArray[np.float64]) -> None:
+        """Take directions for known behaviour."""
+        for direction in directions:
+            self.known.push(direction * self.scaling.scale)
+        self.behaviour = np.vstack([self.behaviour, directions])
+        self.adopted = np.concatenate([self.adopted, np.full(len(directions), number)])
+
+    def restart(self) -> None:
+        """Begin another feed: no channel has repeated a value in it."""
+        self._held[:] = np.nan
+        self._runs[:] = 0
+
+    def loadings(
+        self, sample: NDArray[np.float64]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Return how much of each adopted direction is in a sample, and the standard errors.
+
+        Least squares on the observed channels, together with the basis.
+        """
+        z = np.empty((1, len(sample)))
+        self.standard(sample[None], z, follow=False)
+        seen = ~np.isnan(sample)
+        rows = np.vstack([self.behaviour, self.vectors])[:, seen]
+        inverse = np.linalg.pinv(rows.T, rcond=1e-6)[: len(self.behaviour)]
+        return inverse @ (z[0] - self.mean)[seen], np.sqrt(np.sum(inverse**2, axis=1))
+
+    def shown(self, sample: NDArray[np.float64]) -> tuple[int, ...]:
+        """Return the adopted events whose behaviour shows in a sample, (n,)."""
+        if not len(self.adopted):
+            return ()
+        amounts, errors = self.loadings(sample)
+        chance = self.settings.false_alarm / len(self.adopted)
+        floor = errors * math.sqrt(self.basis.noise * chi2_quantile(chance, 1.0))
+        return tuple(sorted(set(self.adopted[np.abs(amounts) > floor].tolist())))
+
+    def shares(self, sample: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Return each channel's share in the SPE of a sample, (n,)."""
+        z = np.empty((1, len(sample)))
+        self.standard(sample[None], z, follow=False)
+        observed = ~np.isnan(sample)
+        projection = self.projection if observed.all() else self.pattern(observed)[0]
+        inside = projection.directions[: projection.first]
+        residual = np.where(observed, z - self.mean, 0.0)
+        residual -= (residual @ inside.T) @ inside
+        return shares(residual, inside, 1, self.basis.noise)
+
+    def to_state(self) -> State:
+        """Hand over everything needed to go on."""
+        facts = {
+            "rank": self.scaling.rank,
+            "t2_limit": self.t2_limit,
+            "t2_count": self._t2_count,
+        }
+        given = ("centre", "scale", "constant", "nearly", "patience")
+        arrays = {name: owned(getattr(self.scaling, name)) for name in given}
+        # vectors, energies and mean may be older than the basis, which folds what waited for its
+        # block when it is saved: the samples of this block are judged by these to its end
+        held = ("adopted", "behaviour", "first_vectors", "vectors", "energies", "mean")
+        arrays |= {name: owned(getattr(self, name)) for name in held}
+        arrays |= {"held": owned(self._held), "runs": owned(self._runs)}
+        parts = {
+            "basis": self.basis.to_state(),
+            "limit": self.limit.to_state(),
+            "known": self.known.to_state(),
+        }
+        return State("Model", facts, arrays, parts)
+
+    @classmethod
+    def from_state(cls, names: tuple[str, ...], settings: Settings, state: State) -> Model:
+        """Build a model that goes on where the state was taken; standing events are to follow."""
+        model = cls.__new__(cls)
+        facts, parts, n = state.facts, state.parts, len(names)
+        model.scaling = Scaling(
+            state.take("centre", np.float64, (n,), finite=True),
+            state.take("scale", np.float64, (n,), finite=True),
+            facts["rank"],
+            state.take("constant", np.bool_, (n,)),
+            state.take("nearly", np.bool_, (n,)),
+            state.take("patience", np.int64, (n,)),
+        )
+        if not (model.scaling.scale > 0).all():
+            raise SnapshotError("a channel of the monitor has a scale that is not positive")
+        model._set_up(names, settings)
+        model.basis = PrincipalBasis.from_state(parts["basis"])
+        model.limit = SpeLimit.from_state(parts["limit"])
+        model.known = StreamBasis.from_state(parts["known"])
+        if {names} != {model.basis.channels, model.known.channels}:
+            raise SnapshotError("the bases of the monitor are of other channels")
+        model.t2_limit, model._t2_count = facts["t2_limit"], facts["t2_count"]
+        model.adopted = state.take("adopted", np.int64, (None,))
+        model.behaviour = state.take("behaviour", np.float64, (len(model.adopted), n))
+        model.first_vectors = state.take("first_vectors", np.float64, (None, n))
+        model.vectors = state.take("vectors", np.float64, (None, n))
+        model.energies = state.take("energies", np.float64, (len(model.vectors),))
+        model.mean = state.take("mean", np.float64, (n,), finite=True)
+        model._held = state.take("held", np.float64, (n,))
+        model._runs = state.take("runs", np.int64, (n,))
+        model._stand_out()
+        model.project([])
+        return model
