@@ -69,5 +69,6 @@ class Precursors:
     def from_state(cls, state: State) -> Precursors:
         """Build one that goes on where the state was taken."""
         held = cls(state.facts["quiet"])
-        held.hold(state.arrays["numbers"], state.arrays["values"])
+        numbers = state.take("numbers", np.int64, (None,))
+        held.hold(numbers, state.take("values", np.float64, numbers.shape, finite=True))
         return held
