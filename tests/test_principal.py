@@ -12,6 +12,8 @@ from streambasis.audit import ORTHOGONALITY_LIMIT
 from streambasis.samples import DTYPES
 from tests.reference_principal import batch, noisy_feed, normal, sine
 
+pytestmark = pytest.mark.kernels
+
 ROUNDING = {"float32": 2e-5, "float64": 1e-10, "complex64": 2e-5, "complex128": 1e-10}
 
 

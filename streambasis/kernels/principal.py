@@ -48,7 +48,7 @@ def score_sample(sample, mean, directions, spreads, header, residual, coefficien
     left = norm(residual)
     t2 = 0.0
     for j in range(rank):
-        ratio = math.ldexp(abs(coefficients[j]) / spreads[j], exponent - header[EXPONENT])
+        ratio = math.ldexp(abs(coefficients[j]) / spreads[j], int(exponent - header[EXPONENT]))
         t2 += ratio * ratio
     return (
         math.ldexp(length, exponent),

@@ -33,7 +33,8 @@ def exponent_of_bits(largest, mantissa, bias, top):
         while largest >> (mantissa - 1) == 0:
             largest = largest << 1
             exponent -= 1
-    return exponent, True
+    # as plain Python, where this is a NumPy integer, math.ldexp would refuse it
+    return int(exponent), True
 
 
 @kernel()
