@@ -34,6 +34,9 @@ class Audit(NamedTuple):
         Directions held.
     samples : int
         Samples seen.
+    uncovered : int
+        Samples beyond their tolerance that the basis does not answer for, since its capacity was
+        reached when they came.
     """
 
     orthogonality: float
@@ -42,6 +45,7 @@ class Audit(NamedTuple):
     renewals: int
     rank: int
     samples: int
+    uncovered: int = 0
 
 
 def unit_roundoff(dtype: np.dtype[Any]) -> float:

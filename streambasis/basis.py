@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Iterable
+from operator import index
 from typing import Any, Self
 
 import numpy as np
@@ -16,12 +17,9 @@ from streambasis.errors import SampleError, SettingError
 from streambasis.growth import Growth
 from streambasis.inner import Inner, inner_of
 from streambasis.kernels import growth as kernels
+from streambasis.projecting import powers_taken_out, scaled_rows, two_passes
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import State
-
-ROUNDING_FLOOR = 8.0
-"""A relative tolerance below this many machine epsilons acts as that: one Gram-Schmidt pass leaves
-a dependent sample with a residual of a few epsilons, which is rounding and no direction."""
 
 POLICIES = {
     "criterion": kernels.CRITERION,
@@ -39,11 +37,15 @@ class StreamBasis:
     ----------
     channels : int or sequence of str
         How many channels, or their distinct names.
-    rtol, atol : float
-        A sample grows the basis when ``|residual| > max(atol, rtol·|sample|)``. ``rtol=None`` is
-        the square root of the machine epsilon; a value below 8 epsilons acts as 8 epsilons.
+    rtol : float, optional
+        A sample grows the basis when ``|residual| > max(atol, rtol·|sample|)``; 0 <= rtol < 1.
+        None stands for the square root of the machine epsilon. A value below the rounding floor,
+        ``max(8, sqrt(rank))`` machine epsilons, acts as that: a residual there is rounding.
+    atol : float
+        In the units of the norm.
     capacity : int, optional
-        Most directions kept; the number of channels where not given.
+        Most directions kept; the number of channels where not given. A sample beyond it is
+        rejected with reason ``"full"`` and counted in the audit as uncovered.
     window : int, optional
         Samples kept; None keeps what was learned for ever.
     span : float, datetime.timedelta or numpy.timedelta64, optional
@@ -51,12 +53,43 @@ class StreamBasis:
     dtype : str or dtype
         float32, float64, complex64 or complex128.
     inner : None, (n,) positive weights or (n, n) Hermitian positive definite matrix
-        The inner product.
+        The inner product in which norms, residuals and tolerances are measured and directions are
+        orthonormal.
+    reorthogonalize : {"criterion", "never", "always"}
+        For study. "criterion" makes a second pass where rounding would show (Giraud & Langou 2003),
+        "never" is plain modified Gram-Schmidt, which loses orthogonality on near dependent samples,
+        "always" makes two passes over every sample.
 
     Raises
     ------
     SettingError
         For a setting outside its range.
+
+    Notes
+    -----
+    A push costs 4·n·rank flops and reads the directions once; one that grows the basis, or comes
+    within rounding of its tolerance, twice that. Directions take n·rank entries, nothing grows with
+    the number of samples.
+
+    The directions satisfy ``|V Vᴴ - I|₁ < 3·n·u`` (u the unit roundoff, n at least 16) at any
+    condition number, the first k of them span what the first k accepted samples span, and every
+    rejected sample lies within its tolerance of the span.
+
+    Each sample is first multiplied by the power of two that brings its largest part into [1/2, 1),
+    and results are scaled back. So decisions do not depend on the scale, up to the ends of the
+    range: subnormal samples are samples like others, with the precision that they have left; a
+    norm beyond the largest number is reported as infinity (and decided rightly), one below the
+    smallest as 0; parts of a sample 2**1022 times smaller than its largest part (2**126 in single
+    precision) may be rounded.
+
+    Threads may share an object: each push is a whole. Kernels release the interpreter lock.
+
+    References
+    ----------
+    .. [1] L. Giraud and J. Langou, "A robust criterion for the modified Gram-Schmidt algorithm with
+       selective reorthogonalization", SIAM J. Sci. Comput. 25 (2003), 417-441.
+    .. [2] Å. Björck, "Solving linear least squares problems by Gram-Schmidt orthogonalization",
+       BIT 7 (1967), 1-21.
 
     Examples
     --------
@@ -64,6 +97,8 @@ class StreamBasis:
     >>> basis = StreamBasis(3)
     >>> basis.push([1.0, 1.0, 0.0]).grew, basis.push([2.0, 2.0, 0.0]).grew
     (True, False)
+    >>> basis
+    StreamBasis(3 channels, rank 1 of at most 3, 2 samples, float64)
     """
 
     __slots__ = (
@@ -77,6 +112,7 @@ class StreamBasis:
         "_release",
         "_shape",
         "_step",
+        "_vectors",
     )
 
     def __init__(
@@ -94,39 +130,37 @@ class StreamBasis:
     ) -> None:
         self._channels = Channels(channels)
         count = self._channels.count
-        kind = checked_dtype(dtype)
-        epsilon = float(np.finfo(kind).eps)
-        rtol = epsilon**0.5 if rtol is None else float(rtol)
-        if not 0.0 <= rtol < 1.0:
-            raise SettingError(f"rtol={rtol}: a relative tolerance is at least 0 and below 1")
-        if not 0.0 <= atol < np.inf:
-            raise SettingError(f"atol={atol}: an absolute tolerance is at least 0 and finite")
-        if capacity is None:
-            capacity = count
-        elif not 1 <= capacity <= count:
-            raise SettingError(f"capacity={capacity}: from 1 to the number of channels ({count})")
-        if reorthogonalize not in POLICIES:
-            raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
+        self._dtype = checked_dtype(dtype)
         if window is not None or span is not None:
             raise SettingError(f"window={window}, span={span}: a window is not supported yet")
-        self._inner = Inner(inner, count, kind)
+        if reorthogonalize not in POLICIES:
+            raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
+        self._inner = Inner(inner, count, self._dtype)
         self._core = Growth(
             count,
-            int(capacity),
-            max(rtol, ROUNDING_FLOOR * epsilon),
-            float(atol),
+            _checked_capacity(capacity, count),
+            *_checked_tolerances(rtol, atol, float(np.finfo(self._dtype).eps)),
             POLICIES[reorthogonalize],
-            kind,
+            self._dtype,
         )
         self._lock = threading.Lock()
-        self._dtype = kind
-        self._shape = (count,)
         self._acquire, self._release = self._lock.acquire, self._lock.release
+        self._shape = (count,)
         self._plain = self._inner.kind == "euclidean"
+        self._vectors: tuple[Any, NDArray[Any]] | None = None
         self._bind()
 
     def _bind(self) -> None:
         self._step = self._core.step
+
+    def __repr__(self) -> str:
+        return (
+            f"StreamBasis({len(self._channels)} channels, rank {self.rank} of at most "
+            f"{self.capacity}, {self.count} samples, {self._dtype})"
+        )
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self).from_state, (self.to_state(),)
 
     @property
     def channels(self) -> tuple[str, ...]:
@@ -144,17 +178,42 @@ class StreamBasis:
         return self._core.rank
 
     @property
+    def capacity(self) -> int:
+        """Most directions that are kept."""
+        return self._core.capacity
+
+    @property
+    def window(self) -> int | None:
+        """Samples kept, None for all that was learned."""
+        return None
+
+    @property
     def count(self) -> int:
         """Samples seen."""
         return self._core.count
 
     @property
+    def nbytes(self) -> int:
+        """Bytes of the arrays held; push_many takes its workspace anew and gives it back."""
+        return self._core.nbytes + self._inner.nbytes
+
+    @property
     def vectors(self) -> NDArray[Any]:
-        """The directions in channel units, (rank, n), read-only."""
+        """The directions in channel units, (rank, n), read-only; rows orthonormal in ``inner``.
+
+        Notes
+        -----
+        Without an inner product this is a view, and costs nothing; otherwise one of n·rank entries
+        is computed when the directions have changed, and kept.
+        """
         with self._lock:
-            out = self._inner.leave(self._core.directions.copy())
-        out.setflags(write=False)
-        return out
+            version = self._core.version
+            if self._vectors is None or self._vectors[0] != version:
+                held = self._core.directions
+                out = held.view() if self._plain else self._inner.leave(held)
+                out.setflags(write=False)
+                self._vectors = version, out
+            return self._vectors[1]
 
     @property
     def pivots(self) -> NDArray[np.int64]:
@@ -163,9 +222,16 @@ class StreamBasis:
             return self._core.pivots.copy()
 
     @property
-    def nbytes(self) -> int:
-        """Bytes held."""
-        return self._core.nbytes
+    def triangular(self) -> NDArray[Any]:
+        """The lower triangular factor L, (rank, rank), with ``pivot samples = L @ vectors``.
+
+        Notes
+        -----
+        Its transpose is the R of a QR factorization of the pivot samples as columns; the diagonal
+        is positive. An entry beyond the range of the dtype is infinite or 0.
+        """
+        with self._lock:
+            return self._core.triangular()
 
     def push(self, sample: ArrayLike, at: Any = None) -> Decision:
         """Take one sample, shape (n,), and decide whether it adds a direction."""
@@ -239,33 +305,139 @@ class StreamBasis:
             finally:
                 self._bind()
 
-    def coordinates(self, x: ArrayLike) -> NDArray[Any]:
-        """Return the inner products of x, (n,) or (m, n), with the directions."""
-        return self._split(x)[0]
+    def coordinates(self, x: Any) -> NDArray[Any]:
+        """Return the inner products of the directions with x.
 
-    def project(self, x: ArrayLike) -> NDArray[Any]:
-        """Return the part of x inside the basis."""
-        coordinates, _ = self._split(x)
+        Parameters
+        ----------
+        x : array_like of shape (n,) or (m, n), or an Arrow table
+            In channel units. Nothing of the basis changes.
+
+        Returns
+        -------
+        ndarray, shape (rank,) or (m, rank)
+            With ``x ≈ coordinates @ vectors`` for an x in the span.
+
+        Notes
+        -----
+        Two passes, 8·n·rank flops for each row; the error is of the order of eps·|x|.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(2)
+        >>> _ = basis.push([0.0, 2.0])
+        >>> basis.coordinates([[3.0, 4.0], [4.0, 0.0]])
+        array([[4.],
+               [0.]])
+        """
+        rows, powers, single = self._rows(x)
+        coordinates, _, _ = self._split(rows)
+        out = scaled_rows(coordinates, powers)
+        return out[0] if single else out
+
+    def project(self, x: Any) -> NDArray[Any]:
+        """Return the part of x inside the span, in channel units; parameters as for coordinates."""
+        rows, powers, single = self._rows(x)
+        coordinates, _, directions = self._split(rows)
+        out = self._inner.leave(scaled_rows(coordinates @ directions, powers))
+        return out[0] if single else out
+
+    def residual(self, x: Any) -> NDArray[Any]:
+        """Return the part of x outside the span, in channel units; parameters as for coordinates.
+
+        Notes
+        -----
+        Its norm agrees with the one that push reports to within rounding of |x|.
+        """
+        rows, powers, single = self._rows(x)
+        out = self._inner.leave(scaled_rows(self._split(rows)[1], powers))
+        return out[0] if single else out
+
+    def explain(self, x: Any) -> tuple[NDArray[np.int64], NDArray[Any], NDArray[Any]]:
+        """Write x as a combination of the pivot samples, and what they cannot explain.
+
+        Parameters
+        ----------
+        x : array_like of shape (n,) or (m, n), or an Arrow table
+            In channel units. Nothing of the basis changes.
+
+        Returns
+        -------
+        sample_ids : ndarray of int64, shape (rank,)
+            Numbers of the pivot samples.
+        weights : ndarray, shape (rank,) or (m, rank)
+            With ``x = weights @ pivot_samples + residual``, in the units of the samples as they
+            were pushed.
+        residual : ndarray, shape of x
+            The part of x outside the span.
+
+        Notes
+        -----
+        The coordinates are divided by the triangular factor, rank² flops for each row. Weights of
+        nearly dependent pivot samples are as uncertain as the condition that audit reports says;
+        the combination itself is not.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(3)
+        >>> for sample in ([2.0, 0.0, 0.0], [4.0, 0.0, 0.0], [1.0, 1.0, 0.0]):
+        ...     _ = basis.push(sample)
+        >>> basis.explain([5.0, 3.0, 7.0])
+        (array([0, 2]), array([1., 3.]), array([0., 0., 7.]))
+        """
+        rows, powers, single = self._rows(x)
         with self._lock:
-            return self._inner.leave(coordinates @ self._core.directions)
+            coordinates, rest = two_passes(rows, self._core.directions)
+            samples, weights = self._core.pivots.copy(), self._core.weights(coordinates, powers)
+        residual = self._inner.leave(scaled_rows(rest, powers))
+        return (samples, weights[0], residual[0]) if single else (samples, weights, residual)
 
-    def residual(self, x: ArrayLike) -> NDArray[Any]:
-        """Return the part of x outside the basis."""
-        return self._inner.leave(self._split(x)[1])
+    def _rows(self, x: Any) -> tuple[NDArray[Any], NDArray[np.int64], bool]:
+        """Return x as checked Euclidean rows below 1, the powers of two taken out, and if one."""
+        arrow = hasattr(x, "__arrow_c_stream__") or hasattr(x, "__arrow_c_array__")
+        single = not arrow and np.ndim(x) == 1
+        if single:
+            array = one_sample(x, self._channels, self._dtype)[None, :]
+        else:
+            array = many_samples(x, self._channels, self._dtype)
+        rows, powers = powers_taken_out(array)
+        return self._inner.enter(rows), powers, single
 
-    def _split(self, x: ArrayLike) -> tuple[NDArray[Any], NDArray[Any]]:
-        array = np.asarray(x)
-        check = one_sample if array.ndim == 1 else many_samples
-        entered = self._inner.enter(check(array, self._channels, self.dtype))
+    def _split(self, rows: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any], NDArray[Any]]:
+        """Return the coordinates of rows, their rests, and the directions they refer to."""
         with self._lock:
             directions = self._core.directions
-            first = entered @ directions.conj().T
-            rest = entered - first @ directions
-            second = rest @ directions.conj().T
-            return first + second, rest - second @ directions
+            return *two_passes(rows, directions), directions
+
+    def renew(self) -> None:
+        """Orthonormalize the directions afresh; span, order and pivot samples stay.
+
+        Notes
+        -----
+        4·n·rank² flops. The basis keeps itself within its bound without this.
+        """
+        with self._lock:
+            self._core.renew()
+            self._bind()
 
     def audit(self) -> Audit:
-        """Measure the orthonormality and the condition of the basis."""
+        """Measure the orthonormality, coverage and condition of the basis as it is.
+
+        Notes
+        -----
+        2·n·rank² + O(rank³) flops.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(3)
+        >>> _ = basis.push_many([[1.0, 1.0, 1.0], [1.0, 1.0, 1.001], [5.0, 5.0, 5.0]])
+        >>> audit = basis.audit()
+        >>> audit.orthogonality < 3, audit.coverage < 1, audit.rank
+        (True, True, 2)
+        """
         with self._lock:
             core = self._core
             k = core.rank
@@ -274,7 +446,15 @@ class StreamBasis:
                 factor = core.factor
                 scaled = factor / np.linalg.norm(factor, axis=1)[:, None]
                 condition = float(np.linalg.cond(scaled))
-            return Audit(orthogonality(core.directions), np.nan, condition, 0, k, core.count)
+            return Audit(
+                orthogonality(core.directions),
+                core.coverage,
+                condition,
+                core.renewals,
+                k,
+                core.count,
+                core.uncovered,
+            )
 
     def to_state(self) -> State:
         """Hand over everything needed to go on."""
@@ -301,3 +481,30 @@ class StreamBasis:
         basis._core.set_state(state.parts["core"])
         basis._bind()
         return basis
+
+
+def _checked_capacity(capacity: int | None, count: int) -> int:
+    if capacity is None:
+        return count
+    try:
+        number = index(capacity)
+    except TypeError:
+        number = 0
+    if not 1 <= number <= count:
+        raise SettingError(
+            f"capacity={capacity!r}: a whole number from 1 to the number of channels ({count})"
+        )
+    return number
+
+
+def _checked_tolerances(rtol: Any, atol: Any, epsilon: float) -> tuple[float, float]:
+    try:
+        relative = epsilon**0.5 if rtol is None else float(rtol)
+        absolute = float(atol)
+    except (TypeError, ValueError):
+        raise SettingError(f"rtol={rtol!r}, atol={atol!r}: tolerances are numbers") from None
+    if not 0.0 <= relative < 1.0:
+        raise SettingError(f"rtol={rtol}: a relative tolerance is at least 0 and below 1")
+    if not 0.0 <= absolute < np.inf:
+        raise SettingError(f"atol={atol}: an absolute tolerance is at least 0 and finite")
+    return relative, absolute

@@ -14,6 +14,7 @@ from streambasis.kernels import block as blocks
 from streambasis.kernels import growth as kernels
 from streambasis.kernels._jit import entry
 from streambasis.memory import aligned_zeros
+from streambasis.projecting import scaled_rows
 from streambasis.state import State, owned
 
 FIRST_ROWS = 8
@@ -121,12 +122,70 @@ class Growth:
         return self.integers[kernels.HEADER + len(self.directions_held) :][: self.rank]
 
     @property
+    def capacity(self) -> int:
+        """Most directions that are kept."""
+        return int(self.integers[kernels.CAPACITY])
+
+    @property
+    def version(self) -> tuple[int, int]:
+        """What changes when a direction changes."""
+        return self.rank, self.renewals
+
+    @property
+    def renewals(self) -> int:
+        """How often the directions were orthonormalized afresh."""
+        return int(self.integers[kernels.RENEWALS])
+
+    @property
+    def uncovered(self) -> int:
+        """Samples that were independent when the capacity was reached."""
+        return int(self.integers[kernels.UNCOVERED])
+
+    @property
+    def coverage(self) -> float:
+        """Largest residual of a rejected sample over its tolerance.
+
+        Samples that grew the basis are in its span, and spans are nested: what a rejected sample
+        had outside when it came can only have become less.
+        """
+        return float(self.reals[kernels.COVERAGE])
+
+    @property
     def nbytes(self) -> int:
         """Bytes of all arrays."""
         return sum(array.nbytes for array in self.arrays)
 
     def stamp(self, at: Any) -> None:
         """Take note of the time of the next sample; a basis that never forgets has no use."""
+
+    def triangular(self) -> NDArray[Any]:
+        """Return the lower triangular factor in the units of the pivot samples."""
+        return scaled_rows(owned(self.factor), self.exponents)
+
+    def weights(self, coordinates: NDArray[Any], powers: NDArray[np.int64]) -> NDArray[Any]:
+        """Return the combinations of pivot samples with these coordinates times 2**powers, (m, k).
+
+        ``coordinates`` is overwritten.
+        """
+        kernels.solve_rows(self.factor_held, self.rank, coordinates)
+        shift = powers[:, None] - self.exponents
+        with np.errstate(over="ignore", under="ignore"):
+            coordinates.real = np.ldexp(coordinates.real, shift)
+            if coordinates.dtype.kind == "c":
+                coordinates.imag = np.ldexp(coordinates.imag, shift)
+        return coordinates
+
+    def renew(self) -> None:
+        """Orthonormalize the directions afresh, in their order."""
+        rows, count = self.directions_held.shape
+        directions = aligned_zeros((rows, count), self.directions_held.dtype)
+        between = np.zeros((rows, rows), directions.dtype)
+        kernels.orthonormalize_rows(self.directions_held, self.rank, directions, between)
+        # old directions = between @ new directions, both factors lower triangular
+        self.factor_held = np.tril(self.factor_held @ between)
+        self.directions_held = directions
+        self.integers[kernels.RENEWALS] += 1
+        self._bind()
 
     def push_block(self, samples: NDArray[Any], _at: Any = None) -> Decisions:
         """Take Euclidean samples that are known to be finite, (m, n), as if one after another.

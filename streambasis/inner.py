@@ -89,6 +89,13 @@ class Inner:
         self.given = array
         self.given.setflags(write=False)
 
+    @property
+    def nbytes(self) -> int:
+        """Bytes held."""
+        if self.given is None:
+            return 0
+        return self.given.nbytes + self._into.nbytes + self._out.nbytes
+
     def _typed(self, array: NDArray[Any]) -> NDArray[Any]:
         if array.dtype.kind != "c" and self.kind == "weights":
             return array.astype(np.finfo(self.dtype).dtype)

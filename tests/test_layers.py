@@ -15,8 +15,7 @@ PACKAGE = Path(__file__).parent.parent / "streambasis"
 LAYERS = [
     {"kernels"},
     {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "memory",
-     "growth",
-     "window", "basis", "ranks", "folding", "gaps", "principal", "compare"},
+     "projecting", "growth", "window", "basis", "ranks", "folding", "gaps", "principal", "compare"},
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
     {"monitor"},

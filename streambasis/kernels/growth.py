@@ -89,3 +89,30 @@ def push_growing(directions, factor, work, integers, reals, sample):
         0,
         0,
     )
+
+
+@kernel()
+def solve_rows(factor, rank, rows):
+    """Overwrite each row c of ``rows`` with the solution y of ``y L = c``, L the lower factor."""
+    for i in range(rows.shape[0]):
+        row = rows[i]
+        for j in range(rank - 1, -1, -1):
+            row[j] = row[j] / factor[j, j]
+            for k in range(j):
+                row[k] -= row[j] * factor[j, k]
+
+
+@kernel()
+def orthonormalize_rows(directions, rank, out, between):
+    """Orthonormalize the first ``rank`` rows of ``directions`` into ``out``, in their order.
+
+    ``between`` is filled with the lower triangular factor of ``directions = between @ out``.
+    """
+    for j in range(rank):
+        row = out[j]
+        for i in range(row.shape[0]):
+            row[i] = directions[j, i]
+        left, _ = orthogonalize(out, j, row, between[j], 0.0, ALWAYS)
+        for i in range(row.shape[0]):
+            row[i] = row[i] / left
+        between[j, j] = left
