@@ -15,7 +15,7 @@ from streambasis.feeds.growing import GrowingSource
 from streambasis.feeds.linefeed import LineFeed, RowParser
 from streambasis.feeds.objects import JsonRows
 from streambasis.feeds.reading import Feed, FeedOptions, PieceFeed, Position
-from streambasis.feeds.sources import FileSource, GzipSource, PipeSource, Source
+from streambasis.feeds.sources import PATIENCE, FileSource, GzipSource, PipeSource, Source
 from streambasis.feeds.text import CsvRows
 
 FORMATS = ("csv", "json")
@@ -170,7 +170,7 @@ class _Opening:
         return make
 
     def _growing(self, path: Path, name: str) -> PieceFeed:
-        source = GrowingSource(path, self.options.stop, self.options.wait)
+        source = GrowingSource(path, self.options.stop, self.options.wait or PATIENCE)
         lost = None
         if self.position is not None and not source.find(self.position):
             lost = "the file that the run left off in is gone: samples may be missing here"
@@ -185,7 +185,7 @@ class _Opening:
             return self.file(Path(f"/dev/fd/{descriptor}"), name)
         if self.options.follow:
             raise FeedError(f"{name}: a pipe is always read as it comes; leave out following")
-        source = PipeSource(descriptor, self.options.stop, self.options.wait)
+        source = PipeSource(descriptor, self.options.stop, self.options.wait or PATIENCE)
         beginning = b""
         while len(beginning) < _BEGINNING:
             more = source.read(_BEGINNING - len(beginning))

@@ -31,8 +31,8 @@ class GrowingSource:
         The file that the writer writes to.
     stop : threading.Event
         When set, the source ends; without it there is no end.
-    wait : float or None
-        Seconds without a byte after which ``read`` returns None; None never does.
+    wait : float
+        Seconds without a byte after which ``read`` returns None.
 
     Notes
     -----
@@ -45,10 +45,10 @@ class GrowingSource:
     live = True
     repeatable = True
 
-    def __init__(self, path: Path, stop: threading.Event, wait: float | None) -> None:
+    def __init__(self, path: Path, stop: threading.Event, wait: float) -> None:
         self._path = path
         self._stop = stop
-        self._looks = None if wait is None else max(1, round(wait / PAUSE))
+        self._looks = max(1, round(wait / PAUSE))
         self._quiet = 0
         self.generation = 0
         self._file = Descriptor(path)
@@ -90,7 +90,7 @@ class GrowingSource:
         return False
 
     def read(self) -> bytes | None:
-        """Return the next bytes; None once when nothing comes for a while; nothing at the end."""
+        """Return the next bytes; None when nothing comes for a while; nothing at the end."""
         while not self._stop.is_set():
             data = os.pread(self._file.number, CHUNK_BYTES, self._offset)
             if data and self._tail_stands():
@@ -104,10 +104,10 @@ class GrowingSource:
                 continue
             if self._next_file():
                 continue
-            self._quiet += 1
-            if self._quiet == self._looks:
-                return None
             self._stop.wait(PAUSE)
+            self._quiet += 1
+            if self._quiet % self._looks == 0:
+                return None
         return b""
 
     def _tail_stands(self) -> bool:

@@ -233,7 +233,10 @@ class PieceFeed:
     def batches(self) -> Iterator[Batch]:
         """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
         given = self._first > 0
-        for batch in cut(self.pieces(), self.columns, self._first, self._keeps_rest):
+        pieces: Iterator[Piece | None] = self.pieces()
+        if self.options.wait is None:
+            pieces = (piece for piece in pieces if piece is not None)
+        for batch in cut(pieces, self.columns, self._first, self._keeps_rest):
             self._malformed += len(batch.malformed)
             batch.position.update(kind=self.kind, malformed=self._malformed)
             given = True

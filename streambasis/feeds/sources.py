@@ -102,19 +102,19 @@ class PipeSource:
         Stays open; whoever opened it closes it.
     stop : threading.Event
         When set, the source ends.
-    wait : float or None
-        Seconds without a byte after which ``read`` returns None; None never does.
+    wait : float
+        Seconds without a byte after which ``read`` returns None.
     """
 
     live = True
     repeatable = False
     generation = 0
 
-    def __init__(self, descriptor: int, stop: threading.Event, wait: float | None) -> None:
+    def __init__(self, descriptor: int, stop: threading.Event, wait: float) -> None:
         self._descriptor = descriptor
         self._stop = stop
         self._wait = wait
-        self._told = False
+        self._silent = False
         self._ahead = b""
 
     @property
@@ -123,19 +123,18 @@ class PipeSource:
         return self._stop.is_set()
 
     def read(self, most: int = CHUNK_BYTES) -> bytes | None:
-        """Return what has come; nothing at the end; None once when nothing comes for a while."""
+        """Return what has come; nothing at the end; None when nothing comes for a while."""
         if self._ahead:
             data, self._ahead = self._ahead[:most], self._ahead[most:]
             return data
-        while not self._stop.is_set():
-            tell = self._wait is not None and not self._told
-            timeout = self._wait if tell else PATIENCE
+        if not self._stop.is_set():
+            # a pipe that stays silent is asked less often: a byte ends the wait at once
+            timeout = PATIENCE if self._silent else self._wait
             if select.select([self._descriptor], [], [], timeout)[0]:
-                self._told = False
+                self._silent = False
                 return os.read(self._descriptor, most)
-            if tell:
-                self._told = True
-                return None
+            self._silent = True
+            return None
         return b""
 
     def take_back(self, data: bytes) -> None:
