@@ -211,6 +211,152 @@ def test_refused_sample_changes_nothing() -> None:
     assert to_bytes(monitor) == before
 
 
+def test_label_is_named_by_recurrences() -> None:
+    """A recurrence carries the label of the event it repeats; its own label goes first."""
+    feed = with_faults()
+    monitor, _ = run(feed[:2800], [2800])
+    monitor.label(0, "loose coupling")
+    monitor.push_many(feed[2800:])
+    assert [e["label"] for e in monitor.events] == ["loose coupling", None, "loose coupling"]
+    monitor.label(2, "loose coupling again")
+    assert monitor.events[2]["label"] == "loose coupling again"
+    with pytest.raises(SettingError, match="event 9"):
+        monitor.label(9, "none")
+
+
+def test_slow_drift_is_followed_without_an_event() -> None:
+    """A subspace that turns and a level that rises are followed by forgetting, and the angle told.
+
+    Without forgetting the same feed ends in an event.
+    """
+    rng = np.random.default_rng(12)
+    samples, sources = 20_000, rng.normal(size=(20_000, 2))
+    loads = 2.0 * np.linalg.qr(rng.normal(size=(12, 3)))[0].T * np.sqrt(12)
+    turn = np.linspace(0.0, 0.6, samples)[:, None]
+    feed = sources[:, :1] * (np.cos(turn) * loads[0] + np.sin(turn) * loads[1])
+    feed += sources[:, 1:] * loads[2] + rng.normal(size=(samples, 12))
+    feed[:, 4] += np.linspace(0.0, 15.0, samples)
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE, half_life=1000.0)
+    table = monitor.push_many(feed)
+    assert monitor.events == []
+    assert monitor.rank == 2
+    assert table["novel"].to_numpy().mean() < 1e-3
+    assert monitor.drift == pytest.approx(0.6, abs=0.1)
+    still = NoveltyMonitor(NAMES, baseline=BASELINE)
+    still.push_many(feed)
+    assert still.events != []
+
+
+def test_frozen_channel_is_an_event() -> None:
+    """A channel that repeats its last value is named and an event, though its noise is its own."""
+    feed = plant(13, 4000)
+    feed[:, 5] = np.random.default_rng(14).normal(size=4000)
+    feed[2000:2300, 5] = feed[2000, 5]
+    feed[3000:3300, 5] = feed[3000, 5]
+    monitor, _ = run(feed[:2200], [2200])
+    assert monitor.frozen == ("c5",)
+    monitor.push_many(feed[2200:])
+    assert monitor.frozen == ()
+    first, second = monitor.events
+    assert first["channels"] == second["channels"] == ["c5"]
+    assert 2000 < first["start"] < 2050
+    assert first["end"] == 2299
+    assert second["repeats"] == 0
+
+
+def test_baseline_may_be_given() -> None:
+    """With the samples of a file as the baseline, the first sample of the feed is judged."""
+    feed = plant(15, 3000)
+    monitor = NoveltyMonitor(NAMES, baseline=pa.table(dict(zip(NAMES, feed[:1000].T, strict=True))))
+    assert monitor.baseline_done
+    assert monitor.baseline == 1000
+    counted, expected = run(feed, [3000])
+    table = monitor.push_many(feed[1000:])
+    assert table["sample"].to_pylist() == list(range(2000))
+    assert table["spe"].to_pylist() == expected["spe"].to_pylist()[1000:]
+    assert monitor.scale.tolist() == counted.scale.tolist()
+
+
+def test_fresh_monitor_keeps_what_was_learnt() -> None:
+    """A snapshot serves as the baseline of another run: learnt and adopted stay, events go."""
+    feed = with_faults()
+    monitor, _ = run(feed[:2050], [2050])
+    monitor.adopt(0)
+    fresh = from_bytes(to_bytes(monitor)).fresh()
+    assert (fresh.count, fresh.events, fresh.baseline_done) == (0, [], True)
+    table = fresh.push_many(feed[2100:3100])
+    assert table["limit"][0].as_py() == monitor.push(feed[2050]).limit
+    assert [e["channels"] for e in fresh.events] == [["c5"]]
+    assert fresh.push(feed[2950]).known == (0,)
+    with pytest.raises(SampleError, match="baseline is not complete: 0 of 1000"):
+        NoveltyMonitor(NAMES, baseline=1000).fresh()
+
+
+@pytest.mark.parametrize("limits", ["tail", "box", "jackson-mudholkar"])
+def test_every_limit_finds_faults_and_few_false_ones(limits: str) -> None:
+    """On normal noise all three methods find the three faults and alarm seldom."""
+    monitor, table = run(with_faults(), [4000], limits=limits, false_alarm=1e-3)
+    assert len(monitor.events) == 3
+    ordinary = np.r_[1000:1500, 1700:2100, 2300:2900, 3100:4000]
+    assert table["novel"].to_numpy()[ordinary].mean() < 4e-3
+
+
+def test_known_directions_of_unusual_size_are_extreme() -> None:
+    """A sample far out along the basis is extreme and not novel, and opens no event."""
+    feed = plant(16, 2000)
+    monitor, table = run(feed, [2000], false_alarm=1e-3)
+    assert table["extreme"].to_numpy()[BASELINE:].mean() < 4e-3
+    inside = monitor.basis.mean + 50.0 * monitor.basis.vectors[0] * 5.0
+    verdict = monitor.push(inside)
+    assert verdict.extreme
+    assert not verdict.novel
+
+
+def test_finish_closes_what_is_open() -> None:
+    """At the end of a feed an open event is closed where it was seen last."""
+    feed = with_faults()[:1550]
+    monitor, _ = run(feed, [1550])
+    assert monitor.events[0].open
+    monitor.finish()
+    assert not monitor.events[0].open
+    assert monitor.events[0]["end"] == 1549
+
+
+def test_times_are_kept() -> None:
+    """Times come back in the table, as text in the events, and as nanoseconds in a verdict."""
+    feed = with_faults()[:1800]
+    times = np.datetime64("2031-05-01T00:00:00", "ms") + 100 * np.arange(1800)
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    table = monitor.push_many(feed, at=times)
+    assert table["time"].to_numpy().tolist() == times.astype("datetime64[ns]").tolist()
+    start = np.datetime64(monitor.events[0]["start_time"])
+    assert start == times[monitor.events[0]["start"]]
+    assert monitor.push(feed[0], at=2.5).time == 2_500_000_000
+
+
+@pytest.mark.parametrize("channels", [1, 2, 3])
+def test_few_channels_are_watched(channels: int) -> None:
+    """One or two channels share nothing: their noise alone is watched, with rank 0."""
+    rng = np.random.default_rng(17)
+    feed = rng.normal(size=(4000, channels))
+    feed[3000:3100, 0] += 12.0
+    monitor = NoveltyMonitor(channels, baseline=BASELINE)
+    table = monitor.push_many(feed)
+    assert monitor.rank == 0
+    assert table["novel"].to_numpy()[:3000].mean() < 2e-3
+    assert [(e["start"], e["channels"]) for e in monitor.events] == [(3000, ["0"])]
+
+
+def test_memory_is_bounded() -> None:
+    """What a snapshot holds does not grow with the feed."""
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    sizes = []
+    for seed in range(6):
+        monitor.push_many(plant(18, 4000)[: 4000 - seed])
+        sizes.append(len(to_bytes(monitor)))
+    assert max(sizes[2:]) < 1.6 * sizes[1] + 300_000
+
+
 @pytest.mark.parametrize(
     ("settings", "name"),
     [

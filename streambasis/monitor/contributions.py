@@ -11,8 +11,7 @@ from numpy.typing import NDArray
 from streambasis.monitor.quantiles import chi2_quantile
 
 MOST_STEPS = 32
-"""Most channels that the greedy selection names; what a fault leaves beyond them is shared out by
-squared residual."""
+"""Most channels that the greedy selection takes."""
 
 ENOUGH = 0.9
 """The channels named are those that together make this part of the contributions."""
@@ -95,8 +94,9 @@ def shares(
     SPE, until no other does so beyond what noise would; the fault is then reconstructed on all of
     them together by least squares, and a channel's share is its part of the reconstructed sum of
     squares. A plain squared residual smears a fault over channels that only share a direction
-    with the faulty one. A fault that goes on beyond 32 channels has the rest shared out by squared
-    residual. Cost O(n·(s + q)) per channel selected.
+    with the faulty one. What a fault of very many channels leaves beyond noise, when no more
+    channel stands out or 32 are selected, is shared out by squared residual. Cost O(n·(s + q)) per
+    channel selected.
     """
     rows = residuals.copy()
     n = rows.shape[1]
@@ -129,9 +129,10 @@ def shares(
     energy = np.zeros(n)
     if chosen:
         energy[chosen] = _reconstructed(residuals, directions, chosen)
-    if len(chosen) == MOST_STEPS:
-        left = np.sum(rows * rows, axis=0) - count * noise * np.maximum(open_part, 0.0)
-        energy += np.maximum(left, 0.0)
+    left = np.sum(rows * rows, axis=0)
+    free = n - len(directions) - len(chosen)
+    if free > 0 and left.sum() > noise * chi2_quantile(CHANCE, count * free):
+        energy += np.maximum(left - count * noise * np.maximum(open_part, 0.0), 0.0)
     whole = float(energy.sum())
     return energy / whole if whole > 0.0 else np.sum(residuals * residuals, axis=0) / total
 

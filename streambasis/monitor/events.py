@@ -34,7 +34,7 @@ class Event(dict[str, Any]):
     ``peak`` (largest SPE over the limit), ``channels`` (names, largest contribution first, that
     together make 90 %), ``contributions`` (name to share), ``repeats`` (number of the earlier
     event with the same direction, or None), ``cosine`` (of the angle to it, or None) and
-    ``label``.
+    ``label`` (its own, or that of the event it repeats).
 
     Attributes
     ----------

@@ -237,7 +237,9 @@ class Judge:
         event, model = self.open[which], self.model
         inside = model.projection.directions[: model.projection.first]
         parts = shares(event.rows[: event.filled], inside, event.count, model.basis.noise)
-        names = model.names
+        names, label = model.names, event.label
+        if label is None and event.repeats is not None:
+            label = self.history.events[event.repeats]["label"]
         fields = {
             "event": event.number,
             "start": event.start,
@@ -249,7 +251,7 @@ class Judge:
             "contributions": {names[i]: float(parts[i]) for i in np.argsort(-parts, kind="stable")},
             "repeats": event.repeats,
             "cosine": event.cosine,
-            "label": event.label,
+            "label": label,
         }
         return Event(fields, event.directions, open=open)
 

@@ -22,7 +22,8 @@ class Learnt(NamedTuple):
     scaling : Scaling
         Centre, noise and rank.
     z : ndarray of float64, shape (m, n)
-        The baseline about its centre and in noise units, outliers drawn in, gaps filled.
+        Those samples of the baseline that are fit to learn from, about the centre and in noise
+        units, outliers drawn in, gaps filled.
     spe : ndarray of float64
         Squared prediction errors of its complete samples by cross-fitting, in order of time.
     roots : ndarray of float64
@@ -60,21 +61,23 @@ def learn(samples: NDArray[np.float64], rank: int | None, most: int | None) -> L
     what the first fit expects, and everything is fitted once more.
     """
     gaps = np.isnan(samples)
-    scaling, z = fit_scaling(samples, rank=rank, most=most)
+    scaling, z, fit = fit_scaling(samples, rank=rank, most=most)
     if gaps.any():
-        mean, vectors = principal(z, scaling.rank)
+        mean, vectors = principal(z[fit], scaling.rank)
         filled = samples.copy()
         expected = scaling.centre + scaling.scale * _expected(z, gaps, mean, vectors)
         filled[gaps] = expected[gaps]
-        scaling, z = fit_scaling(filled, rank=rank, most=most)
+        scaling, z, fit = fit_scaling(filled, rank=rank, most=most)
     raw = (samples - scaling.centre) / scaling.scale
     complete = ~gaps.any(axis=1)
     edges = np.linspace(0, len(z), FOLDS + 1).astype(int)
     spe = np.empty(len(z))
     for start, stop in pairwise(edges.tolist()):
-        rest = np.concatenate([z[:start], z[stop:]])
-        mean, vectors = principal(rest, scaling.rank)
+        rest = fit.copy()
+        rest[start:stop] = False
+        mean, vectors = principal(z[rest], scaling.rank)
         spe[start:stop] = _errors(np.nan_to_num(raw[start:stop]), mean, vectors)
+    z = z[fit]
     values = np.linalg.svd(z - z.mean(axis=0), compute_uv=False) ** 2 / len(z)
     return Learnt(scaling, z, spe[complete], values[scaling.rank :])
 

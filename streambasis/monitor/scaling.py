@@ -79,7 +79,7 @@ class Scaling:
 
 def fit_scaling(
     samples: NDArray[np.float64], *, rank: int | None = None, most: int | None = None
-) -> tuple[Scaling, NDArray[np.float64]]:
+) -> tuple[Scaling, NDArray[np.float64], NDArray[np.bool_]]:
     """Find centre, noise and number of shared directions.
 
     Parameters
@@ -99,6 +99,9 @@ def fit_scaling(
         The samples about their centre and in units of the noise, with missing values filled in
         by zero and gross outliers drawn in to twice what the channel's 99th percentile reaches
         (or 8 robust standard deviations where that is more).
+    ndarray of bool, shape (m,)
+        Which samples are fit to learn from: those without gross outliers in a tenth of their
+        channels, or in two.
 
     Notes
     -----
@@ -108,13 +111,15 @@ def fit_scaling(
     centre, spread, constant, nearly = robust_start(samples)
     deviations = np.where(np.isnan(samples), centre, samples) - centre
     reach = np.maximum(8.0 * spread, 2.0 * np.nanquantile(np.abs(deviations), 0.99, axis=0))
+    gross = np.count_nonzero(np.abs(deviations) > reach, axis=1)
+    fit = gross < max(2, samples.shape[1] // 10)
     np.clip(deviations, -reach, reach, out=deviations)
     moving = ~constant & (spread > 0)
     scale = np.where(moving, spread, spread + ROUNDING * np.abs(centre))
     scale[scale == 0.0] = np.finfo(np.float64).tiny ** 0.25
     found = 0
     if moving.any():
-        noise, found = noise_variances(deviations[:, moving] / spread[moving], rank, most)
+        noise, found = noise_variances(deviations[np.ix_(fit, moving)] / spread[moving], rank, most)
         scale[moving] = spread[moving] * np.sqrt(noise)
         scale[nearly] = np.maximum(scale[nearly], spread[nearly])
     patience = np.maximum(LEAST_FREEZE, FREEZE * longest_runs(samples))
@@ -122,7 +127,7 @@ def fit_scaling(
     scaling = Scaling(centre, scale, found if rank is None else rank, constant, nearly, patience)
     deviations[:, ~moving] = 0.0
     deviations /= scale
-    return scaling, deviations
+    return scaling, deviations, fit
 
 
 def robust_start(
