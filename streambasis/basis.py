@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import threading
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
 from operator import index
 from typing import Any, Self
 
@@ -19,7 +20,7 @@ from streambasis.inner import Inner, inner_of
 from streambasis.kernels import growth as kernels
 from streambasis.projecting import powers_taken_out, scaled_rows, two_passes
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
-from streambasis.state import State
+from streambasis.state import State, lending
 
 POLICIES = {
     "criterion": kernels.CRITERION,
@@ -459,14 +460,23 @@ class StreamBasis:
     def to_state(self) -> State:
         """Hand over everything needed to go on."""
         with self._lock:
-            facts = {
-                "channels": list(self._channels.names),
-                "named": self._channels.named,
-                "dtype": self.dtype.name,
-                "inner": self._inner.kind,
-            }
-            arrays = {} if self._inner.given is None else {"inner": self._inner.given}
-            return State("StreamBasis", facts, arrays, {"core": self._core.to_state()})
+            return self._state()
+
+    @contextmanager
+    def lent_state(self) -> Iterator[State]:
+        """Lend the state without a copy; no push gets in before it is handed back."""
+        with self._lock, lending():
+            yield self._state()
+
+    def _state(self) -> State:
+        facts = {
+            "channels": list(self._channels.names),
+            "named": self._channels.named,
+            "dtype": self.dtype.name,
+            "inner": self._inner.kind,
+        }
+        arrays = {} if self._inner.given is None else {"inner": self._inner.given}
+        return State("StreamBasis", facts, arrays, {"core": self._core.to_state()})
 
     @classmethod
     def from_state(cls, state: State) -> Self:

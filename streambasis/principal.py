@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import math
 import threading
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
 from typing import Any, Final, Self
 
 import numpy as np
@@ -19,7 +20,7 @@ from streambasis.inner import Inner, inner_of
 from streambasis.kernels import principal as kernels
 from streambasis.ranks import rank_by_mdl, rank_by_noise
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
-from streambasis.state import State, owned
+from streambasis.state import State, lending, owned
 
 RULES = {"noise": rank_by_noise, "mdl": rank_by_mdl}
 
@@ -522,25 +523,34 @@ class PrincipalBasis:
     def to_state(self) -> State:
         """Hand over everything needed to go on, the unfinished block included."""
         with self._lock:
-            core = self._core
-            facts = {
-                "channels": list(self._channels.names),
-                "named": self._channels.named,
-                "dtype": self.dtype.name,
-                "inner": self._inner.kind,
-                "rank": self._rule,
-                "max_rank": self._most,
-                "forget": core.forget,
-                "block": len(self._block),
-                "growing": self._growing,
-                "centre": core.centred,
-                "count": self.count,
-                "folded": int(self._header[kernels.FOLDED]),
-            }
-            arrays = {"block": owned(self._block[: int(self._header[kernels.FILL])])}
-            if self._inner.given is not None:
-                arrays["inner"] = owned(self._inner.given)
-            return State("PrincipalBasis", facts, arrays, {"core": core.to_state()})
+            return self._state()
+
+    @contextmanager
+    def lent_state(self) -> Iterator[State]:
+        """Lend the state without a copy; no push gets in before it is handed back."""
+        with self._lock, lending():
+            yield self._state()
+
+    def _state(self) -> State:
+        core = self._core
+        facts = {
+            "channels": list(self._channels.names),
+            "named": self._channels.named,
+            "dtype": self.dtype.name,
+            "inner": self._inner.kind,
+            "rank": self._rule,
+            "max_rank": self._most,
+            "forget": core.forget,
+            "block": len(self._block),
+            "growing": self._growing,
+            "centre": core.centred,
+            "count": self.count,
+            "folded": int(self._header[kernels.FOLDED]),
+        }
+        arrays = {"block": owned(self._block[: int(self._header[kernels.FILL])])}
+        if self._inner.given is not None:
+            arrays["inner"] = owned(self._inner.given)
+        return State("PrincipalBasis", facts, arrays, {"core": core.to_state()})
 
     @classmethod
     def from_state(cls, state: State) -> Self:

@@ -14,6 +14,7 @@ import os
 import stat
 import threading
 from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from typing import Any
 
 import numpy as np
@@ -33,13 +34,17 @@ from streambasis.seal import (
     read_seal,
     regions,
 )
-from streambasis.state import State, Stateful
+from streambasis.state import Lender, State, Stateful
 
 KINDS = ("StreamBasis", "PrincipalBasis", "NoveltyMonitor")
 """What :func:`load` builds; the class of a kind is the public name of the package."""
 
 READ_WHOLE = 1 << 20
 """A smaller file is read, a larger one mapped into memory."""
+
+LENT = 1 << 26
+"""Bytes from which an object is written where it lies: for less, pushes that wait for the disk
+would cost more than the copy."""
 
 EXACT_CHECK = 1 << 27
 """Up to this many products the directions are checked one against the other."""
@@ -58,7 +63,8 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
     Parameters
     ----------
     obj : StreamBasis, PrincipalBasis, NoveltyMonitor or State
-        What to save; it may be pushed to again as soon as this returns.
+        What to save. Of an object of less than 64 MiB a copy is written, so that other threads
+        may push to it meanwhile; a larger one is written where it lies, and pushes wait.
     path : path
         The file, new or to be replaced.
     mode : int
@@ -75,8 +81,8 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
     Notes
     -----
     A crash at any moment leaves the old file or the new one, whole. The first save to a path in a
-    process also removes what killed processes left behind there. Costs one copy of the state in
-    memory, and hashing and writing it once.
+    process also removes what killed processes left behind there. Costs hashing and writing the
+    state once.
 
     Examples
     --------
@@ -88,7 +94,6 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
     >>> streambasis.load(path).vectors
     array([[0.6, 0.8]])
     """
-    state = _state_of(obj)
 
     def write(descriptor: int) -> None:
         with Digest() as digest:
@@ -106,8 +111,9 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
                 os.pwrite(descriptor, text, position)
 
     try:
-        _clean_once(path)
-        replace_file(path, write, mode=mode)
+        with _state_of(obj) as state:
+            _clean_once(path)
+            replace_file(path, write, mode=mode)
     except OSError as error:
         raise _file_error(path, "cannot be written", error) from error
 
@@ -158,8 +164,8 @@ def to_bytes(obj: Stateful | State) -> bytes:
         If the object is none that can be saved.
     """
     memory = io.BytesIO()
-    with Digest() as digest:
-        write_arrow(_state_of(obj), _Sink(digest, memory.write))
+    with Digest() as digest, _state_of(obj) as state:
+        write_arrow(state, _Sink(digest, memory.write))
         text = digest.text()
         with memory.getbuffer() as content:
             seal = read_seal(content)
@@ -250,12 +256,17 @@ class _Sink:
         """Do nothing: whoever owns the file forces it to the disk."""
 
 
-def _state_of(obj: Stateful | State) -> State:
+@contextmanager
+def _state_of(obj: Stateful | State) -> Iterator[State]:
     if isinstance(obj, State):
-        return obj
-    if not isinstance(obj, Stateful):
+        yield obj
+    elif isinstance(obj, Lender) and obj.nbytes >= LENT:
+        with obj.lent_state() as state:
+            yield state
+    elif isinstance(obj, Stateful):
+        yield obj.to_state()
+    else:
         raise TypeError(f"{type(obj).__name__} has no state to save: {', '.join(KINDS)} have")
-    return obj.to_state()
 
 
 def _clean_once(path: str | os.PathLike[str]) -> None:

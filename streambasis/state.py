@@ -6,6 +6,9 @@ built from one; :mod:`streambasis.snapshot` writes one to an Arrow file. Neither
 
 from __future__ import annotations
 
+import threading
+from collections.abc import Iterator
+from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass, field
 from typing import Any, Protocol, Self, runtime_checkable
 
@@ -121,6 +124,35 @@ class Stateful(Protocol):
         ...
 
 
+@runtime_checkable
+class Lender(Stateful, Protocol):
+    """An object that can be so large that it is written where it lies."""
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes held."""
+        ...
+
+    def lent_state(self) -> AbstractContextManager[State]:
+        """Lend the state without a copy; no push gets in before it is handed back."""
+        ...
+
+
+_lending = threading.local()
+
+
+@contextmanager
+def lending() -> Iterator[None]:
+    """While this is open, :func:`owned` copies nothing in this thread that is contiguous."""
+    _lending.open = True
+    try:
+        yield
+    finally:
+        _lending.open = False
+
+
 def owned(array: NDArray[Any]) -> NDArray[Any]:
     """Return a contiguous copy that nobody else writes to."""
+    if getattr(_lending, "open", False):
+        return np.ascontiguousarray(array)
     return np.array(array, order="C", copy=True)

@@ -290,3 +290,25 @@ def test_an_inner_product_that_was_lost_is_missed() -> None:
     for change in ({}, {"inner": np.eye(3)}):
         with pytest.raises(SnapshotError, match="inner product"):
             from_bytes(to_bytes(State(state.kind, state.facts, change, state.parts)))
+
+
+@pytest.mark.parametrize("name", ["StreamBasis", "PrincipalBasis"])
+def test_a_large_object_is_written_where_it_lies(
+    name: str, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Lent instead of copied, the same bytes are written, and a failure ends the loan as well."""
+    make, draw, _, _ = OBJECTS[name]
+    obj = make(np.random.default_rng(3), "float64")
+    obj.push_many(draw(np.random.default_rng(4), 40, "float64"))
+    copied = to_bytes(obj)
+    monkeypatch.setattr(streambasis.snapshot, "LENT", 0)
+    with obj.lent_state() as state:
+        vectors = state.parts["core"].arrays["vectors"]
+        assert np.shares_memory(vectors, obj._core.directions)
+    assert to_bytes(obj) == copied
+    with pytest.raises(OSError, match="no/such"):
+        save(obj, "/no/such/folder/state.arrow")
+    vectors = obj.to_state().parts["core"].arrays["vectors"]
+    assert not np.shares_memory(vectors, obj._core.directions)
+    obj.push_many(draw(np.random.default_rng(5), 40, "float64"))
+    assert to_bytes(obj) != copied
