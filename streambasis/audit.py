@@ -36,7 +36,7 @@ class Audit(NamedTuple):
         Samples seen.
     uncovered : int
         Samples beyond their tolerance that the basis does not answer for, since its capacity was
-        reached when they came.
+        reached when they came: all of them, or those still in the window where there is one.
     """
 
     orthogonality: float

@@ -21,6 +21,8 @@ from streambasis.kernels import growth as kernels
 from streambasis.projecting import powers_taken_out, scaled_rows, two_passes
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import State, lending
+from streambasis.times import span_nanoseconds
+from streambasis.window import Window
 
 POLICIES = {
     "criterion": kernels.CRITERION,
@@ -32,7 +34,7 @@ _new = tuple.__new__
 
 
 class StreamBasis:
-    """An orthonormal basis that grows by the samples that do not fit it.
+    """An orthonormal basis of all samples so far, or of those in a sliding window.
 
     Parameters
     ----------
@@ -45,12 +47,16 @@ class StreamBasis:
     atol : float
         In the units of the norm.
     capacity : int, optional
-        Most directions kept; the number of channels where not given. A sample beyond it is
-        rejected with reason ``"full"`` and counted in the audit as uncovered.
+        Most directions kept; where not given the number of channels, or ``window`` if that is
+        less. A sample beyond it is rejected with reason ``"full"`` and counted in the audit as
+        uncovered; in a window it takes its place when a direction is dropped.
     window : int, optional
-        Samples kept; None keeps what was learned for ever.
+        Samples kept: the oldest leaves when one more is pushed, and a direction that only samples
+        outside the window needed goes with it. None keeps what was learned for ever.
     span : float, datetime.timedelta or numpy.timedelta64, optional
-        Length of time kept; None for no limit.
+        Length of time kept, seconds where it is a number: a sample leaves when its time is at or
+        before that of the newest less the span. Both limits may be given; whichever comes first
+        holds. With a span every sample needs its time.
     dtype : str or dtype
         float32, float64, complex64 or complex128.
     inner : None, (n,) positive weights or (n, n) Hermitian positive definite matrix
@@ -85,6 +91,15 @@ class StreamBasis:
 
     Threads may share an object: each push is a whole. Kernels release the interpreter lock.
 
+    With a window, every sample in it lies within its tolerance of the span at every moment, and
+    each direction is held up by a pivot sample in it. The coordinates of all samples in the window
+    are kept: rank entries and 80 bytes each, in rows and slots that are allocated as they are
+    needed, at most doubling, and not given back. A span alone holds as many samples as fall
+    into it; ``window`` caps them. Samples that the capacity leaves uncovered are kept in full.
+    A sample that leaves costs nothing unless it is a pivot; then the window is searched for
+    one to take over, usually a few samples, at most rank entries of each, and rank² flops; a drop
+    rotates the directions and all coordinates, 4·rank·(n + window) flops.
+
     References
     ----------
     .. [1] L. Giraud and J. Langou, "A robust criterion for the modified Gram-Schmidt algorithm with
@@ -112,8 +127,10 @@ class StreamBasis:
         "_plain",
         "_release",
         "_shape",
+        "_span",
         "_step",
         "_vectors",
+        "_window",
     )
 
     def __init__(
@@ -132,17 +149,22 @@ class StreamBasis:
         self._channels = Channels(channels)
         count = self._channels.count
         self._dtype = checked_dtype(dtype)
-        if window is not None or span is not None:
-            raise SettingError(f"window={window}, span={span}: a window is not supported yet")
         if reorthogonalize not in POLICIES:
             raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
         self._inner = Inner(inner, count, self._dtype)
-        self._core = Growth(
+        self._window = None if window is None else _checked_window(window)
+        self._span = None if span is None else span_nanoseconds(span)
+        settings = (
             count,
-            _checked_capacity(capacity, count),
+            _checked_capacity(capacity, count, self._window),
             *_checked_tolerances(rtol, atol, float(np.finfo(self._dtype).eps)),
             POLICIES[reorthogonalize],
             self._dtype,
+        )
+        self._core: Growth | Window = (
+            Growth(*settings)
+            if window is None and span is None
+            else Window(*settings, self._window, self._span)
         )
         self._lock = threading.Lock()
         self._acquire, self._release = self._lock.acquire, self._lock.release
@@ -185,8 +207,48 @@ class StreamBasis:
 
     @property
     def window(self) -> int | None:
-        """Samples kept, None for all that was learned."""
-        return None
+        """Most samples kept, None where their number is not limited."""
+        return self._window
+
+    @property
+    def span(self) -> np.timedelta64 | None:
+        """Length of time kept, None where it is not limited."""
+        return None if self._span is None else np.timedelta64(self._span, "ns")
+
+    @property
+    def members(self) -> NDArray[np.int64]:
+        """Numbers of the samples in the window, oldest first.
+
+        Raises
+        ------
+        SettingError
+            Without a window, since no single sample is kept.
+        """
+        with self._lock:
+            return self._windowed("members").members
+
+    @property
+    def uncovered(self) -> NDArray[np.int64]:
+        """Numbers of the samples of the window that the capacity leaves outside the span.
+
+        Oldest first, which is the order in which they take their place when a direction is
+        dropped; they are among the pivots, or covered, from then on.
+
+        Raises
+        ------
+        SettingError
+            Without a window, since no single sample is kept; the audit counts them.
+        """
+        with self._lock:
+            return self._windowed("uncovered").waiting
+
+    def _windowed(self, what: str) -> Window:
+        if isinstance(self._core, Window):
+            return self._core
+        raise SettingError(
+            f"{what}: a basis without a window keeps no samples and cannot forget; "
+            "make it with window= or span="
+        )
 
     @property
     def count(self) -> int:
@@ -204,14 +266,18 @@ class StreamBasis:
 
         Notes
         -----
-        Without an inner product this is a view, and costs nothing; otherwise one of n·rank entries
-        is computed when the directions have changed, and kept.
+        Without an inner product and a window this is a view, and costs nothing; otherwise one of
+        n·rank entries is computed when the directions have changed, and kept.
         """
         with self._lock:
             version = self._core.version
             if self._vectors is None or self._vectors[0] != version:
                 held = self._core.directions
-                out = held.view() if self._plain else self._inner.leave(held)
+                if not self._plain:
+                    out = self._inner.leave(held)
+                else:
+                    # the directions of a window are rotated where they are
+                    out = held.copy() if isinstance(self._core, Window) else held.view()
                 out.setflags(write=False)
                 self._vectors = version, out
             return self._vectors[1]
@@ -230,8 +296,18 @@ class StreamBasis:
         -----
         Its transpose is the R of a QR factorization of the pivot samples as columns; the diagonal
         is positive. An entry beyond the range of the dtype is infinite or 0.
+
+        Raises
+        ------
+        SettingError
+            With a window, whose directions are not in the order of its pivot samples.
         """
         with self._lock:
+            if isinstance(self._core, Window):
+                raise SettingError(
+                    "triangular: the directions of a window are not in the order of its pivot "
+                    "samples; coordinates(pivot samples) is what ties them together"
+                )
             return self._core.triangular()
 
     def push(self, sample: ArrayLike, at: Any = None) -> Decision:
@@ -239,7 +315,7 @@ class StreamBasis:
         # a with statement costs 70 ns more than this, and a push of 16 channels 1 us in all
         self._acquire()
         try:
-            if at is not None:
+            if at is not None or self._core.timed:
                 self._core.stamp(at)
             if not (
                 sample.__class__ is ndarray
@@ -283,13 +359,16 @@ class StreamBasis:
         return f"sample {number}: its size in the inner product is beyond {self._dtype}"
 
     def _again(self, sample: NDArray[Any], reason: int) -> Decision:
-        """Answer a kernel that changed nothing: refuse the sample, or make room and repeat."""
+        """Answer a kernel that took nothing: refuse the sample, or make room and go on."""
         if reason == kernels.NOT_FINITE:
             one_sample(sample, self._channels, self._dtype, number=self._core.count)
-        self._core.make_room()
-        self._bind()
-        record = self._step(sample)
-        return _new(Decision, (*record[:5], REASONS[record[5]], *record[6:]))
+        record: tuple[Any, ...] = ()
+        while reason < 0:
+            self._core.make_room()
+            self._bind()
+            record = self._step(sample)
+            reason = record[5]
+        return _new(Decision, (*record[:5], REASONS[reason], *record[6:]))
 
     def push_many(self, samples: Any, at: Any = None) -> Decisions:
         """Take a batch, (m, n) or Arrow, as if pushed one at a time."""
@@ -412,6 +491,74 @@ class StreamBasis:
             directions = self._core.directions
             return *two_passes(rows, directions), directions
 
+    def retract(self, sample_id: int) -> int:
+        """Take one sample of the window back, whether it is a pivot or not.
+
+        Parameters
+        ----------
+        sample_id : int
+            Number of the sample, as its decision gave it.
+
+        Returns
+        -------
+        int
+            Directions that went with it.
+
+        Raises
+        ------
+        UnknownSampleError
+            If the number was never given out or its sample has left the window; nothing changes.
+        SettingError
+            Without a window: what a sample taught the basis for ever cannot be told apart.
+
+        Notes
+        -----
+        Finding the sample reads the numbers of the window. From then on it costs what its expiry
+        would have cost: nothing, unless it is a pivot.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(2, window=10)
+        >>> first, second = basis.push([1.0, 0.0]), basis.push([1.0, 1.0])
+        >>> basis.retract(first.sample), basis.vectors.round(3).tolist()
+        (1, [[0.707, 0.707]])
+        """
+        with self._lock:
+            return self._windowed("retract").retract(index(sample_id))
+
+    def expire(self, *, before: Any) -> int:
+        """Forget all samples of the window stamped before a time.
+
+        Parameters
+        ----------
+        before : float, int, datetime.datetime or numpy.datetime64
+            Samples with a time below this leave; one stamped just then stays.
+
+        Returns
+        -------
+        int
+            Samples that left.
+
+        Raises
+        ------
+        SampleError
+            If the samples of the window have no times.
+        SettingError
+            Without a window.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(2, window=10)
+        >>> for second in range(5):
+        ...     _ = basis.push([1.0, 0.0], at=second)
+        >>> basis.expire(before=3), basis.members.tolist()
+        (3, [3, 4])
+        """
+        with self._lock:
+            return self._windowed("expire").expire(before)[0]
+
     def renew(self) -> None:
         """Orthonormalize the directions afresh; span, order and pivot samples stay.
 
@@ -474,6 +621,8 @@ class StreamBasis:
             "named": self._channels.named,
             "dtype": self.dtype.name,
             "inner": self._inner.kind,
+            "window": self._window,
+            "span": self._span,
         }
         arrays = {} if self._inner.given is None else {"inner": self._inner.given}
         return State("StreamBasis", facts, arrays, {"core": self._core.to_state()})
@@ -487,15 +636,27 @@ class StreamBasis:
             names if facts["named"] else len(names),
             dtype=facts["dtype"],
             inner=inner_of(state),
+            window=facts["window"],
+            span=None if facts["span"] is None else np.timedelta64(facts["span"], "ns"),
         )
         basis._core.set_state(state.parts["core"])
         basis._bind()
         return basis
 
 
-def _checked_capacity(capacity: int | None, count: int) -> int:
+def _checked_window(window: Any) -> int:
+    try:
+        number = index(window)
+    except TypeError:
+        number = 0
+    if number < 1 or isinstance(window, bool):
+        raise SettingError(f"window={window!r}: a whole number of samples, at least 1")
+    return number
+
+
+def _checked_capacity(capacity: int | None, count: int, window: int | None) -> int:
     if capacity is None:
-        return count
+        return count if window is None else min(count, window)
     try:
         number = index(capacity)
     except TypeError:

@@ -14,7 +14,7 @@ from streambasis.kernels import block as blocks
 from streambasis.kernels import growth as kernels
 from streambasis.kernels._jit import entry
 from streambasis.memory import aligned_zeros
-from streambasis.projecting import scaled_rows
+from streambasis.projecting import scaled_rows, shift_entries
 from streambasis.state import State, owned
 
 FIRST_ROWS = 8
@@ -39,6 +39,9 @@ class Growth:
 
     ``step(sample)`` is the kernel bound to the arrays, and is made anew whenever they are.
     """
+
+    timed = False
+    """Whether every sample must be stamped before it is taken."""
 
     __slots__ = (
         "arrays",
@@ -168,12 +171,7 @@ class Growth:
         ``coordinates`` is overwritten.
         """
         kernels.solve_rows(self.factor_held, self.rank, coordinates)
-        shift = powers[:, None] - self.exponents
-        with np.errstate(over="ignore", under="ignore"):
-            coordinates.real = np.ldexp(coordinates.real, shift)
-            if coordinates.dtype.kind == "c":
-                coordinates.imag = np.ldexp(coordinates.imag, shift)
-        return coordinates
+        return shift_entries(coordinates, powers[:, None] - self.exponents)
 
     def renew(self) -> None:
         """Orthonormalize the directions afresh, in their order."""

@@ -44,3 +44,12 @@ def scaled_rows(rows: NDArray[Any], powers: NDArray[np.int64]) -> NDArray[Any]:
     with np.errstate(over="ignore", under="ignore"):
         scaled: NDArray[Any] = np.ldexp(parts, powers[:, None]).view(rows.dtype)
     return scaled
+
+
+def shift_entries(entries: NDArray[Any], powers: NDArray[np.int64]) -> NDArray[Any]:
+    """Multiply each entry by two to its own power, in place; beyond the range: infinite or 0."""
+    with np.errstate(over="ignore", under="ignore"):
+        entries.real = np.ldexp(entries.real, powers)
+        if entries.dtype.kind == "c":
+            entries.imag = np.ldexp(entries.imag, powers)
+    return entries
