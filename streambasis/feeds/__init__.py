@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from streambasis.feeds.broker import Broker
 from streambasis.feeds.files import open_feed
 from streambasis.feeds.reading import (
     BATCH_ROWS,
@@ -12,4 +13,13 @@ from streambasis.feeds.reading import (
     Position,
 )
 
-__all__ = ["BATCH_ROWS", "Batch", "Feed", "FeedOptions", "Malformed", "Position", "open_feed"]
+__all__ = [
+    "BATCH_ROWS",
+    "Batch",
+    "Broker",
+    "Feed",
+    "FeedOptions",
+    "Malformed",
+    "Position",
+    "open_feed",
+]

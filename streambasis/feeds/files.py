@@ -44,14 +44,15 @@ def open_feed(
     position: Position | None = None,
     options: FeedOptions | None = None,
 ) -> Feed:
-    """Open a feed of samples: a file, a folder of files, or standard input.
+    """Open a feed of samples: a file, a folder of files, standard input, or a topic of a broker.
 
     Parameters
     ----------
     source : str or Path
         A file of CSV or JSON lines (either may be packed with gzip), Parquet, or Arrow IPC (file
         or stream), whose format is told by its first bytes, not by its name; a folder of such
-        files, read in the order of their names; or ``-`` for standard input.
+        files, read in the order of their names; ``-`` for standard input; or
+        ``mqtt://host:port/topic``, ``mqtts://host:port/topic``.
     channels : sequence of str, optional
         Columns to read, in this order; every column but the time where not given.
     time : str, optional
@@ -88,6 +89,11 @@ def open_feed(
         raise FeedError(f"format {options.format!r} is none of {', '.join(FORMATS)}")
     opening = _Opening(channels, time, options, position)
     text = str(source)
+    if text.startswith(("mqtt://", "mqtts://")):
+        # needs paho-mqtt, which only the extra [watch] installs
+        from streambasis.feeds.mqtt import MqttFeed
+
+        return MqttFeed(text, channels, time, options, position)
     if text == STANDARD_INPUT:
         return opening.standard_input()
     path = Path(source)

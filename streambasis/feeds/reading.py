@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.errors import FeedError
+from streambasis.feeds.broker import Broker
 from streambasis.feeds.columns import Columns
 
 BATCH_ROWS = 1024
@@ -35,7 +36,7 @@ class Malformed:
         The file, topic or standard input that it came from.
     number : int
         Its line, counted from 1 over the file; in a binary file its row, counted from 1; in a
-        feed of messages the message, counted from 1 since the feed was opened.
+        feed of messages the message, counted from 1 over the feed.
     reason : str
         What is wrong with it.
     text : str
@@ -116,6 +117,9 @@ class FeedOptions:
         whole batches only, cut at the same sample numbers in every run.
     stop : threading.Event
         Set by whoever wants a waiting feed to end.
+    broker : Broker or None
+        How to reach a broker; None takes user and password from the environment and the defaults
+        for the rest.
     """
 
     format: str | None = None
@@ -123,6 +127,7 @@ class FeedOptions:
     follow: bool = False
     wait: float | None = 0.01
     stop: threading.Event = field(default_factory=threading.Event)
+    broker: Broker | None = None
 
 
 class Feed(Protocol):
@@ -145,6 +150,8 @@ class Feed(Protocol):
         The feed holds back samples until what it gave is committed.
     counts : dict of str to int
         What the feed counts beside samples, such as ``malformed`` and ``dropped``.
+    trouble : str
+        What keeps samples from coming, such as a lost connection; empty while all is well.
     """
 
     name: str
@@ -158,6 +165,9 @@ class Feed(Protocol):
 
     @property
     def counts(self) -> dict[str, int]: ...
+
+    @property
+    def trouble(self) -> str: ...
 
     def batches(self) -> Iterator[Batch]:
         """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
@@ -225,6 +235,11 @@ class PieceFeed:
     def counts(self) -> dict[str, int]:
         """Malformed rows up to the last batch given."""
         return {"malformed": self._malformed}
+
+    @property
+    def trouble(self) -> str:
+        """What keeps samples from coming; empty while all is well."""
+        return ""
 
     def pieces(self) -> Iterator[Piece | None]:
         """Yield the samples as they are found; None when nothing has come for a while."""
