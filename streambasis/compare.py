@@ -281,7 +281,7 @@ def _rows(x: Comparable, like: StreamBasis | PrincipalBasis | None) -> NDArray[A
     """Return orthonormal rows that span what x spans, entered into the inner product of like."""
     if isinstance(x, StreamBasis | PrincipalBasis):
         with x._lock:
-            rows: NDArray[Any] = x._core.directions[: x.rank]
+            rows: NDArray[Any] = x._core.directions
             return rows.astype(np.complex128 if rows.dtype.kind == "c" else np.float64)
     array = np.atleast_2d(np.asarray(x))
     if array.ndim != 2 or array.shape[1] == 0:

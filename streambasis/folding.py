@@ -27,6 +27,8 @@ MOST_RENEWALS = 3
 RENEWAL_LIMIT = 1.0
 """Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
 made orthonormal again."""
+SUSPECT = 1e-6
+"""Part in the first direction below which a channel may be silent."""
 GRAM_RANGE = 1e-4
 """Least ratio of the energies kept at which the Gram matrix of the core serves for its singular
 value decomposition. Forming it costs an error of one epsilon of the largest energy, so the least
@@ -135,10 +137,25 @@ class Subspace:
         return Spectrum(
             self.singular**2 / weight,
             self.outside / weight,
-            self.stack.shape[1],
+            self._alive(),
             self.effective,
             self.stack.dtype.kind == "c",
         )
+
+    def _alive(self) -> int:
+        """Return the number of channels that show more than rounding: those that carry noise."""
+        count = int(self.stack.shape[1])
+        if not self.held:
+            return count
+        # a channel that has a part in the first direction needs no closer look
+        suspects = np.flatnonzero(np.abs(self.stack[0]) < SUSPECT)
+        if not len(suspects):
+            return count
+        parts = self.singular[:, None] * np.abs(self.directions[:, suspects])
+        levels = np.sqrt((parts * parts).sum(axis=0))
+        rounding = ROUNDING_FLOOR * float(np.finfo(self.stack.dtype).eps)
+        silent = levels <= rounding * math.sqrt(self.power)
+        return max(count - int(np.count_nonzero(silent)), self.held)
 
     def spreads(self, rank: int) -> NDArray[np.float64]:
         """Return the standard deviations along the first directions, in units of 2**exponent."""
@@ -197,7 +214,12 @@ class Subspace:
         if self.exponent != 0:
             block = _times_power(block, -self.exponent)
             kernels.row_squares(block, 0.0, np.inf, squares)
-        deviations = block - _times_power(self.mean, -self.exponent) if self.centred else block
+        deviations = block
+        if self.centred:
+            mean = _times_power(self.mean, -self.exponent)
+            deviations = block - mean
+            # a difference is as uncertain as the larger of the two
+            squares += float(np.linalg.norm(mean)) ** 2
         if coordinates is None or self.exponent != 0:
             coordinates, rest = self.split(deviations)
         else:
@@ -216,6 +238,9 @@ class Subspace:
             if len(rest):
                 rest -= (factor * typed) * (typed.T @ rest)
             self.mean += _times_power(shift[0].astype(block.dtype), self.exponent)
+            if self.forget < 1.0 and np.abs(self.mean).max() < np.finfo(block.dtype).tiny:
+                # rounding would hold it at a subnormal number for ever
+                self.mean[:] = 0
         self.weight = total
         self.weight_squares = decay**2 * self.weight_squares + float(weights @ weights)
         self.power = decay * self.power + float(weights @ squares)
@@ -297,10 +322,20 @@ class Subspace:
             factor, change = self._factor_rest(coordinates, rest, rounding * np.sqrt(squares))
         else:
             factor, change = np.zeros((len(coordinates), 0), coordinates.dtype), None
-        whole = self.limit == self.stack.shape[1]
-        singular, rotation = core_spectrum(
-            decay * self.singular, coordinates, factor, self.limit, whole
+        # LAPACK's own scaling is by no power of two: bring the core near 1 first
+        top = max(
+            float(np.abs(coordinates).max(initial=0.0)), float(np.abs(factor).max(initial=0.0))
         )
+        level = math.frexp(max(top, float(self.singular[0]) if held else 0.0))[1]
+        down = math.ldexp(1.0, -level)
+        singular, rotation = core_spectrum(
+            (down * decay) * self.singular,
+            down * coordinates,
+            down * factor,
+            self.limit,
+            self.limit == self.stack.shape[1],
+        )
+        singular = np.ldexp(singular, level)
         floor = rounding * math.sqrt(self.power)
         keep = min(self.limit, int(np.count_nonzero(singular > floor)))
         self.outside += float(singular[keep:] @ singular[keep:])

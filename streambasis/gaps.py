@@ -83,7 +83,7 @@ class Gaps:
         if squared_sines[0] < LEAST_SINE**2:
             return None
         right = observed @ directions.conj().T
-        coordinates = ((right @ axes.conj()) / squared_sines) @ axes.T if len(gram) else right
+        coordinates = ((right @ axes) / squared_sines) @ axes.conj().T if len(gram) else right
         kept = directions - hidden @ lines
         outside = float(np.linalg.norm(observed - coordinates @ kept))
         expected = centre + coordinates @ directions

@@ -13,25 +13,12 @@ from numpy.typing import ArrayLike, DTypeLike, NDArray
 
 from streambasis.audit import Audit, orthogonality
 from streambasis.decisions import Score, Scores
-from streambasis.errors import SampleError, SettingError, SnapshotError
-from streambasis.folding import Subspace
-from streambasis.gaps import Gaps
+from streambasis.errors import SampleError, SettingError
 from streambasis.inner import Inner, inner_of
-from streambasis.kernels import principal as kernels
-from streambasis.ranks import rank_by_mdl, rank_by_noise
+from streambasis.intake import Intake
+from streambasis.principal_settings import Settings
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import State, lending, owned
-
-RULES = {"noise": rank_by_noise, "mdl": rank_by_mdl}
-
-WHOLE = 64
-"""Up to this many channels every direction is held: the core is then as small as a truncated one
-would be, and nothing is ever cut."""
-DEFAULT_MAX_RANK = 64
-LEAST_RESERVE = 8
-FIRST_BLOCK = 16
-LEAST_BLOCK, LARGEST_BLOCK = 16, 96
-WHOLE_BLOCK = 256
 
 
 class PrincipalBasis:
@@ -92,23 +79,7 @@ class PrincipalBasis:
     (2, 0.01)
     """
 
-    __slots__ = (
-        "_block",
-        "_channels",
-        "_core",
-        "_gaps",
-        "_growing",
-        "_header",
-        "_inner",
-        "_lock",
-        "_most",
-        "_noise",
-        "_rule",
-        "_shape",
-        "_spreads",
-        "_work",
-        "dtype",
-    )
+    __slots__ = ("_channels", "_core", "_inner", "_lock", "_shape", "dtype")
 
     def __init__(
         self,
@@ -126,23 +97,11 @@ class PrincipalBasis:
         self._channels = Channels(channels)
         count = self._channels.count
         self.dtype: Final = checked_dtype(dtype)
-        self._rule, self._most = _checked_rank(rank, max_rank, count)
-        forget = _checked_forgetting(forget, half_life)
-        limit = self._most + max(LEAST_RESERVE, self._most // 4)
-        limit = count if count <= WHOLE else min(count, limit)
-        growing = block is None
-        block = _default_block(count, limit, forget) if block is None else _checked_block(block)
+        settings = Settings.checked(count, rank, max_rank, forget, half_life, block)
         self._inner = Inner(inner, count, self.dtype)
-        self._core = Subspace(count, limit, block, forget, bool(centre), self.dtype)
-        self._gaps = Gaps(self._inner, count, self.dtype)
-        self._block = np.zeros((block, count), self.dtype)
-        self._header = np.zeros(kernels.HEADER, np.int64)
-        self._header[kernels.CENTRED] = bool(centre)
-        self._work = (np.zeros(count, self.dtype), np.zeros(self._most, self.dtype))
-        self._growing = growing
+        self._core = Intake(self._inner, count, settings, bool(centre), self.dtype)
         self._lock = threading.Lock()
         self._shape = (count,)
-        self._settle()
 
     @property
     def channels(self) -> tuple[str, ...]:
@@ -152,49 +111,48 @@ class PrincipalBasis:
     @property
     def block(self) -> int:
         """Most samples folded in at a time."""
-        return len(self._block)
+        return self._core.settings.block
 
     @property
     def forget(self) -> float:
         """Forgetting factor."""
-        return self._core.forget
+        return self._core.settings.forget
 
     @property
     def centre(self) -> bool:
         """Whether a running mean is kept."""
-        return self._core.centred
+        return self._core.core.centred
 
     @property
     def max_rank(self) -> int:
         """Most directions reported."""
-        return self._most
+        return self._core.settings.most
 
     @property
     def count(self) -> int:
         """Samples seen, those that wait for the next fold included."""
-        return int(self._header[kernels.COUNT])
+        return self._core.count
 
     @property
     def rank(self) -> int:
         """Directions reported, as of the last fold."""
-        return int(self._header[kernels.RANK])
+        return self._core.rank
 
     @property
     def effective_count(self) -> float:
         """Effective number of samples folded: (Σw)²/Σw² of their weights."""
-        return self._core.effective
+        return self._core.core.effective
 
     @property
     def nbytes(self) -> int:
         """Bytes held."""
-        own = (self._block, self._spreads, self._header, *self._work)
-        return sum(array.nbytes for array in own) + self._core.nbytes
+        return self._core.nbytes
 
     @property
     def vectors(self) -> NDArray[Any]:
         """The directions in channel units, (rank, n), largest energy first, read-only."""
         with self._lock:
-            out = self._inner.leave(self._core.directions[: self.rank].copy())
+            out = self._inner.leave(self._core.directions.copy())
         out.setflags(write=False)
         return out
 
@@ -205,20 +163,20 @@ class PrincipalBasis:
         The weighted sum of squares, about the mean where one is kept, over the sum of weights.
         """
         with self._lock, np.errstate(over="ignore", under="ignore"):
-            out = np.ldexp(self._spreads, self._core.exponent) ** 2
+            out = np.ldexp(self._core.spreads, self._core.core.exponent) ** 2
         out.setflags(write=False)
         return out
 
     @property
     def noise(self) -> float:
         """Variance per residual dimension, corrected for what the leading directions absorb."""
-        return self._noise
+        return self._core.noise
 
     @property
     def mean(self) -> NDArray[Any]:
         """The running mean in channel units, (n,), read-only; zero unless ``centre``."""
         with self._lock:
-            out = self._inner.leave(self._core.mean.copy())
+            out = self._inner.leave(self._core.core.mean.copy())
         out.setflags(write=False)
         return out
 
@@ -237,7 +195,7 @@ class PrincipalBasis:
         with self._lock:
             if not (
                 sample.__class__ is np.ndarray
-                and sample.dtype is self._block.dtype
+                and sample.dtype is self.dtype
                 and sample.shape == self._shape
                 and self._inner.kind == "euclidean"
             ):
@@ -247,24 +205,18 @@ class PrincipalBasis:
                 if np.isnan(sample).any():
                     return self._take(sample[None], fold=True)[0]
                 sample = self._entered(sample)
-            core = self._core
-            number, norm, residual, spe, t2, rank, position = kernels.push_principal(
-                sample, core.mean, core.directions, self._spreads, self._header, *self._work,
-                self._block,
-            )  # fmt: skip
-            if position >= 0:
-                checked = one_sample(
-                    sample, self._channels, self.dtype, number=self.count, missing=True
-                )
-                if not np.isnan(checked).any():
-                    raise SampleError(
-                        f"sample {self.count}: a value above a quarter of what {self.dtype} holds "
-                        "cannot be taken about a mean; the sample was not taken"
-                    )
+            number, norm, residual, spe, t2, rank, position = self._core.push(sample)
+            if position < 0:
+                return Score(number, norm, residual, spe, t2, rank)
+            checked = one_sample(
+                sample, self._channels, self.dtype, number=self.count, missing=True
+            )
+            if np.isnan(checked).any():
                 return self._take(checked[None], fold=True)[0]
-            if self._header[kernels.FILL] == self._header[kernels.DUE]:
-                self._fold()
-            return Score(number, norm, residual, spe, t2, rank)
+            raise SampleError(
+                f"sample {self.count}: a value above a quarter of what {self.dtype} holds "
+                "cannot be taken about a mean; the sample was not taken"
+            )
 
     def push_many(self, samples: Any) -> Scores:
         """Score a batch, (m, n) or Arrow, and take it, as if pushed one at a time.
@@ -288,21 +240,13 @@ class PrincipalBasis:
             checked = self._checked(samples)
             if np.isnan(checked).any():
                 self._take(checked, fold=True)
-                return
-            entered = self._entered(checked)
-            start = 0
-            while start < len(entered):
-                room = int(self._header[kernels.DUE] - self._header[kernels.FILL])
-                piece = entered[start : start + room]
-                self._header[kernels.COUNT] += len(piece)
-                self._append(piece, None)
-                start += len(piece)
+            else:
+                self._core.take_unscored(self._entered(checked))
 
     def flush(self) -> None:
         """Fold the samples that wait for their block to fill."""
         with self._lock:
-            if self._header[kernels.FILL]:
-                self._fold()
+            self._core.fold()
 
     def _checked(self, samples: Any) -> NDArray[Any]:
         return many_samples(samples, self._channels, self.dtype, first=self.count, missing=True)
@@ -314,7 +258,7 @@ class PrincipalBasis:
                 f"sample {self.count} or later: a value in the inner product is beyond "
                 f"{self.dtype}; nothing was taken"
             )
-        if self._core.centred:
+        if self._core.core.centred:
             with np.errstate(over="ignore"):
                 small = np.isfinite(4 * entered).all()
             if not small:
@@ -325,132 +269,11 @@ class PrincipalBasis:
         return entered
 
     def _take(self, samples: NDArray[Any], *, fold: bool) -> Scores:
-        """Score samples, (m, n), and take them too where ``fold`` says so."""
+        """Score checked samples, (m, n), and take them too where ``fold`` says so."""
         gaps = np.isnan(samples)
-        gappy = gaps.any(axis=1)
-        some = bool(gappy.any())
-        entered = self._entered(np.where(gaps, 0, samples) if some else samples)
-        m = len(samples)
-        out = Scores(
-            sample=np.arange(self.count, self.count + m),
-            norm=np.empty(m),
-            residual=np.empty(m),
-            spe=np.empty(m),
-            t2=np.empty(m),
-            rank=np.empty(m, np.int64),
-        )
-        start = 0
-        while start < m:
-            room = int(self._header[kernels.DUE] - self._header[kernels.FILL])
-            room = room if fold else len(self._block)
-            rows = slice(start, min(start + room, m))
-            piece = entered[rows]
-            out.rank[rows] = self.rank
-            known = None
-            if some and gappy[rows].any():
-                piece, known = self._fill_gaps(piece, gaps[rows], out, rows)
-                coordinates = None
-            else:
-                coordinates = self._score(piece, out, rows)
-            if fold:
-                self._header[kernels.COUNT] += len(piece)
-                self._append(piece if known is None else piece[known], coordinates)
-            start = rows.stop
-        return out
-
-    def _append(self, piece: NDArray[Any], coordinates: NDArray[Any] | None) -> None:
-        """Put rows into the block, which has room for them, and fold it when it is full."""
-        due = int(self._header[kernels.DUE])
-        if len(piece) == due:
-            self._fold(piece, coordinates)
-            return
-        fill = int(self._header[kernels.FILL])
-        self._block[fill : fill + len(piece)] = piece
-        self._header[kernels.FILL] = fill + len(piece)
-        if fill + len(piece) == due:
-            self._fold()
-
-    def _score(self, piece: NDArray[Any], out: Scores, rows: slice) -> NDArray[Any] | None:
-        """Score rows; return their coordinates where the fold may use them again."""
-        core = self._core
-        deviations = piece - core.mean if core.centred else piece
-        squares = np.empty(len(piece))
-        status = kernels.row_squares(deviations, *core.safe, squares)
-        if status == kernels.UNUSUAL or core.exponent != 0:
-            for i, row in enumerate(piece, rows.start):
-                out.norm[i], out.residual[i], out.spe[i], out.t2[i], _ = kernels.score_sample(
-                    row, core.mean, core.directions, self._spreads, self._header, *self._work
-                )
-            return None
-        out.norm[rows] = np.sqrt(squares)
-        coordinates, rest = core.split(deviations)
-        if len(rest):
-            kernels.row_squares(rest, 0.0, np.inf, squares)
-        else:
-            squares[:] = 0.0
-        kernels.score_rows(
-            coordinates, self._spreads, self.rank, squares,
-            out.residual[rows], out.spe[rows], out.t2[rows],
-        )  # fmt: skip
-        return coordinates
-
-    def _fill_gaps(
-        self, piece: NDArray[Any], gaps: NDArray[np.bool_], out: Scores, rows: slice
-    ) -> tuple[NDArray[Any], NDArray[np.bool_]]:
-        """Score rows of which some have gaps; return them filled, and which are determined."""
-        core, rank = self._core, self.rank
-        fill = int(self._header[kernels.FILL])
-        filled, known = piece.copy(), np.ones(len(piece), np.bool_)
-        for i, row in enumerate(piece):
-            at = rows.start + i
-            if not gaps[i].any():
-                self._score(row[None], out, slice(at, at + 1))
-                continue
-            if core.weight:
-                centre = core.mean
-            else:
-                # nothing is known yet: expect what this first block has shown so far
-                earlier = np.concatenate([self._block[:fill], filled[:i][known[:i]]])
-                centre = earlier.mean(axis=0) if len(earlier) else core.mean
-            found = self._gaps.fill(row, gaps[i], core.mean, core.directions[:rank], centre)
-            if found is None:
-                known[i] = False
-                out.norm[at] = out.residual[at] = out.spe[at] = out.t2[at] = np.nan
-                continue
-            coordinates, outside, norm, filled[i] = found
-            out.norm[at], out.residual[at], out.spe[at] = norm, outside, outside * outside
-            ratios = np.ldexp(np.abs(coordinates) / self._spreads, -core.exponent)
-            out.t2[at] = float(ratios @ ratios)
-        return filled, known
-
-    def _fold(
-        self, rows: NDArray[Any] | None = None, coordinates: NDArray[Any] | None = None
-    ) -> None:
-        """Fold rows, or what the block holds, and settle the rank."""
-        if rows is None:
-            rows = self._block[: int(self._header[kernels.FILL])]
-        self._core.fold(rows, coordinates)
-        self._header[kernels.FOLDED] += len(rows)
-        self._header[kernels.FILL] = 0
-        self._settle()
-
-    def _settle(self) -> None:
-        """Apply the rank rule to the spectrum as it stands, and say when the next fold is due."""
-        folded = int(self._header[kernels.FOLDED])
-        due = min(len(self._block), max(FIRST_BLOCK, folded)) if self._growing else len(self._block)
-        self._header[kernels.DUE] = due
-        spectrum = self._core.spectrum()
-        if isinstance(self._rule, int):
-            rank = min(self._rule, len(spectrum.energies))
-        else:
-            rank = RULES[self._rule](spectrum, self._most)
-        self._header[kernels.RANK] = rank
-        self._header[kernels.EXPONENT] = self._core.exponent
-        self._spreads = self._core.spreads(rank)
-        try:
-            self._noise = math.ldexp(spectrum.noise(rank), 2 * self._core.exponent)
-        except OverflowError:
-            self._noise = math.inf
+        if gaps.any():
+            return self._core.take(self._entered(np.where(gaps, 0, samples)), gaps, fold=fold)
+        return self._core.take(self._entered(samples), None, fold=fold)
 
     def coordinates(self, x: ArrayLike) -> NDArray[Any]:
         """Return the inner products of x, (n,) or (m, n), less the mean, with the directions."""
@@ -471,7 +294,7 @@ class PrincipalBasis:
         check = one_sample if array.ndim == 1 else many_samples
         entered = self._inner.enter(check(array, self._channels, self.dtype))
         with self._lock:
-            directions, mean = self._core.directions[: self.rank], self._core.mean
+            directions, mean = self._core.directions, self._core.core.mean
             deviations = entered - mean
             first = deviations @ directions.conj().T
             rest = deviations - first @ directions
@@ -489,13 +312,7 @@ class PrincipalBasis:
             mine, theirs = (getattr(basis, name) for basis in (first, second))
             if mine != theirs:
                 raise SettingError(f"bases of different {name}: {mine} and {theirs}")
-        for part in (first, second):
-            part.flush()
-        folded = int(second._header[kernels.FOLDED])
-        first._core.absorb(second._core, folded)
-        first._header[kernels.COUNT] += second.count
-        first._header[kernels.FOLDED] += folded
-        first._settle()
+        first._core.absorb(second._core)
         return first
 
     def audit(self) -> Audit:
@@ -509,13 +326,13 @@ class PrincipalBasis:
             reported; ``renewals``, ``rank`` and ``samples``.
         """
         with self._lock:
-            spreads = self._spreads
+            spreads = self._core.spreads
             condition = float(spreads[0] / spreads[-1]) if len(spreads) else 1.0
             return Audit(
-                orthogonality(self._core.directions),
+                orthogonality(self._core.core.directions),
                 math.nan,
                 condition,
-                self._core.renewals,
+                self._core.core.renewals,
                 self.rank,
                 self.count,
             )
@@ -532,96 +349,28 @@ class PrincipalBasis:
             yield self._state()
 
     def _state(self) -> State:
-        core = self._core
-        facts = {
+        facts, arrays, core = self._core.to_state()
+        facts |= {
             "channels": list(self._channels.names),
             "named": self._channels.named,
             "dtype": self.dtype.name,
             "inner": self._inner.kind,
-            "rank": self._rule,
-            "max_rank": self._most,
-            "forget": core.forget,
-            "block": len(self._block),
-            "growing": self._growing,
-            "centre": core.centred,
-            "count": self.count,
-            "folded": int(self._header[kernels.FOLDED]),
         }
-        arrays = {"block": owned(self._block[: int(self._header[kernels.FILL])])}
         if self._inner.given is not None:
             arrays["inner"] = owned(self._inner.given)
-        return State("PrincipalBasis", facts, arrays, {"core": core.to_state()})
+        return State("PrincipalBasis", facts, arrays, {"core": core})
 
     @classmethod
     def from_state(cls, state: State) -> Self:
         """Build a basis that goes on where the state was taken."""
         facts = state.facts
         names = facts["channels"]
-        settings = {
-            key: facts[key] for key in ("rank", "max_rank", "forget", "block", "centre", "dtype")
-        }
-        basis = cls(names if facts["named"] else len(names), inner=inner_of(state), **settings)
-        basis._core.set_state(state.parts["core"])
-        waiting = state.take("block", basis.dtype, (None, len(names)), finite=True)
-        if not len(waiting) < len(basis._block) or not len(waiting) <= facts["count"]:
-            raise SnapshotError(
-                f"{len(waiting)} of {facts['count']} samples wait for a block of "
-                f"{len(basis._block)} to fill"
-            )
-        basis._block[: len(waiting)] = waiting
-        basis._header[kernels.FILL] = len(waiting)
-        basis._header[kernels.COUNT] = facts["count"]
-        basis._header[kernels.FOLDED] = facts["folded"]
-        basis._growing = facts["growing"]
-        basis._settle()
+        given = ("rank", "max_rank", "forget", "centre", "dtype")
+        basis = cls(
+            names if facts["named"] else len(names),
+            block=None if facts["growing"] else facts["block"],
+            inner=inner_of(state),
+            **{name: facts[name] for name in given},
+        )
+        basis._core.set_state(state)
         return basis
-
-
-def _checked_rank(rank: Any, max_rank: Any, count: int) -> tuple[str | int, int]:
-    """Return the rank rule and the most directions reported."""
-    fixed = isinstance(rank, int | np.integer) and not isinstance(rank, bool)
-    if not fixed and rank not in RULES:
-        raise SettingError(f'rank={rank!r}: "noise", "mdl" or a whole number')
-    if fixed and not 1 <= rank <= count:
-        raise SettingError(f"rank={rank}: from 1 to the number of channels ({count})")
-    if max_rank is None:
-        max_rank = rank if fixed else min(DEFAULT_MAX_RANK, count)
-    elif not isinstance(max_rank, int | np.integer) or not 1 <= max_rank <= count:
-        raise SettingError(f"max_rank={max_rank!r}: from 1 to the number of channels ({count})")
-    if fixed and rank > max_rank:
-        raise SettingError(f"rank={rank} is above max_rank={max_rank}")
-    return (int(rank) if fixed else str(rank)), int(max_rank)
-
-
-def _checked_forgetting(forget: float, half_life: float | None) -> float:
-    """Return the forgetting factor."""
-    if half_life is not None:
-        if forget != 1.0:
-            raise SettingError(f"forget={forget} and half_life={half_life}: give one of the two")
-        if not half_life > 0.0:
-            raise SettingError(f"half_life={half_life}: a number of samples above 0")
-        return float(0.5 ** (1.0 / half_life))
-    if not 0.0 < forget <= 1.0:
-        raise SettingError(f"forget={forget}: a factor above 0 and at most 1")
-    return float(forget)
-
-
-def _checked_block(block: Any) -> int:
-    """Return the number of samples folded at a time."""
-    if not isinstance(block, int | np.integer) or isinstance(block, bool) or block < 1:
-        raise SettingError(f"block={block!r}: a whole number of samples, at least 1")
-    return int(block)
-
-
-def _default_block(count: int, limit: int, forget: float) -> int:
-    """Return the block that costs least per sample, as far as the memory allows."""
-    if limit == count:
-        # the core stays as it is however many samples are folded
-        block = min(max(8 * count, LEAST_BLOCK), WHOLE_BLOCK)
-    else:
-        # the core grows with the block: it costs least per sample near the directions held
-        block = min(max(limit, LEAST_BLOCK), LARGEST_BLOCK)
-    if forget < 1.0:
-        # a basis that lags by more than an eighth of its memory forgets out of step
-        block = min(block, max(1, int(0.125 / (1.0 - forget))))
-    return block

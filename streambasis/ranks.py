@@ -130,10 +130,13 @@ def description_lengths(spectrum: Spectrum) -> NDArray[np.float64]:
     """Return MDL(k) for k = 0, 1, ... up to a constant, as :func:`rank_by_mdl` defines it.
 
     Where nothing at all lies beyond the first k directions the noise has no variance and the
-    length is minus infinity.
+    length is minus infinity. With fewer samples than channels, where that would be so by count
+    alone, samples and channels change roles: the spectrum does not tell them apart.
     """
     energies, n, samples = spectrum.energies, spectrum.dimension, spectrum.samples
     held = len(energies)
+    if spectrum.outside == 0.0 and int(samples) <= held < n:
+        n, samples = held, float(n)
     if samples <= 1.0 or not held:
         return np.zeros(1)
     k = np.arange(min(held, n - 1) + 1)

@@ -17,7 +17,8 @@ from streambasis.monitor.limits import SpeLimit, t2_limit
 from streambasis.monitor.projection import Projection
 from streambasis.monitor.quantiles import chi2_quantile
 from streambasis.monitor.scaling import Scaling
-from streambasis.principal import WHOLE, PrincipalBasis
+from streambasis.principal import PrincipalBasis
+from streambasis.principal_settings import WHOLE
 from streambasis.state import State, owned
 
 NEARLY = 0.01
