@@ -360,9 +360,12 @@ class StreamBasis:
 
     def _again(self, sample: NDArray[Any], reason: int) -> Decision:
         """Answer a kernel that took nothing: refuse the sample, or make room and go on."""
-        if reason == kernels.NOT_FINITE:
-            one_sample(sample, self._channels, self._dtype, number=self._core.count)
         record: tuple[Any, ...] = ()
+        if reason == kernels.NOT_FINITE:
+            # a copy: another thread that writes to the sample may have made it finite meanwhile
+            sample = one_sample(sample.copy(), self._channels, self._dtype, number=self._core.count)
+            record = self._step(sample)
+            reason = record[5]
         while reason < 0:
             self._core.make_room()
             self._bind()

@@ -29,7 +29,6 @@ def exponent_of_bits(largest, mantissa, bias, top):
     exponent = power - bias
     if power == 0:
         # subnormal: the leading bit says how far below the least normal number
-        exponent += 1
         while largest >> (mantissa - 1) == 0:
             largest = largest << 1
             exponent -= 1
