@@ -468,10 +468,16 @@ class Window:
         """Hand over the arrays as far as they are in use."""
         k, top = self.rank, int(self._integers[kernels.TOP])
         q, r = self._block
+        chain = _chain(self._members[:top])
+        stamped = chain if self._integers[kernels.STAMPED] else chain[:0]
         return State(
             "Window",
             arrays={
                 "vectors": owned(self.directions),
+                # these three are for readers of a snapshot; they follow from the others
+                "pivots": self.pivots,
+                "samples": self._members[chain, kernels.ID],
+                "times": self._members[stamped, kernels.TIME],
                 "orthogonal": owned(q),
                 "triangular": owned(r),
                 "holders": owned(self._holders),
@@ -505,6 +511,9 @@ class Window:
         sizes = state.take("sizes", np.float64, (top, 3))
         pool = state.take("uncovered", dtype, (uncovered, channels))
         owners = state.take("owners", np.int64, (uncovered,))
+        state.take("pivots", np.int64, (k,))
+        live = len(state.take("samples", np.int64, (int(header[kernels.LIVE]),)))
+        state.take("times", np.int64, (live if header[kernels.STAMPED] else 0,))
         reals = state.take("reals", np.float64, self._reals.shape, finite=True)
         slots = [header[[kernels.OLDEST, kernels.NEWEST, kernels.FREE]], holders, owners]
         slots += [members[:, kernels.OLDER], members[:, kernels.NEWER]]
@@ -513,7 +522,7 @@ class Window:
             any(((each < kernels.NONE) | (each >= top)).any() for each in slots)
             or ((places < kernels.NONE) | (places >= uncovered)).any()
             or not k <= header[growth.CAPACITY] <= channels
-            or not 0 <= header[kernels.LIVE] <= top
+            or not _linked(header, members)
         ):
             raise SnapshotError(
                 f"a window of {header[kernels.LIVE]} samples on {channels} channels, {k} "
@@ -533,6 +542,29 @@ class Window:
         self._coordinates[:top, :k] = coordinates
         self._members[:top], self._sizes[:top] = members, sizes
         self._pool[:] = pool
+
+
+def _chain(members: NDArray[np.int64]) -> NDArray[np.intp]:
+    """Return the slots in use, oldest sample first."""
+    used = np.flatnonzero(members[:, kernels.ID] != kernels.NONE)
+    return used[np.argsort(members[used, kernels.ID], kind="stable")]
+
+
+def _linked(header: NDArray[np.int64], members: NDArray[np.int64]) -> bool:
+    """Return whether the links lead from the oldest to the newest sample, and over free slots."""
+    chain = _chain(members)
+    free = np.flatnonzero(members[:, kernels.ID] == kernels.NONE)
+    around = np.pad(chain, 1, constant_values=kernels.NONE)
+    # each free slot is led to by exactly one other or by the header, the last one leads nowhere
+    leads = np.concatenate([header[[kernels.FREE]], members[free, kernels.NEWER]])
+    return bool(
+        header[kernels.LIVE] == len(chain)
+        and header[kernels.OLDEST] == around[1]
+        and header[kernels.NEWEST] == around[-2]
+        and (members[chain, kernels.OLDER] == around[:-2]).all()
+        and (members[chain, kernels.NEWER] == around[2:]).all()
+        and (np.sort(leads) == np.concatenate([[kernels.NONE], free])).all()
+    )
 
 
 def _enlarged(array: NDArray[Any], shape: tuple[int, ...]) -> NDArray[Any]:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import io
 import os
 import tempfile
 from collections.abc import Callable
 from typing import Any, NamedTuple
 
 import numpy as np
+import polars as pl
 import pyarrow as pa
 import pytest
 from hypothesis import given
@@ -16,6 +18,7 @@ from numpy.typing import NDArray
 
 import streambasis
 from streambasis.errors import SnapshotError
+from streambasis.kernels import window as kernels
 from streambasis.snapshot import from_bytes, load, save, state_from_bytes, to_bytes
 from streambasis.state import State
 
@@ -69,6 +72,19 @@ def stream_basis(rng: np.random.Generator, dtype: str) -> Any:
     )
 
 
+def windowed_basis(rng: np.random.Generator, dtype: str) -> Any:
+    """Return a basis with a window, with settings drawn at random."""
+    return streambasis.StreamBasis(
+        CHANNELS,
+        window=[1, 7, 20][rng.integers(3)],
+        span=[None, 9.0][rng.integers(2)],
+        rtol=[None, 1e-3][rng.integers(2)],
+        capacity=[None, 3][rng.integers(2)],
+        dtype=dtype,
+        inner=[None, rng.uniform(0.5, 2, CHANNELS)][rng.integers(2)],
+    )
+
+
 def principal_basis(rng: np.random.Generator, dtype: str) -> Any:
     """Return a principal basis with settings drawn at random."""
     return streambasis.PrincipalBasis(
@@ -117,10 +133,23 @@ class Case(NamedTuple):
 
 OBJECTS = {
     "StreamBasis": Case(stream_basis, deterministic),
+    "Window": Case(windowed_basis, deterministic),
     "PrincipalBasis": Case(principal_basis, noisy),
     "NoveltyMonitor": Case(novelty_monitor, faulty, ("float64",), 40),
 }
 EVERY_DTYPE = [(name, dtype) for name, case in OBJECTS.items() for dtype in case.dtypes]
+
+
+def is_windowed(obj: Any) -> bool:
+    """Return whether samples leave the object again, so that it wants their times."""
+    return isinstance(obj, streambasis.StreamBasis) and (obj.window or obj.span) is not None
+
+
+def push_all(obj: Any, samples: Samples) -> Any:
+    """Push a batch, one sample a second where times are wanted."""
+    if not is_windowed(obj):
+        return obj.push_many(samples)
+    return obj.push_many(samples, at=np.arange(obj.count, obj.count + len(samples)))
 
 
 def fed(obj: Any, samples: Samples, sizes: list[int]) -> list[str]:
@@ -129,17 +158,19 @@ def fed(obj: Any, samples: Samples, sizes: list[int]) -> list[str]:
     at = 0
     for size in sizes:
         if size == 0:
-            answer = obj.push(samples[at])
+            answer = obj.push(samples[at], **({"at": obj.count} if is_windowed(obj) else {}))
             at += 1
             answers.append("|".join(repr(value) for value in answer))
         else:
-            table = obj.push_many(samples[at : at + size])
+            table = push_all(obj, samples[at : at + size])
             at += size
             if isinstance(table, pa.Table):
                 answers += [f"{name} {table[name].to_pylist()}" for name in table.column_names]
             else:
                 for name in table.__slots__:
                     answers.append(f"{name} {np.asarray(getattr(table, name)).tobytes().hex()}")
+        if is_windowed(obj) and obj.count % 3 == 0 and len(obj.members):
+            answers.append(f"retracted {obj.retract(obj.members[obj.count % len(obj.members)])}")
         if isinstance(obj, streambasis.NoveltyMonitor):
             for event in obj.events:
                 if not event.open and event["label"] is None and len(event["channels"]) % 2:
@@ -189,12 +220,12 @@ def test_an_object_may_be_pushed_to_after_it_was_saved(name: str) -> None:
     make, draw, _, length = OBJECTS[name]
     samples = draw(np.random.default_rng(2), 60 * length, "float64")
     obj = make(np.random.default_rng(1), "float64")
-    obj.push_many(samples[: 30 * length])
+    push_all(obj, samples[: 30 * length])
     state = obj.to_state()
     before = to_bytes(state)
     one, two = (type(obj).from_state(state) for _ in range(2))
     for each in (obj, one):
-        each.push_many(samples[30 * length :])
+        push_all(each, samples[30 * length :])
     assert to_bytes(state) == before
     assert to_bytes(two) == before
     assert to_bytes(one) == to_bytes(obj)
@@ -205,7 +236,7 @@ def test_a_state_that_does_not_fit_together_is_refused(name: str, dtype: str) ->
     """An array or fact that is missing, longer or of another type is refused, not crashed on."""
     make, draw, _, length = OBJECTS[name]
     obj = make(np.random.default_rng(4), dtype)
-    obj.push_many(draw(np.random.default_rng(5), 40 * length, dtype))
+    push_all(obj, draw(np.random.default_rng(5), 40 * length, dtype))
     good = to_bytes(obj)
     spoiled = 0
     for spoil in (drop, lengthen, shorten, retype):
@@ -312,3 +343,36 @@ def test_a_large_object_is_written_where_it_lies(
     assert not np.shares_memory(vectors, obj._core.directions)
     obj.push_many(draw(np.random.default_rng(5), 40, "float64"))
     assert to_bytes(obj) != copied
+
+
+def test_broken_links_between_the_samples_of_a_window_are_refused() -> None:
+    """A window whose samples do not follow one another would never be walked to its end."""
+    obj = streambasis.StreamBasis(CHANNELS, window=8)
+    obj.push_many(deterministic(np.random.default_rng(1), 20, "float64"))
+    obj.retract(obj.members[3])
+    good = to_bytes(obj)
+    assert from_bytes(good).count == 20
+    slots, links = state_from_bytes(good).parts["core"].arrays["members"].shape
+    for slot in range(slots):
+        for link in (kernels.OLDER, kernels.NEWER):
+            state = state_from_bytes(good)
+            members = state.parts["core"].arrays["members"].copy()
+            if members[slot, kernels.ID] == kernels.NONE and link == kernels.OLDER:
+                continue  # a free slot is linked one way only
+            members[slot, link] = (members[slot, link] + 1) % slots
+            state.parts["core"].arrays["members"] = members
+            with pytest.raises(SnapshotError, match="do not fit each other"):
+                from_bytes(to_bytes(state))
+    assert links == kernels.MEMBER
+
+
+def test_the_samples_of_a_window_are_plain_columns() -> None:
+    """Numbers and times of the samples in the window, oldest first, and of the pivots."""
+    obj = streambasis.StreamBasis(CHANNELS, window=8)
+    obj.push_many(deterministic(np.random.default_rng(1), 20, "float64"), at=np.arange(20) / 4)
+    obj.retract(obj.members[3])
+    frame = pl.read_ipc(io.BytesIO(to_bytes(obj)))
+    assert frame["samples"][0].to_list() == obj.members.tolist()
+    assert frame["times"][0].to_list() == [number * 250_000_000 for number in obj.members]
+    assert frame["pivots"][0].to_list() == obj.pivots.tolist()
+    assert np.array_equal(frame["vectors"].to_numpy()[0], obj.vectors)
