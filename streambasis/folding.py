@@ -226,7 +226,7 @@ class Subspace:
             rest = self._room(len(block))
 
         wide = np.complex128 if block.dtype.kind == "c" else np.float64
-        coordinates = coordinates.astype(wide)
+        coordinates = coordinates.astype(wide, copy=False)
         typed = roots.astype(np.finfo(block.dtype).dtype)[:, None]
         if self.forget < 1.0:
             coordinates *= roots[:, None]
@@ -234,7 +234,7 @@ class Subspace:
         if self.centred:
             shift = (typed * typed).T @ deviations / total
             factor = (1.0 - math.sqrt(before / total)) / added
-            coordinates -= factor * np.outer(roots, roots @ coordinates)
+            coordinates -= (factor * roots)[:, None] * (roots @ coordinates)
             if len(rest):
                 rest -= (factor * typed) * (typed.T @ rest)
             self.mean += _times_power(shift[0].astype(block.dtype), self.exponent)

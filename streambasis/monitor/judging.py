@@ -20,7 +20,7 @@ from streambasis.state import State, owned
 MOST_OPEN = 8
 """Most events open at the same time."""
 
-BUFFERED = ("z", "spe", "ratio", "number", "time", "loose", "fold", "pool")
+BUFFERED = ("z", "spe", "number", "time", "loose", "fold", "pool")
 COUNTED = ("ring", "counters", "last", "quiet", "taken")
 """The arrays that hold a row of the buffer each, and those of the walk."""
 
@@ -61,7 +61,7 @@ class Judge:
         rows = settings.window + settings.block
         self._fill = 0
         self._z = np.zeros((rows, n))
-        self._spe, self._ratio = np.zeros(rows), np.zeros(rows)
+        self._spe = np.zeros(rows)
         self._number, self._time = np.full(rows, -1), np.full(rows, NO_TIME)
         self._loose, self._fold, self._pool = (np.zeros(rows, np.bool_) for _ in range(3))
 
@@ -160,22 +160,24 @@ class Judge:
         """Keep what the end of the block needs of rows, and make them fit to be folded."""
         size = rows.stop - rows.start
         beyond, judged = scored.beyond[:size], scored.judged[:size]
-        whole = self.model.free
-        left = whole - sum(len(directions) for directions in self._standing)
-        # an open event has fewer dimensions left for noise; the limit is kept for all of them
-        self._spe[rows] = scored.rest[:size] * (whole / max(left, 1))
-        self._ratio[rows] = scored.rest[:size] / scored.limit[:size]
-        self._loose[rows] = beyond & (not self._forming)
-        self._fold[rows] = judged & ~beyond
-        self._pool[rows] = judged & (not self._forming)
-        self._pool[[rows.start + i for i in scored.special if i < size]] = False
+        fold = np.greater(judged, beyond, out=self._fold[rows])
+        self._loose[rows] = not self._forming
+        self._loose[rows] &= beyond
+        self._pool[rows] = not self._forming
+        self._pool[rows] &= judged
+        self._spe[rows] = scored.rest[:size]
+        if self.open:
+            # with open events taken off, fewer dimensions are left for noise than the limit is for
+            whole = self.model.free
+            left = whole - sum(len(directions) for directions in self._standing)
+            self._spe[rows] *= whole / max(left, 1)
+        if scored.special:
+            self._pool[[rows.start + i for i in scored.special if i < size]] = False
         early = self._pool[rows] & beyond
         if early.any():
             self.precursors.hold(self._number[rows][early], self._spe[rows][early])
             self._pool[rows] &= ~early
-        which = np.zeros(len(scored.z), np.bool_)
-        which[:size] = self._fold[rows]
-        self.model.clean(scored, which)
+        self.model.clean(scored, fold)
 
     def _begin(self, stop: int) -> None:
         """Open an event on the last rows before ``stop`` of the buffer."""
@@ -188,7 +190,6 @@ class Judge:
         self.history.next += 1
         scored = self.model.score(self._z[rows], gaps=True)
         self._give(event, scored, np.arange(len(rows)), NO_EVENT, last)
-        event.peak = float(self._ratio[rows].max())
         self._loose[rows] = False
         self._pool[first:stop] = False
         self.precursors.claim(event.start)

@@ -137,6 +137,8 @@ class Model:
         # values and lengths of the runs that channels are in
         self._held, self._runs = np.full(n, np.nan), np.zeros(n, np.int64)
         self._reach, self._freeze = np.full(n, REACH), np.zeros(n)
+        # workspace of a fold: a fresh array of this size costs more in page faults than its use
+        self._rows = np.zeros((settings.block, n))
 
     @property
     def rank(self) -> int:
@@ -180,18 +182,14 @@ class Model:
 
     def project(self, standing: list[NDArray[np.float64]]) -> None:
         """Set up the directions that samples are split over, those of standing events last."""
-        self._standing = standing
+        ends = np.cumsum([len(directions) for directions in standing]).tolist()
+        # where the directions of each lie, counted from the first of them
+        self.parts = [slice(e - len(d), e) for e, d in zip(ends, standing, strict=True)]
         known = np.ascontiguousarray(self.known.vectors * self.inverse)
         events = np.vstack([np.zeros((0, len(self.names))), *standing])
         self._directions = known, self.vectors, events, self.energies, self.mean
         self._patterns: dict[bytes, tuple[Projection, float]] = {}
         self.projection = Projection(*self._directions)
-
-    @property
-    def parts(self) -> list[slice]:
-        """Where the directions of each standing event lie, counted from the first of them."""
-        ends = np.cumsum([len(directions) for directions in self._standing]).tolist()
-        return [slice(e - len(d), e) for e, d in zip(ends, self._standing, strict=True)]
 
     def standard(
         self, samples: NDArray[np.float64], out: NDArray[np.float64], *, follow: bool
@@ -271,21 +269,23 @@ class Model:
         return out
 
     def clean(self, scored: Scored, which: NDArray[np.bool_]) -> None:
-        """Make rows of ``scored.z`` fit to be folded into the basis, in place.
+        """Make the first rows of ``scored.z`` fit to be folded into the basis, in place.
 
         Adopted behaviour and standing events are taken off, missing values filled in with what the
         basis expects, and coordinates beyond the T² limit drawn in to it.
         """
         projection = self.projection
-        odd = which & (scored.t2 > self.t2_limit)
-        odd[list(scored.special)] = which[list(scored.special)]
         count = len(projection.directions)
+        odd = which & (scored.t2[: len(which)] > self.t2_limit)
+        for i in scored.special:
+            if i < len(which):
+                odd[i] = which[i]
         if projection.known or count > projection.first:
-            rows = np.flatnonzero(which & ~odd)
-            z, coordinates = scored.z[rows], scored.coordinates[rows]
+            plain = np.flatnonzero(which & ~odd)
+            z, coordinates = scored.z[plain], scored.coordinates[plain]
             take_off(z, coordinates, projection.directions, 0, projection.known)
             take_off(z, coordinates, projection.directions, projection.first, count)
-            scored.z[rows] = z
+            scored.z[plain] = z
         for i in np.flatnonzero(odd).tolist():
             scored.z[i] = scored.special.get(i, projection).plain(
                 scored.z[i], scored.coordinates[i], float(scored.t2[i]), self.t2_limit
@@ -294,7 +294,8 @@ class Model:
     def fold(self, z: NDArray[np.float64]) -> None:
         """Take samples in noise units, fit to be folded, into the basis."""
         if len(z):
-            rows = z * self.scaling.scale
+            rows = self._rows[: len(z)]
+            np.multiply(z, self.scaling.scale, out=rows)
             rows += self.scaling.centre
             self.basis.take_many(rows)
             self.basis.flush()

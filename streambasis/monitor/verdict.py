@@ -99,19 +99,21 @@ class Columns:
         import pyarrow as pa
 
         def column(values: NDArray[Any], unknown: NDArray[np.bool_]) -> pa.Array:
+            if unknown.all():
+                return pa.nulls(len(values), pa.from_numpy_dtype(values.dtype))
             return pa.array(values, mask=unknown) if unknown.any() else pa.array(values)
 
         unjudged = np.isnan(self.spe)
-        names = ("spe", "t2", "limit", "t2_limit")
-        numbers = {name: column(getattr(self, name), unjudged) for name in names}
-        return pa.table(
-            {
-                "sample": pa.array(self.sample),
-                "time": column(self.time.view("datetime64[ns]"), self.time == NO_TIME),
-                **numbers,
-                "novel": pa.array(self.novel),
-                "extreme": pa.array(self.extreme),
-                "rank": pa.array(self.rank),
-                "event": column(self.event, self.event == NO_EVENT),
-            }
-        )
+        columns = {
+            "sample": pa.array(self.sample),
+            "time": column(self.time.view("datetime64[ns]"), self.time == NO_TIME),
+            "spe": column(self.spe, unjudged),
+            "t2": column(self.t2, unjudged),
+            "limit": column(self.limit, unjudged),
+            "t2_limit": column(self.t2_limit, unjudged),
+            "novel": pa.array(self.novel),
+            "extreme": pa.array(self.extreme),
+            "rank": pa.array(self.rank),
+            "event": column(self.event, self.event == NO_EVENT),
+        }
+        return pa.Table.from_arrays(list(columns.values()), list(columns))
