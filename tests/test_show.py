@@ -85,6 +85,34 @@ def test_show_gives_programs_everything(tmp_path: Path, capsys: pytest.CaptureFi
     assert shown["audit"]["coverage"] is None
 
 
+@pytest.mark.parametrize(
+    ("start", "oldest", "newest"),
+    [
+        (100.0, "12 (103 s)", "19 (104.75 s)"),
+        (
+            np.datetime64("2026-03-01T00:00:00"),
+            "12 (2026-03-01T00:00:03.000000000)",
+            "19 (2026-03-01T00:00:04.750000000)",
+        ),
+    ],
+    ids=["seconds", "dates"],
+)
+def test_show_tells_the_window(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], start: Any, oldest: str, newest: str
+) -> None:
+    """The limits of the window, its oldest and newest sample and their times."""
+    basis = streambasis.StreamBasis(NAMES, window=8, span=60)
+    steps = np.arange(20) * 250
+    at = start + steps / 1000 if isinstance(start, float) else start + steps.astype("m8[ms]")
+    basis.push_many(np.random.default_rng(0).normal(size=(20, 5)), at=at)
+    save(basis, tmp_path / "state.arrow")
+    _, out, _ = ask(capsys, "show", tmp_path / "state.arrow")
+    assert f"8 samples or 60 s; it holds 8, from sample {oldest} to {newest}" in out
+    shown = json.loads(ask(capsys, "show", tmp_path / "state.arrow", "--json")[1])
+    assert (shown["oldest_sample"], shown["newest_sample"]) == (12, 19)
+    assert (shown["window"], shown["span_seconds"], shown["window_samples"]) == (8, 60.0, 8)
+
+
 def test_show_tells_how_a_monitor_is_doing(
     tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:

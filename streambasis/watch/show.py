@@ -18,11 +18,15 @@ from streambasis.basis import StreamBasis
 from streambasis.monitor import NoveltyMonitor
 from streambasis.principal import PrincipalBasis
 from streambasis.snapshot import load, read_outline
+from streambasis.times import NANOSECONDS
 
 MOST_NAMES = 8
 MOST_DIRECTIONS = 20
 LEADING = 3
 """How many channel names, directions, and channels of a direction are shown to people."""
+
+UNIX_SINCE = 10**17
+"""Nanoseconds, about three years: what is earlier is taken for seconds from the feed's start."""
 
 WIDE = 1000
 """Columns of output that goes to no terminal: nothing is cut off or broken into lines."""
@@ -87,7 +91,8 @@ def _stream(basis: StreamBasis) -> dict[str, Any]:
     return {
         "dtype": basis.dtype.name,
         "rank": basis.rank,
-        "newest_sample": basis.count - 1 if basis.count else None,
+        "capacity": basis.capacity,
+        **_window(basis),
         "directions": [
             {"pivot": pivot, "channels": leading}
             for pivot, leading in zip(
@@ -96,6 +101,33 @@ def _stream(basis: StreamBasis) -> dict[str, Any]:
         ],
         "audit": basis.audit()._asdict(),
     }
+
+
+def _window(basis: StreamBasis) -> dict[str, Any]:
+    if basis.window is None and basis.span is None:
+        return {"newest_sample": basis.count - 1 if basis.count else None}
+    members = basis.members
+    times = basis.to_state().parts["core"].arrays["times"]
+    span = basis.span
+    return {
+        "window": basis.window,
+        "span_seconds": None if span is None else span / np.timedelta64(1, "s"),
+        "window_samples": len(members),
+        "oldest_sample": members[0] if len(members) else None,
+        "newest_sample": members[-1] if len(members) else None,
+        "oldest_time": _moment(times[0]) if len(times) else None,
+        "newest_time": _moment(times[-1]) if len(times) else None,
+    }
+
+
+def _moment(time: np.int64) -> str | float:
+    """Return a time as a date where it counts from the Unix epoch, else in seconds.
+
+    A feed that counts from its own start does not run for three years.
+    """
+    if abs(int(time)) < UNIX_SINCE:
+        return float(time / NANOSECONDS)
+    return str(np.datetime64(int(time), "ns"))
 
 
 def _principal(basis: PrincipalBasis) -> dict[str, Any]:
@@ -200,6 +232,8 @@ def _lines(content: dict[str, Any]) -> list[tuple[str, str]]:
         ("channels", f"{len(names)}: {', '.join(names[:MOST_NAMES])}{more}"),
         ("samples", _samples(content)),
     ]
+    if "window_samples" in content:
+        lines.append(("window", _extent(content)))
     if "baseline_done" in content:
         done = "complete" if content["baseline_done"] else "not complete"
         lines.append(("baseline", f"{content['baseline']:,} samples, {done}"))
@@ -226,7 +260,29 @@ def _lines(content: dict[str, Any]) -> list[tuple[str, str]]:
 
 def _samples(content: dict[str, Any]) -> str:
     newest = content["newest_sample"]
-    return "none yet" if newest is None else f"{content['samples']:,}, the newest is {newest:,}"
+    if newest is None or "window_samples" in content:
+        return f"{content['samples']:,}" if content["samples"] else "none yet"
+    return f"{content['samples']:,}, the newest is {newest:,}"
+
+
+def _extent(content: dict[str, Any]) -> str:
+    limits = []
+    if content["window"] is not None:
+        limits.append(f"{content['window']:,} samples")
+    if content["span_seconds"] is not None:
+        limits.append(f"{content['span_seconds']:,g} s")
+    text = " or ".join(limits)
+    if content["window_samples"]:
+        first, last = (f"{content[f'{side}_sample']:,}" for side in ("oldest", "newest"))
+        if content["oldest_time"] is not None:
+            first += f" ({_shown(content['oldest_time'])})"
+            last += f" ({_shown(content['newest_time'])})"
+        text += f"; it holds {content['window_samples']:,}, from sample {first} to {last}"
+    return text
+
+
+def _shown(moment: str | float) -> str:
+    return moment if isinstance(moment, str) else f"{moment:g} s"
 
 
 def _events(content: dict[str, Any]) -> str:
