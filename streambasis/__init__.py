@@ -15,11 +15,14 @@ if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
     from streambasis.compare import merge, principal_angles, subspace_distance
     from streambasis.errors import StreambasisError
+    from streambasis.kernels._cache import CacheWarning
     from streambasis.monitor import NoveltyMonitor
     from streambasis.principal import PrincipalBasis
     from streambasis.snapshot import from_bytes, load, save, to_bytes
+    from streambasis.warming import warm_up
 
 _HOMES = {
+    "CacheWarning": "streambasis.kernels._cache",
     "NoveltyMonitor": "streambasis.monitor",
     "PrincipalBasis": "streambasis.principal",
     "StreamBasis": "streambasis.basis",
@@ -31,9 +34,11 @@ _HOMES = {
     "save": "streambasis.snapshot",
     "subspace_distance": "streambasis.compare",
     "to_bytes": "streambasis.snapshot",
+    "warm_up": "streambasis.warming",
 }
 
 __all__ = [
+    "CacheWarning",
     "NoveltyMonitor",
     "PrincipalBasis",
     "StreamBasis",
@@ -46,6 +51,7 @@ __all__ = [
     "save",
     "subspace_distance",
     "to_bytes",
+    "warm_up",
 ]
 
 

@@ -20,7 +20,7 @@ LAYERS = [
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
     {"monitor"},
-    {"watch", "report", "fleet"},
+    {"warming", "watch", "report", "fleet"},
     {"commands", "cli", "__main__"},
 ]  # fmt: skip
 CORE_THIRD_PARTY = {"numpy", "numba", "pyarrow"}

@@ -108,7 +108,8 @@ class KernelCache:
 
     def __init__(self, function: Any) -> None:
         self._name = f"{function.__module__}.{function.__qualname__}".replace("<locals>.", "")
-        self._code = function.__code__.co_code
+        code = function.__code__
+        self._code = f"{code.co_code.hex()} {code.co_consts} {code.co_names}"
 
     @property
     def cache_path(self) -> str:
@@ -172,7 +173,7 @@ class KernelCache:
 
     def _file_name(self, signature: Any, codegen: Any) -> str:
         stamp = _DIGEST(f"{source_stamp()}\n{environment()}".encode()).hexdigest()[:12]
-        facts = [str(signature), repr(codegen.magic_tuple()), self._code.hex()]
+        facts = [str(signature), repr(codegen.magic_tuple()), self._code]
         key = _DIGEST("\n".join(facts).encode()).hexdigest()[:16]
         return f"{self._name}-{stamp}-{key}{SUFFIX}"
 
