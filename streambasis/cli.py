@@ -23,7 +23,7 @@ EXIT_CODES = (
     (OK, "done, or stopped by Ctrl-C with everything so far kept"),
     (BUG, "an error inside streambasis; --debug shows where"),
     (USAGE, "an argument or a setting that cannot be used"),
-    (FEED, "the feed cannot be read, its columns do not fit, or it is shorter than the baseline"),
+    (FEED, "the feed or kept run cannot be read, does not fit, or is shorter than the baseline"),
     (OUTPUT, "a file cannot be written"),
     (EXTRA, "a package that the command needs is not installed"),
     (SNAPSHOT, "a snapshot is missing or damaged, or does not fit the one it is compared with"),
@@ -32,6 +32,7 @@ EXIT_CODES = (
 
 SUMMARIES = {
     "watch": "Watch a feed and report what it has not shown before.",
+    "report": "Draw what a run has kept, on one page or as pictures.",
     "show": "Show what a snapshot holds.",
     "compare": "Show how far two snapshots are apart, and on which channels.",
 }

@@ -6,6 +6,7 @@ Each one imports what it needs when it runs: the help needs click alone.
 from __future__ import annotations
 
 import csv
+import datetime as dt
 import io
 import sys
 import traceback
@@ -30,6 +31,7 @@ from streambasis.cli import (
 from streambasis.errors import (
     FeedError,
     HomeError,
+    RecordError,
     SampleError,
     SettingError,
     SnapshotError,
@@ -222,6 +224,53 @@ def compare(a: Path, b: Path, as_json: bool) -> None:
     write(a, b, sys.stdout, as_json=as_json)
 
 
+@streambasis.command(
+    "report",
+    short_help=SUMMARIES["report"],
+    help="""Draw what a run has kept in the folder HOME: scores against their limits with the
+    events shaded, rank and noise floor, energies, drift, the channels that carry each event, and
+    which events are alike; with a table of the events and the settings of the run.
+
+    Nothing in HOME changes. Where HOME lacks what a picture needs, a sentence says so.""",
+    epilog=f"""\b
+Example:
+  streambasis watch examples/pump_station.csv --home run1
+  streambasis report run1 --out run1.html
+  streambasis report run1 --png pictures
+
+\b
+Files of --png:
+  spe.png  t2.png  rank-noise.png  energies.png  drift.png  contributions.png  cosines.png
+
+{_CODES}
+
+{CAUTION}""",
+)
+@click.argument("home", type=click.Path(path_type=Path))
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path, dir_okay=False),
+    metavar="FILE.html",
+    help="Write the report to this file: one page, pictures inside, nothing fetched.",
+)
+@click.option(
+    "--png",
+    type=click.Path(path_type=Path, file_okay=False),
+    metavar="DIR",
+    help="Write each picture to this folder as a PNG file.",
+)
+@_debug
+def report(home: Path, out: Path | None, png: Path | None) -> None:
+    """Draw a run that was kept."""
+    from streambasis.report.making import make_report
+
+    if out is None and png is None:
+        raise click.UsageError("nothing to write: give --out FILE.html, --png DIR, or both")
+    made = dt.datetime.now(dt.UTC)
+    for line in make_report(home, out=out, png=png, caution=CAUTION, made=made):
+        click.echo(line)
+
+
 def _names(given: Sequence[str]) -> list[str] | None:
     """Return the names in lists separated by commas; a name with a comma stands in quotes."""
     if not given:
@@ -246,8 +295,9 @@ def run(arguments: Sequence[str]) -> int:
     except BrokenPipeError:
         raise
     except ModuleNotFoundError as error:
-        return _failed(error, f"{error}: pip install 'streambasis[watch]'", EXTRA, arguments)
-    except (FeedError, SampleError) as error:
+        extra = "report" if "matplotlib" in str(error.name) else "watch"
+        return _failed(error, f"{error}: pip install 'streambasis[{extra}]'", EXTRA, arguments)
+    except (FeedError, SampleError, RecordError) as error:
         return _failed(error, str(error), FEED, arguments)
     except SettingError as error:
         return _failed(error, str(error), USAGE, arguments)

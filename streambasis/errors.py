@@ -67,3 +67,7 @@ class FeedError(StreambasisError, ValueError):
 
 class HomeError(StreambasisError, OSError):
     """The folder that keeps a run cannot be used; the message names it and the way out."""
+
+
+class RecordError(StreambasisError, ValueError):
+    """A kept run that cannot be read; the message names the folder or file and what is wrong."""

@@ -1,0 +1,380 @@
+"""What a run has kept, read back from its folder in one pass and bounded memory."""
+
+from __future__ import annotations
+
+import heapq
+import json
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any, Self
+
+import numpy as np
+import pyarrow as pa
+from numpy.typing import NDArray
+
+from streambasis.errors import RecordError, SnapshotError
+from streambasis.monitor.events import History
+from streambasis.report.thinning import NO_TIME, Envelope
+from streambasis.snapshot import read_state
+from streambasis.state import State
+
+STRONGEST = 40
+"""Events drawn by channel and compared with each other: more would not be legible."""
+
+SERIES = ("spe", "t2", "limit", "t2_limit", "rank")
+NEEDED = ("sample", "time", *SERIES, "novel", "extreme", "event")
+ARROW, PARQUET = ".arrow", ".parquet"
+
+
+@dataclass(frozen=True, slots=True)
+class EventRow:
+    """One event as its JSON line tells it, without the share of every channel."""
+
+    event: int
+    start: int
+    end: int
+    start_time: str | None
+    end_time: str | None
+    peak: float
+    channels: tuple[str, ...]
+    repeats: int | None
+    cosine: float | None
+    label: str | None
+
+    @classmethod
+    def of(cls, fields: dict[str, Any]) -> Self:
+        """Take the keys of an event; a value of the wrong kind is a ValueError."""
+        texts = [fields[key] for key in ("start_time", "end_time", "label")]
+        if not all(text is None or isinstance(text, str) for text in texts):
+            raise ValueError("a time or the label is no text")
+        repeats, cosine = fields["repeats"], fields["cosine"]
+        peak = float(fields["peak"])
+        if not math.isfinite(peak):
+            raise ValueError("the peak is no number")
+        return cls(
+            int(fields["event"]),
+            int(fields["start"]),
+            int(fields["end"]),
+            texts[0],
+            texts[1],
+            peak,
+            tuple(str(name) for name in fields["channels"]),
+            None if repeats is None else int(repeats),
+            None if cosine is None else float(cosine),
+            texts[2],
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Progress:
+    """Readings of the basis over the run.
+
+    Attributes
+    ----------
+    sample : ndarray of int64, shape (m,)
+        The sample after which each reading was taken.
+    noise, drift : ndarray of float64, shape (m,)
+        Noise floor, and principal angle to the baseline's subspace in radians.
+    known : ndarray of int32, shape (m,)
+        Directions of adopted behaviour.
+    energies : ndarray of float64, shape (m, e)
+        The leading energies, NaN beyond the rank.
+    about : dict
+        What the run said of itself: the name of the feed, its channels, its kind of times.
+    """
+
+    sample: NDArray[np.int64]
+    noise: NDArray[np.float64]
+    drift: NDArray[np.float64]
+    known: NDArray[np.int32]
+    energies: NDArray[np.float64]
+    about: dict[str, Any]
+
+
+@dataclass(slots=True)
+class KeptRun:
+    """A run as its folder tells it.
+
+    Attributes
+    ----------
+    home : Path
+        The folder.
+    envelope : Envelope
+        The decision series by column of a picture.
+    events : list of EventRow
+        Every closed event, by number.
+    shares : dict of int to dict of str to float
+        The share of each channel in each of the strongest events.
+    unclosed : dict of int to (int, int)
+        First and last sample of events that no line of ``events.jsonl`` closes.
+    counts : dict of str to int
+        Samples in all, judged, novel, extreme.
+    first_judged : int or None
+        The first sample with a score: the one after the baseline.
+    progress : Progress or None
+        Readings of the basis, where they were kept.
+    directions : dict of int to ndarray of float64, shape (n,)
+        The strongest direction of each event that the snapshot holds.
+    facts : dict
+        Settings of the monitor as the snapshot holds them; empty without one.
+    notes : list of str
+        What could not be read, one sentence each.
+    """
+
+    home: Path
+    envelope: Envelope
+    events: list[EventRow] = field(default_factory=list)
+    shares: dict[int, dict[str, float]] = field(default_factory=dict)
+    unclosed: dict[int, tuple[int, int]] = field(default_factory=dict)
+    counts: dict[str, int] = field(default_factory=dict)
+    first_judged: int | None = None
+    progress: Progress | None = None
+    directions: dict[int, NDArray[np.float64]] = field(default_factory=dict)
+    facts: dict[str, Any] = field(default_factory=dict)
+    notes: list[str] = field(default_factory=list)
+
+    @property
+    def strongest(self) -> list[EventRow]:
+        """The strongest events, at most 40, by number."""
+        return [event for event in self.events if event.event in self.shares]
+
+    @property
+    def about(self) -> dict[str, Any]:
+        """What the run said of itself; empty where it did not."""
+        return {} if self.progress is None else self.progress.about
+
+    @property
+    def channels(self) -> list[str]:
+        """The channels in the order of the feed, else in that in which events name them."""
+        told = self.about.get("channels") or self.facts.get("channels")
+        if told:
+            return list(told)
+        named = (name for shares in self.shares.values() for name in shares)
+        return list(dict.fromkeys(named))
+
+
+def read_run(home: Path, columns: int) -> KeptRun:
+    """Read what a run has kept.
+
+    Parameters
+    ----------
+    home : Path
+        The folder given to ``streambasis watch --home``.
+    columns : int
+        Most columns of the envelope.
+
+    Raises
+    ------
+    RecordError
+        If the folder holds no run, or its decisions cannot be read.
+
+    Notes
+    -----
+    Decisions are read one record batch at a time, in the order of the names of their files.
+    """
+    segments = _segments(home)
+    if segments:
+        first, stop = _first_of(segments[0]), _stop_of(segments[-1])
+    else:
+        first = stop = 0
+    run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, SERIES))
+    run.counts = dict.fromkeys(("samples", "judged", "novel", "extreme"), 0)
+    spans: dict[int, tuple[int, int]] = {}
+    last = first - 1
+    for segment in segments:
+        for batch in _batches(segment):
+            last = _take(run, segment, batch, last, spans)
+    if run.counts["samples"] < stop - first:
+        missing = stop - first - run.counts["samples"]
+        run.notes.append(f"{missing:,} samples between the first and the last have no decision.")
+    _read_events(run, home / "events.jsonl")
+    closed = {event.event for event in run.events}
+    run.unclosed = {number: span for number, span in spans.items() if number not in closed}
+    run.progress = _read_progress(run, home / "progress.arrow")
+    _read_snapshot(run, home / "state.arrow")
+    return run
+
+
+def _segments(home: Path) -> list[Path]:
+    if not home.exists():
+        raise RecordError(f"{home}: no such folder; give the one that watch --home wrote")
+    if not home.is_dir():
+        raise RecordError(f"{home}: not a folder; give the one that watch --home wrote")
+    folder = home / "decisions"
+    if not folder.is_dir():
+        raise RecordError(
+            f"{home}: holds no run (no decisions/ in it); give the folder that watch --home wrote"
+        )
+    try:
+        found = [path for path in folder.iterdir() if path.suffix in (ARROW, PARQUET)]
+    except OSError as error:
+        raise RecordError(f"{folder}: cannot be read ({error.strerror or error})") from None
+    return sorted(path for path in found if not path.name.startswith("."))
+
+
+def _batches(segment: Path, rows: slice | None = None) -> Iterator[pa.RecordBatch]:
+    """Yield the record batches of a segment, or those that a slice of their list picks."""
+    try:
+        with pa.OSFile(str(segment)) as source:
+            if segment.suffix == PARQUET:
+                import pyarrow.parquet as pq
+
+                groups = pq.ParquetFile(source)
+                for group in range(groups.num_row_groups)[rows or slice(None)]:
+                    yield from groups.read_row_group(group).to_batches()
+            else:
+                file = pa.ipc.open_file(source)
+                for number in range(file.num_record_batches)[rows or slice(None)]:
+                    yield file.get_batch(number)
+    except (OSError, pa.ArrowException) as error:
+        detail = str(error).splitlines()[0]
+        raise RecordError(f"{segment}: cannot be read as decisions ({detail})") from None
+
+
+def _first_of(segment: Path) -> int:
+    for batch in _batches(segment, slice(0, 1)):
+        return int(_column(segment, batch, "sample")[0].as_py())
+    raise RecordError(f"{segment}: holds no decision")
+
+
+def _stop_of(segment: Path) -> int:
+    last = list(_batches(segment, slice(-1, None)))
+    if not last:
+        raise RecordError(f"{segment}: holds no decision")
+    return int(_column(segment, last[-1], "sample")[-1].as_py()) + 1
+
+
+def _column(segment: Path, batch: pa.RecordBatch, name: str) -> pa.Array:
+    if name not in batch.schema.names:
+        raise RecordError(f"{segment}: no column {name!r}; these are not decisions")
+    return batch.column(name)
+
+
+def _take(
+    run: KeptRun, segment: Path, batch: pa.RecordBatch, last: int, spans: dict[int, tuple[int, int]]
+) -> int:
+    """Add a batch to the run; return the number of its last sample."""
+    if len(batch) == 0:
+        return last
+    columns = {name: _column(segment, batch, name) for name in NEEDED}
+    try:
+        samples = columns["sample"].cast(pa.int64()).to_numpy()
+        moments = columns["time"].cast(pa.timestamp("ns")).cast(pa.int64())
+        times = moments.fill_null(int(NO_TIME)).to_numpy(zero_copy_only=False)
+        series = {
+            name: columns[name].cast(pa.float64()).to_numpy(zero_copy_only=False) for name in SERIES
+        }
+        novel, extreme = (columns[name].true_count for name in ("novel", "extreme"))
+        events = columns["event"].cast(pa.int64()).fill_null(-1).to_numpy(zero_copy_only=False)
+    except (pa.ArrowException, AttributeError) as error:
+        raise RecordError(f"{segment}: a column of the wrong kind ({error})") from None
+    stop = run.envelope.first + run.envelope.count
+    if samples[0] <= last or samples[-1] >= stop or np.any(np.diff(samples) <= 0):
+        raise RecordError(
+            f"{segment}: samples out of order after sample {last}; move files that do not belong "
+            "to the run out of decisions/"
+        )
+    judged = ~np.isnan(series["spe"])
+    # during the baseline there is no basis, and its rank of 0 would only stretch the axis
+    series["rank"] = np.where(judged, series["rank"], np.nan)
+    run.envelope.take(samples, None if times[0] == NO_TIME else times, series)
+    for name, count in zip(run.counts, (len(batch), judged.sum(), novel, extreme), strict=True):
+        run.counts[name] += int(count)
+    if run.first_judged is None and judged.any():
+        run.first_judged = int(samples[judged.argmax()])
+    for number in np.unique(events[events >= 0]).tolist():
+        inside = samples[events == number]
+        begin = spans.get(number, (int(inside[0]), 0))[0]
+        spans[number] = begin, int(inside[-1])
+    return int(samples[-1])
+
+
+def _read_events(run: KeptRun, path: Path) -> None:
+    """Read events line by line; the shares of all channels are kept of the strongest alone."""
+    if not path.exists():
+        run.notes.append("There is no events.jsonl, so no event is shown.")
+        return
+    found: dict[int, EventRow] = {}
+    strongest: list[tuple[float, int, dict[str, float]]] = []
+    try:
+        with path.open(encoding="utf-8", errors="replace") as lines:
+            for number, line in enumerate(lines, 1):
+                if not line.strip():
+                    continue
+                try:
+                    fields = json.loads(line)
+                    row = EventRow.of(fields)
+                    shares = {
+                        str(name): float(share) for name, share in fields["contributions"].items()
+                    }
+                except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
+                    # a line that is being written, or one that somebody edited
+                    run.notes.append(f"Line {number} of events.jsonl is no event and was left out.")
+                    continue
+                if row.event not in found:
+                    entry = (row.peak, row.event, shares)
+                    if len(strongest) < STRONGEST:
+                        heapq.heappush(strongest, entry)
+                    else:
+                        heapq.heappushpop(strongest, entry)
+                found[row.event] = row
+    except OSError as error:
+        raise RecordError(f"{path}: cannot be read ({error.strerror or error})") from None
+    run.events = [found[number] for number in sorted(found)]
+    run.shares = {number: shares for _, number, shares in sorted(strongest, key=lambda e: e[1])}
+
+
+def _read_progress(run: KeptRun, path: Path) -> Progress | None:
+    if not path.exists():
+        return None
+    try:
+        with pa.OSFile(str(path)) as source:
+            table = pa.ipc.open_file(source).read_all()
+        about = json.loads((table.schema.metadata or {}).get(b"about", b"{}"))
+        if not isinstance(about, dict):
+            raise ValueError("what it says of the run is no object")
+        width = table.schema.field("energies").type.list_size
+        energies = table["energies"].combine_chunks().flatten().to_numpy(zero_copy_only=False)
+        return Progress(
+            table["sample"].to_numpy(),
+            table["noise"].to_numpy(),
+            table["drift"].to_numpy(),
+            table["known"].to_numpy(),
+            energies.reshape(-1, width),
+            about,
+        )
+    except (OSError, pa.ArrowException, KeyError, ValueError, AttributeError) as error:
+        detail = str(error).splitlines()[0]
+        run.notes.append(f"progress.arrow cannot be read ({detail}).")
+        return None
+
+
+def _read_snapshot(run: KeptRun, path: Path) -> None:
+    if not path.exists():
+        return
+    try:
+        monitor = _find(read_state(path), "NoveltyMonitor")
+        if monitor is None:
+            raise SnapshotError("it holds no monitor")
+        run.facts = {
+            "channels": monitor.facts["channels"],
+            "baseline": monitor.facts["baseline"],
+            **monitor.facts["settings"],
+        }
+        part = _find(monitor, "History")
+        history = None if part is None else History.from_state(part)
+    except (SnapshotError, KeyError, TypeError, ValueError) as error:
+        run.notes.append(f"state.arrow cannot be read ({error}).")
+        return
+    if history is not None:
+        run.directions = {number: e.direction for number, e in history.events.items()}
+
+
+def _find(state: State, kind: str) -> State | None:
+    """Return the first state of a kind, this one or one of its parts."""
+    if state.kind == kind:
+        return state
+    found = (_find(part, kind) for part in state.parts.values())
+    return next((part for part in found if part is not None), None)
