@@ -13,6 +13,8 @@ from streambasis import StreamBasis
 from streambasis.errors import SampleError, SettingError, UnknownSampleError
 from streambasis.snapshot import from_bytes, to_bytes
 
+pytestmark = pytest.mark.kernels
+
 DTYPES = ("float64", "float32", "complex128", "complex64")
 EXACT = 1e-12
 """Subspaces from a few well-conditioned samples agree to this."""

@@ -515,7 +515,7 @@ def tolerance_of(a, length, exponent):
     """Return the tolerance of a sample of norm ``length`` in its own scale."""
     floor = rounding_floor(a.header[RANK]) * epsilon_of(a.residual)
     rtol = max(a.reals[RTOL], floor)
-    return max(rtol * length, math.ldexp(a.reals[ATOL], -exponent))
+    return max(rtol * length, math.ldexp(a.reals[ATOL], -int(exponent)))
 
 
 @kernel()
@@ -781,9 +781,9 @@ def push_covered(
         header[NOW] = clocks[i, 0]
         header[TIMED] = clocks[i, 2]
         enter(a, coefficients[i], lengths[i], tolerance, left * left, exponents[i])
-        records[i, 0] = math.ldexp(lengths[i], exponents[i])
-        records[i, 1] = math.ldexp(left, exponents[i])
-        records[i, 2] = math.ldexp(tolerance, exponents[i])
+        records[i, 0] = math.ldexp(lengths[i], int(exponents[i]))
+        records[i, 1] = math.ldexp(left, int(exponents[i]))
+        records[i, 2] = math.ldexp(tolerance, int(exponents[i]))
         reasons[i, 0] = ZERO if lengths[i] == 0.0 else DEPENDENT
         reasons[i, 1] = rank
         reasons[i, 2] = header[EXPIRED]
