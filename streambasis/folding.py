@@ -27,6 +27,8 @@ MOST_RENEWALS = 3
 RENEWAL_LIMIT = 1.0
 """Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
 made orthonormal again."""
+LEVEL_RANGE = 64
+"""Powers of two from 1 within which a core is left as it is."""
 SUSPECT = 1e-6
 """Part in the first direction below which a channel may be silent."""
 GRAM_RANGE = 1e-4
@@ -83,9 +85,11 @@ class Subspace:
         "power",
         "renewals",
         "residual",
+        "roots",
         "safe",
         "singular",
         "stack",
+        "typed_roots",
         "weight",
         "weight_squares",
     )
@@ -108,6 +112,7 @@ class Subspace:
         self.weight = self.weight_squares = 0.0
         self.outside = self.power = 0.0
         self.exponent = self.renewals = 0
+        self._weigh(block)
         self.residual = np.zeros(count, dtype)
         self.coefficients = np.zeros(limit + block, dtype)
         reach = 2.0 ** (0.8 * np.finfo(dtype).maxexp)
@@ -121,7 +126,15 @@ class Subspace:
     @property
     def nbytes(self) -> int:
         """Bytes of all arrays."""
-        arrays = (self.singular, self.mean, self.stack, self.residual, self.coefficients)
+        arrays = (
+            self.singular,
+            self.mean,
+            self.stack,
+            self.residual,
+            self.coefficients,
+            self.roots,
+            self.typed_roots,
+        )
         return sum(array.nbytes for array in arrays)
 
     @property
@@ -201,9 +214,9 @@ class Subspace:
         times I - g·vvᵀ, g = (1 - √(Wa/W))/Wb, where Wa, Wb and W are the weights before, of the
         block and after. (Ross et al. 2008 append the shift as one more row: the same scatter.)
         """
-        ages = np.arange(len(block) - 1, -1, -1)
-        roots = math.sqrt(self.forget) ** ages
-        weights = roots * roots
+        if len(block) != len(self.roots):
+            self._weigh(len(block))
+        roots, weights = self.roots, self.roots * self.roots
         decay = self.forget ** len(block)
         before, added = decay * self.weight, float(weights.sum())
         total = before + added
@@ -227,7 +240,7 @@ class Subspace:
 
         wide = np.complex128 if block.dtype.kind == "c" else np.float64
         coordinates = coordinates.astype(wide, copy=False)
-        typed = roots.astype(np.finfo(block.dtype).dtype)[:, None]
+        typed = self.typed_roots
         if self.forget < 1.0:
             coordinates *= roots[:, None]
             rest *= typed[: len(rest)]
@@ -288,6 +301,11 @@ class Subspace:
         usual[0][: self.held] = self.directions
         self.stack, self.coefficients = usual
 
+    def _weigh(self, m: int) -> None:
+        """Compute the roots of the weights of a block of m samples, as a column too."""
+        self.roots = math.sqrt(self.forget) ** np.arange(m - 1, -1, -1)
+        self.typed_roots = self.roots.astype(np.finfo(self.stack.dtype).dtype)[:, None]
+
     def _fit_exponent(self, block: NDArray[Any], status: int) -> None:
         """Choose the unit so that neither the block nor the spectrum leaves the range."""
         top = float(self.singular[0]) if self.held else 0.0
@@ -322,20 +340,23 @@ class Subspace:
             factor, change = self._factor_rest(coordinates, rest, rounding * np.sqrt(squares))
         else:
             factor, change = np.zeros((len(coordinates), 0), coordinates.dtype), None
-        # LAPACK's own scaling is by no power of two: bring the core near 1 first
-        top = max(
-            float(np.abs(coordinates).max(initial=0.0)), float(np.abs(factor).max(initial=0.0))
-        )
-        level = math.frexp(max(top, float(self.singular[0]) if held else 0.0))[1]
-        down = math.ldexp(1.0, -level)
+        # LAPACK's own scaling is by no power of two: bring a core far from 1 there first
+        top = max(math.sqrt(squares.max()), float(self.singular[0]) if held else 0.0)
+        level = math.frexp(top)[1]
+        if abs(level) > LEVEL_RANGE:
+            down = math.ldexp(1.0, -level)
+            coordinates, factor = down * coordinates, down * factor
+        else:
+            level, down = 0, 1.0
         singular, rotation = core_spectrum(
             (down * decay) * self.singular,
-            down * coordinates,
-            down * factor,
+            coordinates,
+            factor,
             self.limit,
             self.limit == self.stack.shape[1],
         )
-        singular = np.ldexp(singular, level)
+        if level:
+            singular = np.ldexp(singular, level)
         floor = rounding * math.sqrt(self.power)
         keep = min(self.limit, int(np.count_nonzero(singular > floor)))
         self.outside += float(singular[keep:] @ singular[keep:])

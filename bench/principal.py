@@ -1,0 +1,221 @@
+"""How fast and how close the principal basis follows a noisy feed.
+
+``python -m bench principal`` compares scoring and folding every sample with the incremental
+principal component analysis of scikit-learn (which folds but does not score), both on one BLAS
+thread. ``python -m bench.principal --soak 10_000_000`` runs a long feed through and audits it.
+"""
+
+from __future__ import annotations
+
+import argparse
+import time
+import warnings
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from sklearn.decomposition import IncrementalPCA
+
+from bench.harness import Table, interleaved, one_blas_thread
+from streambasis import PrincipalBasis
+
+SIZES = ((32, 8), (256, 24), (1024, 48))
+NOISE = 0.2
+
+
+def feed(
+    rng: np.random.Generator, samples: int, channels: int, sources: int, noise: float
+) -> tuple[NDArray[Any], NDArray[Any]]:
+    """Return a feed of sources with a mean square of 1, 1/2, 1/3, ... a channel, and their span."""
+    rows = np.linalg.qr(rng.standard_normal((channels, sources)))[0].T
+    scales = np.sqrt(channels / np.arange(1.0, sources + 1))
+    signal = (rng.standard_normal((samples, sources)) * scales) @ rows
+    return signal + noise * rng.standard_normal((samples, channels)), rows
+
+
+def sine(a: NDArray[Any], b: NDArray[Any]) -> float:
+    """Return the sine of the largest angle between the spans of orthonormal rows."""
+    return float(np.linalg.norm(b - (b @ a.T) @ a, 2))
+
+
+def batch_sine(samples: NDArray[Any], rows: NDArray[Any]) -> float:
+    """Return the angle that one SVD of all samples leaves."""
+    _, _, vectors = np.linalg.svd(samples, full_matrices=False)
+    return sine(vectors[: len(rows)], rows)
+
+
+def turns(call: Callable[[NDArray[Any]], Any], samples: NDArray[Any], block: int) -> Any:
+    """Return a callable that hands the next block of the samples over, for ever."""
+    starts = list(range(0, len(samples) - block + 1, block))
+    position = -1
+
+    def turn() -> None:
+        nonlocal position
+        position = (position + 1) % len(starts)
+        call(samples[starts[position] : starts[position] + block])
+
+    return turn
+
+
+def against_incremental(quick: bool) -> Table:
+    """Time both at the same block of 2k, and at the block that suits each best."""
+    table = Table(
+        "Scoring and folding every sample, against IncrementalPCA.partial_fit (no scores)",
+        ["n", "k", "block", "ours µs/sample", "theirs µs/sample", "ratio", "angle : batch",
+         "theirs : batch"],
+    )  # fmt: skip
+    repetitions, seconds = (7, 0.01) if quick else (11, 0.1)
+    for channels, rank in SIZES:
+        rng = np.random.default_rng(channels)
+        samples, rows = feed(rng, 768 if quick else 2048, channels, rank, NOISE)
+        batch = batch_sine(samples, rows)
+        blocks = [2 * rank] if quick else [rank, 2 * rank, 4 * rank, 8 * rank]
+        blocks += [256] if channels == 32 else []
+        micros: dict[str, dict[int, float]] = {"ours": {}, "theirs": {}}
+        close: dict[str, dict[int, float]] = {"ours": {}, "theirs": {}}
+        for block in blocks:
+            basis = PrincipalBasis(channels, rank=rank, block=block, centre=True)
+            theirs = IncrementalPCA(rank)
+            basis.push_many(samples)
+            basis.flush()
+            for piece in np.array_split(samples, len(samples) // max(block, rank)):
+                theirs.partial_fit(piece)
+            close["ours"][block] = sine(basis.vectors, rows) / batch
+            close["theirs"][block] = sine(theirs.components_, rows) / batch
+            timed = interleaved(
+                {
+                    "ours": turns(basis.push_many, samples, block),
+                    "theirs": turns(theirs.partial_fit, samples, block),
+                },
+                repetitions=repetitions,
+                seconds=seconds,
+            )
+            for side, timing in timed.items():
+                micros[side][block] = 1e6 * timing.median / block
+        best = {side: min(found, key=found.__getitem__) for side, found in micros.items()}
+        for label, ours, their in (
+            (str(2 * rank), 2 * rank, 2 * rank),
+            (f"best: {best['ours']} : {best['theirs']}", best["ours"], best["theirs"]),
+        ):
+            mine, other = micros["ours"][ours], micros["theirs"][their]
+            table.add(
+                channels, rank, label, mine, other, other / mine,
+                close["ours"][ours], close["theirs"][their],
+            )  # fmt: skip
+    table.notes.append(
+        "angle : batch is the largest angle to the true subspace over that of one SVD of all "
+        "samples (sine); both sides keep a mean. The core goes through its Gram matrix where "
+        "streambasis.folding.GRAM_RANGE allows, which is so here but for the first folds."
+    )
+    return table
+
+
+def singly(quick: bool) -> Table:
+    """Time push_many against push, and what scoring alone costs."""
+    table = Table(
+        "Batches against single samples, default block (µs/sample)",
+        ["n", "k", "block", "push", "push_many", "ratio", "score_many", "folding"],
+    )
+    for channels, rank in SIZES:
+        rng = np.random.default_rng(channels)
+        samples, _ = feed(rng, 768 if quick else 2048, channels, rank, NOISE)
+        many, single, scored = (PrincipalBasis(channels, rank=rank) for _ in range(3))
+        for basis in (many, single, scored):
+            basis.push_many(samples)
+        block = many.block
+
+        def push(piece: NDArray[Any], basis: PrincipalBasis = single) -> None:
+            for sample in piece:
+                basis.push(sample)
+
+        timed = interleaved(
+            {
+                "push": turns(push, samples, block),
+                "push_many": turns(many.push_many, samples, block),
+                "score_many": turns(scored.score_many, samples, block),
+            },
+            repetitions=7 if quick else 11,
+            seconds=0.01 if quick else 0.1,
+        )
+        micros = {side: 1e6 * timing.median / block for side, timing in timed.items()}
+        table.add(
+            channels, rank, block, micros["push"], micros["push_many"],
+            micros["push"] / micros["push_many"], micros["score_many"],
+            micros["push_many"] - micros["score_many"],
+        )  # fmt: skip
+    table.notes.append(
+        "Both ways fold alike, so the ratio is bounded by what folding costs beside scoring."
+    )
+    return table
+
+
+def closeness(quick: bool) -> Table:
+    """Compare the angle to the true subspace with that of the batch SVD, cut at the true rank."""
+    blocks = (16, 64) if quick else (1, 16, 64)
+    table = Table(
+        "Angle to the true subspace over that of the batch SVD, cut at the true rank (sine)",
+        ["n", "noise", "batch angle", *(f"block {block}" for block in blocks)],
+    )
+    for channels in (32, 256, 1024):
+        for noise in (0.01, 0.2):
+            rng = np.random.default_rng(channels)
+            rows = np.linalg.qr(rng.standard_normal((channels, 4)))[0].T
+            signal = rng.standard_normal((300 if quick else 1000, 4)) @ rows
+            samples = signal + noise * rng.standard_normal((len(signal), channels))
+            batch = batch_sine(samples, rows)
+            ratios = []
+            for block in blocks:
+                basis = PrincipalBasis(channels, rank=4, block=block)
+                basis.take_many(samples)
+                basis.flush()
+                ratios.append(sine(basis.vectors, rows) / batch)
+            table.add(channels, noise, batch, *ratios)
+    table.notes.append("Four sources of variance 1, noise on every channel as given.")
+    return table
+
+
+def run(quick: bool) -> list[Table]:
+    """Answer the question."""
+    # scikit-learn has loaded a BLAS of its own since the limit outside was set
+    with one_blas_thread():
+        return [against_incremental(quick), singly(quick), closeness(quick)]
+
+
+def soak(samples: int) -> Table:
+    """Run long feeds through, with jumps, silence and a growing scale, and audit all along."""
+    table = Table(
+        f"Soak: {samples:,} samples",
+        ["n", "dtype", "forget", "worst orthogonality (limit 3)", "renewals", "noise : true",
+         "angle", "seconds"],
+    )  # fmt: skip
+    chunk = 20_000
+    for channels, dtype, forget in (
+        (16, "float64", 1.0),
+        (16, "float32", 0.999),
+        (96, "complex64", 0.999),
+    ):
+        rng = np.random.default_rng(channels)
+        basis = PrincipalBasis(channels, max_rank=6, forget=forget, dtype=dtype)
+        block, rows = feed(rng, chunk, channels, 3, NOISE)
+        block = block.astype(dtype)
+        worst, start = 0.0, time.perf_counter()
+        with warnings.catch_warnings():
+            warnings.simplefilter("error")
+            for done in range(0, samples, chunk):
+                scores = basis.push_many(rng.permutation(block))
+                if not np.isfinite(scores.spe).all():
+                    raise RuntimeError(f"a score is not finite near sample {done}")
+                worst = max(worst, basis.audit().orthogonality)
+        seconds = time.perf_counter() - start
+        noise = basis.noise / NOISE**2
+        angle = sine(np.real(basis.vectors[:3]), rows)
+        table.add(channels, dtype, forget, worst, basis.audit().renewals, noise, angle, seconds)
+    return table
+
+
+if __name__ == "__main__":
+    parser = argparse.ArgumentParser(prog="python -m bench.principal", description=__doc__)
+    parser.add_argument("--soak", type=int, default=10_000_000, metavar="SAMPLES")
+    with one_blas_thread():
+        print(soak(parser.parse_args().soak).markdown())
