@@ -115,7 +115,7 @@ class Broker:
     password: str | None = field(default=None, repr=False)
     client: str | None = None
     version: str = "5"
-    queue: int = 4096
+    queue: int = 2048
     when_full: str = "block"
     acknowledged: int | None = None
     session: int = 7 * 86_400

@@ -302,7 +302,7 @@ class Connection:
             with self._change:
                 self._change.wait_for(self._settled, PATIENCE)
                 self._check()
-                if self.connections or self._stop.is_set():
+                if self._settled() or self._stop.is_set():
                     return
         raise FeedError(
             f"{self._name}: no connection within {self._broker.patience:g} s "
@@ -310,7 +310,9 @@ class Connection:
         )
 
     def _settled(self) -> bool:
-        return self.connections > 0 or self._failure is not None
+        # a broker that knows us sends messages before it confirms the topic, perhaps more than
+        # there is room for: nothing further is heard of it until some are taken
+        return self.connections > 0 or bool(self._queue) or self._failure is not None
 
     def acknowledge(self, receipts: list[Receipt]) -> None:
         """Acknowledge messages; a receipt of an earlier connection is dropped."""

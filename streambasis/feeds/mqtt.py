@@ -28,6 +28,12 @@ from streambasis.feeds.reading import (
 )
 from streambasis.feeds.sources import PATIENCE
 
+REMEMBERED = 4
+"""Messages remembered per message sent ahead. A broker should need 1; mosquitto 2.0.11 does not
+count what it sends again after a reconnect, and was seen to send twice what it may."""
+
+LEAST_REMEMBERED = 1024
+
 MOST_LOOKED_AT = 100
 """Messages that are looked at for one that shows the channels."""
 
@@ -55,9 +61,9 @@ class MqttFeed(PieceFeed):
     -----
     At least once: a message is acknowledged when a position behind it is committed, and sent again
     until then. Exactly once where a payload has a time or a sequence number: the position holds
-    what tells the newest messages apart, as many as the broker sends before the first of them is
-    acknowledged. Acknowledgements go out in the order of the messages, so what can come again is
-    always among those.
+    what tells the newest messages apart. Acknowledgements go out in the order of the messages, so
+    what can come again is always among as many as the broker sends before the first of them is
+    acknowledged; four times that are remembered (see REMEMBERED).
     """
 
     kind = "messages"
@@ -198,7 +204,7 @@ class MqttFeed(PieceFeed):
 
     @property
     def _remembered(self) -> int:
-        return max(self._broker.ahead, self._broker.queue)
+        return max(LEAST_REMEMBERED, REMEMBERED * self._broker.ahead)
 
     def _note(self, message: Message, identity: bytes | None = None) -> None:
         """Give a message its number, and keep what acknowledges it and what tells it again."""

@@ -178,10 +178,11 @@ def _batches(payload: bytes) -> list[pa.RecordBatch]:
     _refuse_packed(payload)
     try:
         stream = pa.ipc.open_stream(pa.BufferReader(payload))
-        for field in stream.schema:
-            kind = field.type
-            if not (pa.types.is_primitive(kind) or pa.types.is_decimal(kind)):
-                raise RowError(f"column {field.name!r} is not of fixed width ({kind})")
+        for name, kind in zip(stream.schema.names, stream.schema.types, strict=True):
+            if not (
+                pa.types.is_primitive(kind) or pa.types.is_decimal(kind) or pa.types.is_null(kind)
+            ):
+                raise RowError(f"column {name!r} is not of fixed width ({kind})")
         batches, count = [], 0
         for batch in stream:
             count += len(batch)

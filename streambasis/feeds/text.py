@@ -56,7 +56,8 @@ class CsvRows:
         self._separator = max(_SEPARATORS, key=header.count)
         self._use_names(self._split(header))
         if not any(self._names):
-            raise FeedError(f"{name}: the first line is blank; it should hold column names")
+            state = "cannot be read" if header.strip() else "is blank"
+            raise FeedError(f"{name}: the first line {state}; it should hold column names")
         if all(_is_number(column) for column in self._names):
             raise FeedError(f"{name}: the first line holds numbers; it should hold column names")
         schema = self._types(body)
@@ -74,7 +75,11 @@ class CsvRows:
         return pa.int64() if self.columns.unit == 1 else pa.float64()
 
     def _split(self, header: str) -> list[str]:
-        return next(csv.reader([header], delimiter=self._separator), [])
+        try:
+            return next(csv.reader([header], delimiter=self._separator), [])
+        except csv.Error:
+            # a carriage return in the middle, or a NUL
+            return []
 
     def _use_names(self, names: list[str]) -> None:
         self._names = names
