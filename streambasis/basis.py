@@ -93,7 +93,7 @@ class StreamBasis:
 
     With a window, every sample in it lies within its tolerance of the span at every moment, and
     each direction is held up by a pivot sample in it. The coordinates of all samples in the window
-    are kept: rank entries and 80 bytes each, in rows and slots that are allocated as they are
+    are kept: rank entries and 88 bytes each, in rows and slots that are allocated as they are
     needed, at most doubling, and not given back. A span alone holds as many samples as fall
     into it; ``window`` caps them. Samples that the capacity leaves uncovered are kept in full.
     A sample that leaves costs nothing unless it is a pivot; then the window is searched for

@@ -50,7 +50,7 @@ class Window:
     Notes
     -----
     Memory: V (k, n), the coordinates of every sample in the window (W, k), the factorized block of
-    the pivot samples (2, k, k), and 80 bytes a sample. Rows and slots are allocated as they are
+    the pivot samples (2, k, k), and 88 bytes a sample. Rows and slots are allocated as they are
     needed, at most doubling, up to the capacity and the window; they are not given back. Without
     ``window`` they grow to what the span holds. Samples that the capacity leaves uncovered are
     kept in full, n values each, because their place in the basis cannot be had otherwise.
@@ -444,7 +444,7 @@ class Window:
             self._members[:top, kernels.PLACE] == kernels.NONE
         )
         tolerance = self._sizes[:top, kernels.TOLERANCE][held]
-        lost = np.sqrt(self._sizes[:top, kernels.LOST][held])
+        lost = self._sizes[:top, kernels.LOST][held]
         ratio = np.divide(lost, tolerance, out=np.zeros(len(lost)), where=lost > 0)
         return float(ratio.max(initial=0.0))
 

@@ -121,7 +121,7 @@ def laid_open(basis: StreamBasis) -> dict[str, NDArray]:
         "exponents": members[order, window.EXPONENT],
         "lengths": arrays["sizes"][order, window.LENGTH],
         "tolerances": arrays["sizes"][order, window.TOLERANCE],
-        "lost": np.sqrt(arrays["sizes"][order, window.LOST]),
+        "lost": arrays["sizes"][order, window.LOST],
         "vectors": arrays["vectors"],
     }
 

@@ -42,10 +42,10 @@ from streambasis.kernels.projection import (
 from streambasis.kernels.scaling import epsilon_of, norm, scaled_copy
 
 # entries of the integer header after those that every basis kernel shares
-WINDOW, LIVE, OLDEST, NEWEST, FREE, TOP, VACANT, EXPIRED, DROPPED, WEAR, LAST, STAMPED = range(
-    growth.HEADER, growth.HEADER + 12
+WINDOW, LIVE, OLDEST, NEWEST, FREE, TOP, VACANT, EXPIRED, DROPPED, GROWTHS, WEAR, LAST, STAMPED = (
+    range(growth.HEADER, growth.HEADER + 13)
 )
-KEPT = growth.HEADER + 12
+KEPT = growth.HEADER + 13
 # the rest concerns the call at hand: what a caller must see to, the time of the sample to come, up
 # to which time samples leave for it, and whether it has a time
 WANTED, NOW, HORIZON, TIMED = range(KEPT, KEPT + 4)
@@ -53,8 +53,8 @@ HEADER = KEPT + 4
 # what may be wanted when a kernel returns NEEDS_ROOM
 SLOTS, ROWS, POOL, RENEWAL = range(4)
 # columns of ``members`` (int64) and ``sizes`` (float64), one row per slot
-ID, TIME, OLDER, NEWER, EXPONENT, PIVOT, PLACE = range(7)
-MEMBER = 7
+ID, TIME, OLDER, NEWER, EXPONENT, PIVOT, PLACE, SINCE = range(8)
+MEMBER = 8
 LENGTH, TOLERANCE, LOST = range(3)
 # rows of ``scratch``, and of ``small`` after Q and R
 RESIDUAL, OPENED = range(2)
@@ -68,7 +68,7 @@ class Held(NamedTuple):
     """The arrays of a basis over a window, as kernels hand them on to each other.
 
     ``directions`` (rows, n) is V; ``q`` and ``r`` (rows, rows) factorize the block of the pivot
-    samples in the slots ``holders``; ``coordinates`` (slots, rows), ``members`` (slots, 7) and
+    samples in the slots ``holders``; ``coordinates`` (slots, rows), ``members`` (slots, 8) and
     ``sizes`` (slots, 3) hold the samples, linked from oldest to newest, and zeros in coordinates
     beyond the rank; ``pool`` holds in full the samples that the capacity leaves uncovered, in the
     slots ``owners``. ``residual`` and ``opened`` (n,) and ``work`` (3, rows) are workspace.
@@ -274,19 +274,32 @@ def append_column(a, k, slot):
 
 
 @kernel()
+def loss_without(a, slot, h):
+    """Return how far outside the span a sample may lie once its part ``h`` along u is given up.
+
+    The part r that it lost before is orthogonal to u as long as no direction was added since, and
+    the two add up like the sides of a right triangle. A direction added later may lie along r,
+    which is not kept: then only the sum of both is certain.
+    """
+    lost, part = a.sizes[slot, LOST], math.sqrt(square(h))
+    if a.members[slot, SINCE] == a.header[GROWTHS]:
+        return math.sqrt(lost * lost + part * part)
+    return lost + part
+
+
+@kernel()
 def share(a, slot, u, k):
     """Return the share of a sample's norm along u, 0 where the sample does not need u.
 
-    A covered sample needs u when what it lost so far and what it would lose with u exceed its
-    tolerance together. Pivots are spoken for, and uncovered samples do not lie in the span.
+    A covered sample needs u when without it it might lie further outside than its tolerance.
+    Pivots are spoken for, and uncovered samples do not lie in the span.
     """
     if a.members[slot, PIVOT] == 1 or a.members[slot, PLACE] != NONE:
         return 0.0
-    h = square(inner(u, a.coordinates[slot], k))
-    tolerance = a.sizes[slot, TOLERANCE]
-    if a.sizes[slot, LOST] + h <= tolerance * tolerance:
+    h = inner(u, a.coordinates[slot], k)
+    if loss_without(a, slot, h) <= a.sizes[slot, TOLERANCE]:
         return 0.0
-    return math.sqrt(h) / a.sizes[slot, LENGTH]
+    return math.sqrt(square(h)) / a.sizes[slot, LENGTH]
 
 
 @kernel()
@@ -324,8 +337,8 @@ def drop(a, known):
     """Let the vacant direction go: one reflection moves it to the last row, which is given up.
 
     With H u = alpha·e_k the coordinates become H c and the directions conj(H) V. ``opened`` holds
-    uᵀV where ``known`` says so. What each sample loses is recorded. Returns the factor beta of
-    H = I - beta·w·wᴴ, with w in the workspace.
+    uᵀV where ``known`` says so. What each sample loses is recorded; pivots have nothing along u but
+    rounding. Returns the factor beta of H = I - beta·w·wᴴ, with w in the workspace.
     """
     u, w, opened, header = a.work[U], a.work[W], a.opened, a.header
     k = header[RANK]
@@ -348,7 +361,8 @@ def drop(a, known):
         c = a.coordinates[slot]
         end = c[last]
         s = reflect(c, w, beta, k)
-        a.sizes[slot, LOST] += square(s + alpha.conjugate() * end)
+        if a.members[slot, PIVOT] == 0:
+            a.sizes[slot, LOST] = loss_without(a, slot, s + alpha.conjugate() * end)
         c[last] = 0
         slot = a.members[slot, OLDER]
     for i in range(last):
@@ -534,11 +548,12 @@ def replace(a, left):
         if a.members[slot, PIVOT] == 0:
             h = inner(u, a.coordinates[slot], k)
             add_multiple(a.coordinates[slot], -h, u, k)
-            a.sizes[slot, LOST] += square(h)
+            a.sizes[slot, LOST] = loss_without(a, slot, h)
         slot = a.members[slot, OLDER]
     c = a.work[COEFFICIENTS]
     add_multiple(c, left - inner(u, c, k), u, k)
     a.header[DROPPED] += 1
+    a.header[GROWTHS] += 1
     a.header[WEAR] += 1
 
 
@@ -555,6 +570,7 @@ def grow(a, left):
         a.r[k, j] = 0
     a.q[k, k] = 1
     a.header[RANK] = k + 1
+    a.header[GROWTHS] += 1
 
 
 @kernel()
@@ -588,7 +604,8 @@ def reproject(a, slot, may_grow):
         left = 0.0
     for j in range(a.header[RANK]):
         a.coordinates[slot, j] = a.work[COEFFICIENTS, j]
-    a.sizes[slot, LOST] = left * left
+    a.sizes[slot, LOST] = left
+    a.members[slot, SINCE] = a.header[GROWTHS]
     if left <= tolerance:
         leave_pool(a, slot)
     return grew
@@ -618,6 +635,7 @@ def enter(a, coefficients, length, tolerance, lost, exponent):
     members[slot, EXPONENT] = exponent
     members[slot, PIVOT] = 0
     members[slot, PLACE] = NONE
+    members[slot, SINCE] = header[GROWTHS]
     sizes[slot, LENGTH] = length
     sizes[slot, TOLERANCE] = tolerance
     sizes[slot, LOST] = lost
@@ -709,7 +727,7 @@ def push_window(
         left = min(left, tolerance)  # nothing is outside: what is left is rounding
     grew = reason == INDEPENDENT
     number = header[COUNT]
-    slot = enter(a, a.work[COEFFICIENTS], length, tolerance, 0.0 if grew else left * left, exponent)
+    slot = enter(a, a.work[COEFFICIENTS], length, tolerance, 0.0 if grew else left, exponent)
     if grew:
         append_column(a, header[RANK], slot)
     elif reason == FULL:
@@ -768,7 +786,8 @@ def push_covered(
     header = a.header
     for i in range(coefficients.shape[0]):
         left = norm(residuals[i])
-        tolerance = tolerance_of(a, lengths[i], exponents[i])
+        exponent = int(exponents[i])
+        tolerance = tolerance_of(a, lengths[i], exponent)
         if left > tolerance or is_worn(a):
             return i
         expire(a, clocks[i, 1], 1)
@@ -780,10 +799,10 @@ def push_covered(
             return i
         header[NOW] = clocks[i, 0]
         header[TIMED] = clocks[i, 2]
-        enter(a, coefficients[i], lengths[i], tolerance, left * left, exponents[i])
-        records[i, 0] = math.ldexp(lengths[i], int(exponents[i]))
-        records[i, 1] = math.ldexp(left, int(exponents[i]))
-        records[i, 2] = math.ldexp(tolerance, int(exponents[i]))
+        enter(a, coefficients[i], lengths[i], tolerance, left, exponent)
+        records[i, 0] = math.ldexp(lengths[i], exponent)
+        records[i, 1] = math.ldexp(left, exponent)
+        records[i, 2] = math.ldexp(tolerance, exponent)
         reasons[i, 0] = ZERO if lengths[i] == 0.0 else DEPENDENT
         reasons[i, 1] = rank
         reasons[i, 2] = header[EXPIRED]
