@@ -52,3 +52,21 @@ def batch(
 def sine(a: NDArray[Any], b: NDArray[Any]) -> float:
     """Return the sine of the largest principal angle between the spans of orthonormal rows."""
     return float(np.linalg.norm(b - (b @ a.conj().T) @ a, 2))
+
+
+def scores(
+    deviations: NDArray[Any], directions: NDArray[Any], spreads: NDArray[np.float64]
+) -> tuple[NDArray[Any], NDArray[Any], NDArray[Any], NDArray[Any]]:
+    """Return norm, residual, SPE and T² of samples about their mean, row by row."""
+    wide = deviations.astype(np.complex128 if deviations.dtype.kind == "c" else np.float64)
+    coordinates = wide @ directions.conj().T
+    residual = np.linalg.norm(wide - coordinates @ directions, axis=1)
+    t2 = (np.abs(coordinates / spreads) ** 2).sum(axis=1)
+    return np.linalg.norm(wide, axis=1), residual, residual**2, t2
+
+
+def row_squares(rows: NDArray[Any], least: float, most: float) -> tuple[NDArray[Any], bool]:
+    """Return squared norms, and whether each is zero for a zero row or within the range."""
+    wide = rows.astype(np.complex128 if rows.dtype.kind == "c" else np.float64)
+    squares = (np.abs(wide) ** 2).sum(axis=1)
+    return squares, bool((((squares > least) & (squares < most)) | ~rows.any(axis=1)).all())
