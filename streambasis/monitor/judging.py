@@ -299,7 +299,7 @@ class Judge:
         arrays = {name: owned(getattr(self, f"_{name}")[:held]) for name in BUFFERED}
         arrays |= {name: owned(getattr(self, f"_{name}")) for name in COUNTED}
         parts = {
-            "model": self.model.to_state(),
+            "core": self.model.to_state(),
             "history": self.history.to_state(),
             "precursors": self.precursors.to_state(),
         }
@@ -311,7 +311,7 @@ class Judge:
     def from_state(cls, names: tuple[str, ...], settings: Settings, state: State) -> Judge:
         """Build a judge that goes on where the state was taken."""
         facts, parts = state.facts, state.parts
-        judge = cls(Model.from_state(names, settings, parts["model"]), facts["count"])
+        judge = cls(Model.from_state(names, settings, parts["core"]), facts["count"])
         judge.history = History.from_state(parts["history"])
         judge.precursors = Precursors.from_state(parts["precursors"])
         judge.open = [OpenEvent.from_state(parts[f"event_{i}"]) for i in range(facts["open"])]

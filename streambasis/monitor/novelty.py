@@ -263,7 +263,7 @@ class NoveltyMonitor:
         core = state.parts.pop("core")
         state.facts["count"] = 0
         monitor = type(self).from_state(state)
-        model = Model.from_state(self.channels, self._settings, core.parts["model"])
+        model = Model.from_state(self.channels, self._settings, core.parts["core"])
         model.restart()
         monitor._judge = Judge(model, 0)
         monitor._judge.history.next = number
