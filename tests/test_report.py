@@ -150,9 +150,9 @@ def test_hostile_names_and_labels_are_text(hostile: tuple[Page, str, list[str]])
     """Markup in names comes out as the text it was; what misleads a reader is replaced."""
     page, source, _ = hostile
     assert "<script" not in source.replace("&lt;script", "")
-    label = [row[-1] for row in page.cells if len(row) == 8][1:]
+    label = [row[-1] for row in page.cells if len(row) == 9][1:]
     assert label == ["<img src=x onerror=y>"] * 8
-    named = " ".join(row[5] for row in page.cells if len(row) == 8)
+    named = " ".join(row[6] for row in page.cells if len(row) == 9)
     for name in HOSTILE[:5]:
         assert name in named, name
     assert not {"\x00", "\x1b", "\u202e"} & set(source)
@@ -424,9 +424,10 @@ def test_a_watched_feed_is_reported(tmp_path: Path, capsys: pytest.CaptureFixtur
     assert sorted(path.name for path in folder.iterdir()) == sorted(f"{n}.png" for n in NAMES)
     events = [json.loads(line) for line in (home / "events.jsonl").read_text().splitlines()]
     page = Page(out.read_text(encoding="utf-8"))
+    # nothing is labelled, so the table has no such column
     rows = [row for row in page.cells if len(row) == 8][1:]
     assert [int(row[0]) for row in rows] == [event["event"] for event in events]
-    assert [row[5].split(", ")[0] for row in rows] == [event["channels"][0] for event in events]
+    assert [row[6].split(", ")[0] for row in rows] == [event["channels"][0] for event in events]
     assert "20,000 (numbers 0 to 19,999)" in page.words
     assert before == {path: path.read_bytes() for path in home.rglob("*") if path.is_file()}
 

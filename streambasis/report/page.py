@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import base64
 import datetime as dt
-import math
 import unicodedata
 from collections.abc import Iterable, Sequence
 from xml.etree import ElementTree as ET
@@ -21,6 +20,13 @@ MOST_LISTED = 500
 """Events in the table; all of them are in events.jsonl."""
 
 MOST_NAMES = 6
+_HEADS = (
+    ("event", "number"), ("start", "whole"), ("end", "whole"), ("first sample", "number"),
+    ("last sample", "number"), ("peak × limit", "number"), ("channels", ""), ("repeats", ""),
+    ("label", ""),
+)  # fmt: skip
+"""Of the table of events: what stands above each column, and how it is set."""
+
 _TURNING = {*range(0x202A, 0x202F), *range(0x2066, 0x206A), 0x200E, 0x200F, 0x061C}
 """Characters that turn the direction of the text after them."""
 
@@ -36,13 +42,16 @@ p { max-width: 46em; margin: .4em 0 .8em; }
 img { display: block; max-width: 100%; height: auto; }
 table { border-collapse: collapse; font-variant-numeric: tabular-nums; }
 th, td { text-align: left; vertical-align: top; padding: .25em .9em .25em 0;
-         border-bottom: 1px solid #ddd; overflow-wrap: anywhere; }
+         border-bottom: 1px solid #ddd; }
+td { overflow-wrap: anywhere; }
 th { font-weight: 600; }
-thead th { border-bottom: 2px solid #888; }
-td.number, th.number { text-align: right; white-space: nowrap; overflow-wrap: normal; }
+thead th { border-bottom: 2px solid #888; vertical-align: bottom; }
+.number { text-align: right; }
+.number, .whole { white-space: nowrap; overflow-wrap: normal; }
 @page { margin: 14mm; }
 @media print {
   body { font-size: 9.5pt; margin: 0; max-width: none; padding: 0; }
+  table.events { font-size: 7.5pt; }
   section.picture, tr { break-inside: avoid; }
   h2 { break-after: avoid; }
   thead { display: table-header-group; }
@@ -168,9 +177,7 @@ def _events(body: ET.Element, run: KeptRun) -> None:
         text = f"The {MOST_LISTED} strongest of {len(run.events):,}; all are in events.jsonl."
         _add(section, "p", text)
     if listed:
-        heads = ("event", "start", "end", "samples", "peak × limit", "channels", "repeats", "label")
-        rows = [_row(event) for event in sorted(listed, key=lambda event: event.event)]
-        _table(section, heads, rows, numbers={0, 3, 4})
+        _table(section, [_row(event) for event in sorted(listed, key=lambda e: e.event)])
     else:
         _add(section, "p", "No event has closed in this run.").set("class", "missing")
     for number, (first, last) in sorted(run.unclosed.items())[:MOST_LISTED]:
@@ -182,22 +189,18 @@ def _row(event: EventRow) -> list[str]:
     more = len(event.channels) - MOST_NAMES
     names = ", ".join(event.channels[:MOST_NAMES]) + (f" and {more:,} more" if more > 0 else "")
     repeats = "" if event.repeats is None else f"event {event.repeats}"
-    if event.cosine is not None and math.isfinite(event.cosine):
+    if event.cosine is not None:
         repeats += f" (cosine {event.cosine:.2f})"
     return [
         str(event.event),
-        _side(event.start, event.start_time),
-        _side(event.end, event.end_time),
-        f"{event.end - event.start + 1:,}",
-        f"{event.peak:,.3g}" if event.peak < 1e5 else f"{event.peak:.2e}",
+        *("" if time is None else _moment(time) for time in (event.start_time, event.end_time)),
+        f"{event.start:,}",
+        f"{event.end:,}",
+        f"{event.peak:,.3g}" if event.peak < 1000 else f"{event.peak:,.0f}",
         names,
         repeats,
         event.label or "",
     ]
-
-
-def _side(sample: int, time: str | None) -> str:
-    return f"sample {sample:,}" if time is None else f"{_moment(time)}, sample {sample:,}"
 
 
 def _moment(time: str) -> str:
@@ -215,20 +218,24 @@ def _pairs(body: ET.Element, rows: Sequence[tuple[str, str]]) -> None:
         _add(row, "td", text)
 
 
-def _table(
-    body: ET.Element, heads: Sequence[str], rows: Sequence[Sequence[str]], numbers: set[int]
-) -> None:
-    table = ET.SubElement(body, "table")
-    head = ET.SubElement(ET.SubElement(table, "thead"), "tr")
+def _table(body: ET.Element, rows: Sequence[Sequence[str]]) -> None:
+    """Add the events; columns that are empty throughout, such as times, are left out."""
+    kept = [i for i in range(len(_HEADS)) if any(row[i] for row in rows)]
+    table = ET.SubElement(body, "table", {"class": "events"})
+    parent = ET.SubElement(ET.SubElement(table, "thead"), "tr")
+    for position in kept:
+        _cell(parent, "th", position, _HEADS[position][0])
     rest = ET.SubElement(table, "tbody")
-    for tag, parent, texts in (
-        ("th", head, heads),
-        *(("td", ET.SubElement(rest, "tr"), row) for row in rows),
-    ):
-        for position, text in enumerate(texts):
-            cell = _add(parent, tag, text)
-            if position in numbers:
-                cell.set("class", "number")
+    for row in rows:
+        parent = ET.SubElement(rest, "tr")
+        for position in kept:
+            _cell(parent, "td", position, row[position])
+
+
+def _cell(parent: ET.Element, tag: str, position: int, text: str) -> None:
+    cell = _add(parent, tag, text)
+    if _HEADS[position][1]:
+        cell.set("class", _HEADS[position][1])
 
 
 def _add(parent: ET.Element, tag: str, text: str) -> ET.Element:

@@ -74,11 +74,11 @@ def _unjudged(run: KeptRun) -> str | None:
 
 def _density(run: KeptRun) -> str:
     per_column = run.envelope.count / run.envelope.columns
-    if per_column <= 1:
+    if per_column == 1:
         return "Every sample is drawn."
     return (
         f"Each of the {run.envelope.columns:,} columns spans the lowest and the highest value of "
-        f"about {per_column:,.3g} samples, so that no peak is lost."
+        f"about {per_column:,.0f} samples, so that no peak is lost."
     )
 
 

@@ -26,6 +26,11 @@ STRONGEST = 40
 SERIES = ("spe", "t2", "limit", "t2_limit", "rank")
 NEEDED = ("sample", "time", *SERIES, "novel", "extreme", "event")
 ARROW, PARQUET = ".arrow", ".parquet"
+LARGEST = 2**62
+"""Bound of sample and event numbers."""
+
+_UNREADABLE = (ValueError, TypeError, KeyError, AttributeError, OverflowError, RecursionError)
+"""What JSON that is no event, or values of the wrong kind, raise."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,22 +54,29 @@ class EventRow:
         texts = [fields[key] for key in ("start_time", "end_time", "label")]
         if not all(text is None or isinstance(text, str) for text in texts):
             raise ValueError("a time or the label is no text")
+        number, start, end = (int(fields[key]) for key in ("event", "start", "end"))
+        if not (0 <= number < LARGEST and 0 <= start <= end < LARGEST):
+            raise ValueError("the event or a sample has no possible number")
         repeats, cosine = fields["repeats"], fields["cosine"]
-        peak = float(fields["peak"])
-        if not math.isfinite(peak):
-            raise ValueError("the peak is no number")
         return cls(
-            int(fields["event"]),
-            int(fields["start"]),
-            int(fields["end"]),
+            number,
+            start,
+            end,
             texts[0],
             texts[1],
-            peak,
+            _finite(fields["peak"]),
             tuple(str(name) for name in fields["channels"]),
             None if repeats is None else int(repeats),
-            None if cosine is None else float(cosine),
+            None if cosine is None else _finite(cosine),
             texts[2],
         )
+
+
+def _finite(value: Any) -> float:
+    number = float(value)
+    if not math.isfinite(number):
+        raise ValueError(f"{value} is no number")
+    return number
 
 
 @dataclass(frozen=True, slots=True)
@@ -176,7 +188,7 @@ def read_run(home: Path, columns: int) -> KeptRun:
     """
     segments = _segments(home)
     if segments:
-        first, stop = _first_of(segments[0]), _stop_of(segments[-1])
+        first, stop = _end(segments[0], 0), _end(segments[-1], -1) + 1
     else:
         first = stop = 0
     run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, SERIES))
@@ -233,17 +245,14 @@ def _batches(segment: Path, rows: slice | None = None) -> Iterator[pa.RecordBatc
         raise RecordError(f"{segment}: cannot be read as decisions ({detail})") from None
 
 
-def _first_of(segment: Path) -> int:
-    for batch in _batches(segment, slice(0, 1)):
-        return int(_column(segment, batch, "sample")[0].as_py())
-    raise RecordError(f"{segment}: holds no decision")
-
-
-def _stop_of(segment: Path) -> int:
-    last = list(_batches(segment, slice(-1, None)))
-    if not last:
-        raise RecordError(f"{segment}: holds no decision")
-    return int(_column(segment, last[-1], "sample")[-1].as_py()) + 1
+def _end(segment: Path, which: int) -> int:
+    """Return the number of the first (0) or last (-1) sample of a segment."""
+    picked = slice(0, 1) if which == 0 else slice(-1, None)
+    for batch in list(_batches(segment, picked))[which:]:
+        numbers = _column(segment, batch, "sample")
+        if len(numbers) and pa.types.is_integer(numbers.type):
+            return int(numbers[which].as_py())
+    raise RecordError(f"{segment}: holds no numbered decisions")
 
 
 def _column(segment: Path, batch: pa.RecordBatch, name: str) -> pa.Array:
@@ -307,9 +316,9 @@ def _read_events(run: KeptRun, path: Path) -> None:
                     fields = json.loads(line)
                     row = EventRow.of(fields)
                     shares = {
-                        str(name): float(share) for name, share in fields["contributions"].items()
+                        str(name): _finite(share) for name, share in fields["contributions"].items()
                     }
-                except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
+                except _UNREADABLE:
                     # a line that is being written, or one that somebody edited
                     run.notes.append(f"Line {number} of events.jsonl is no event and was left out.")
                     continue
@@ -333,19 +342,21 @@ def _read_progress(run: KeptRun, path: Path) -> Progress | None:
         with pa.OSFile(str(path)) as source:
             table = pa.ipc.open_file(source).read_all()
         about = json.loads((table.schema.metadata or {}).get(b"about", b"{}"))
-        if not isinstance(about, dict):
-            raise ValueError("what it says of the run is no object")
+        adopt = about.get("adopt_after")
+        if not (adopt is None or isinstance(adopt, int)):
+            raise ValueError(f"adopt_after={adopt!r}")
+        about["channels"] = [str(name) for name in about.get("channels") or []]
         width = table.schema.field("energies").type.list_size
         energies = table["energies"].combine_chunks().flatten().to_numpy(zero_copy_only=False)
         return Progress(
-            table["sample"].to_numpy(),
-            table["noise"].to_numpy(),
-            table["drift"].to_numpy(),
-            table["known"].to_numpy(),
+            table["sample"].cast(pa.int64()).to_numpy(),
+            table["noise"].cast(pa.float64()).to_numpy(),
+            table["drift"].cast(pa.float64()).to_numpy(),
+            table["known"].cast(pa.int32()).to_numpy(),
             energies.reshape(-1, width),
             about,
         )
-    except (OSError, pa.ArrowException, KeyError, ValueError, AttributeError) as error:
+    except (OSError, pa.ArrowException, *_UNREADABLE) as error:
         detail = str(error).splitlines()[0]
         run.notes.append(f"progress.arrow cannot be read ({detail}).")
         return None
@@ -365,7 +376,7 @@ def _read_snapshot(run: KeptRun, path: Path) -> None:
         }
         part = _find(monitor, "History")
         history = None if part is None else History.from_state(part)
-    except (SnapshotError, KeyError, TypeError, ValueError) as error:
+    except (SnapshotError, *_UNREADABLE) as error:
         run.notes.append(f"state.arrow cannot be read ({error}).")
         return
     if history is not None:
