@@ -10,6 +10,8 @@ from hypothesis import strategies as st
 from streambasis.kernels import monitor as kernels
 from tests import reference_monitor as reference
 
+pytestmark = pytest.mark.kernels
+
 ROUNDING = 1e-12
 
 
