@@ -15,7 +15,7 @@ its length on them: noise in a coordinate then grows tenfold at most."""
 
 
 class Gaps:
-    """Fills the missing channels of a sample with what a subspace expects there.
+    """Fills the missing channels of samples with what a subspace expects there.
 
     Parameters
     ----------
@@ -43,31 +43,31 @@ class Gaps:
 
     def fill(
         self,
-        row: NDArray[Any],
+        rows: NDArray[Any],
         gaps: NDArray[np.bool_],
         mean: NDArray[Any],
         directions: NDArray[Any],
-        centre: NDArray[Any],
-    ) -> tuple[NDArray[Any], float, float, NDArray[Any]] | None:
-        """Return coordinates, residual norm, norm and the filled sample, or None.
+        expected: NDArray[Any],
+    ) -> tuple[NDArray[Any], NDArray[Any], NDArray[np.float64], NDArray[np.float64]] | None:
+        """Return the filled samples, their coordinates, norms and residual norms, or None.
 
         Parameters
         ----------
-        row : ndarray, shape (n,)
-            The sample in Euclidean coordinates, entered with zeros in its gaps.
+        rows : ndarray, shape (m, n)
+            Samples with the same gaps in Euclidean coordinates, entered with zeros there.
         gaps : ndarray of bool, shape (n,)
             Which channels are missing.
         mean : ndarray, shape (n,)
             What the coordinates are about.
         directions : ndarray, shape (k, n)
             The subspace.
-        centre : ndarray, shape (n,)
+        expected : ndarray, shape (n,)
             What the gaps are filled with where the subspace says nothing.
 
         Notes
         -----
         None where the observed channels do not determine the coordinates. With p channels
-        missing O(n·k·p + k³) flops.
+        missing O(n·k·p + k³ + m·n·(k + p)) flops.
         """
         if gaps.all():
             return None
@@ -75,17 +75,16 @@ class Gaps:
         lines[np.arange(len(lines)), np.flatnonzero(gaps)] = 1
         if self._inner.kind == "matrix":
             lines = np.ascontiguousarray(np.linalg.qr(self._inner.enter(lines).T)[0].T)
-        deviation = row - mean
-        observed = deviation - (deviation @ lines.conj().T) @ lines
         hidden = directions @ lines.conj().T
-        gram = np.eye(len(directions)) - hidden @ hidden.conj().T
-        squared_sines, axes = np.linalg.eigh(gram) if len(gram) else (np.ones(1), gram)
-        if squared_sines[0] < LEAST_SINE**2:
-            return None
-        right = observed @ directions.conj().T
-        coordinates = ((right @ axes) / squared_sines) @ axes.conj().T if len(gram) else right
         kept = directions - hidden @ lines
-        outside = float(np.linalg.norm(observed - coordinates @ kept))
-        expected = centre + coordinates @ directions
-        filled = row + ((expected - row) @ lines.conj().T) @ lines
-        return coordinates, outside, float(np.linalg.norm(observed)), filled
+        squared_sines, axes = np.linalg.eigh(np.eye(len(kept)) - hidden @ hidden.conj().T)
+        if (squared_sines < LEAST_SINE**2).any():
+            return None
+        deviations = rows - mean
+        observed = deviations - (deviations @ lines.conj().T) @ lines
+        along = (observed @ directions.conj().T) @ axes
+        coordinates = (along / squared_sines) @ axes.conj().T
+        residuals = np.linalg.norm(observed - coordinates @ kept, axis=1)
+        missing = expected + coordinates @ directions - rows
+        filled = rows + (missing @ lines.conj().T) @ lines
+        return filled, coordinates, np.linalg.norm(observed, axis=1), residuals

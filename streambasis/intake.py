@@ -146,26 +146,33 @@ class Intake:
         if fill + len(piece) == due:
             self.fold()
 
-    def _score(self, piece: NDArray[Any], out: Scores, rows: slice) -> NDArray[Any] | None:
-        """Score rows; return their coordinates where the fold may use them again."""
+    def _score(
+        self, piece: NDArray[Any], out: Scores, rows: slice | NDArray[np.int64]
+    ) -> NDArray[Any] | None:
+        """Score complete rows; return their coordinates where the fold may use them again."""
         core = self.core
         deviations = piece - core.mean if core.centred else piece
         squares = np.empty(len(piece))
         status = kernels.row_squares(deviations, *core.safe, squares)
         if status == kernels.UNUSUAL or core.exponent != 0:
-            for i, row in enumerate(piece, rows.start):
-                out.norm[i], out.residual[i], out.spe[i], out.t2[i], _ = kernels.score_sample(
+            scored = [
+                kernels.score_sample(
                     row, core.mean, core.directions, self.spreads, self.header, *self.work
                 )
+                for row in piece
+            ]
+            norms, residuals, spes, t2s, _ = np.array(scored).T
+            _write(out, rows, norms, residuals, spes, t2s)
             return None
-        out.norm[rows] = np.sqrt(squares)
+        norms = np.sqrt(squares)
         coordinates, rest = core.split(deviations)
         if len(rest):
             kernels.row_squares(rest, 0.0, np.inf, squares)
         else:
             squares[:] = 0.0
-        fields = (out.residual[rows], out.spe[rows], out.t2[rows])
-        kernels.score_rows(coordinates, self.spreads, self.rank, squares, *fields)
+        residuals, spes, t2s = np.empty((3, len(piece)))
+        kernels.score_rows(coordinates, self.spreads, self.rank, squares, residuals, spes, t2s)
+        _write(out, rows, norms, residuals, spes, t2s)
         return coordinates
 
     def _fill_gaps(
@@ -173,29 +180,37 @@ class Intake:
     ) -> tuple[NDArray[Any], NDArray[np.bool_]]:
         """Score rows of which some have gaps; return them filled, and which are determined."""
         core = self.core
-        fill = int(self.header[kernels.FILL])
         filled, known = piece.copy(), np.ones(len(piece), np.bool_)
-        for i, row in enumerate(piece):
-            at = rows.start + i
-            if not gaps[i].any():
-                self._score(row[None], out, slice(at, at + 1))
+        expected = core.mean
+        for group in self._alike(gaps):
+            at, pattern = rows.start + group, gaps[group[0]]
+            if not pattern.any():
+                self._score(piece[group], out, at)
                 continue
-            if core.weight:
-                expected = core.mean
-            else:
+            if not core.weight:
                 # nothing is known yet: expect what this first block has shown so far
-                earlier = np.concatenate([self.block[:fill], filled[:i][known[:i]]])
+                waiting = self.block[: int(self.header[kernels.FILL])]
+                earlier = np.concatenate([waiting, filled[: group[0]][known[: group[0]]]])
                 expected = earlier.mean(axis=0) if len(earlier) else core.mean
-            found = self.gaps.fill(row, gaps[i], core.mean, self.directions, expected)
+            found = self.gaps.fill(piece[group], pattern, core.mean, self.directions, expected)
             if found is None:
-                known[i] = False
-                out.norm[at] = out.residual[at] = out.spe[at] = out.t2[at] = np.nan
+                known[group] = False
+                _write(out, at, *[np.full(len(group), np.nan)] * 4)
                 continue
-            coordinates, outside, norm, filled[i] = found
-            out.norm[at], out.residual[at], out.spe[at] = norm, outside, outside * outside
+            filled[group], coordinates, norms, residuals = found
             ratios = np.ldexp(np.abs(coordinates) / self.spreads, -core.exponent)
-            out.t2[at] = float(ratios @ ratios)
+            t2s = (ratios * ratios).sum(axis=1)
+            _write(out, at, norms, residuals, residuals * residuals, t2s)
         return filled, known
+
+    def _alike(self, gaps: NDArray[np.bool_]) -> list[NDArray[np.int64]]:
+        """Return groups of row numbers with the same gaps; each row alone in the first block."""
+        if not self.core.weight:
+            return list(np.arange(len(gaps))[:, None])
+        groups: dict[bytes, list[int]] = {}
+        for i, row in enumerate(gaps):
+            groups.setdefault(row.tobytes(), []).append(i)
+        return [np.array(group) for group in groups.values()]
 
     def fold(
         self, rows: NDArray[Any] | None = None, coordinates: NDArray[Any] | None = None
@@ -270,3 +285,9 @@ class Intake:
         self.header[kernels.COUNT] = facts["count"]
         self.header[kernels.FOLDED] = facts["folded"]
         self.settle()
+
+
+def _write(out: Scores, rows: slice | NDArray[np.int64], *fields: NDArray[np.float64]) -> None:
+    """Write norms, residuals, squared prediction errors and T² of some rows."""
+    for column, values in zip((out.norm, out.residual, out.spe, out.t2), fields, strict=True):
+        column[rows] = values

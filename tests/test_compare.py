@@ -220,6 +220,8 @@ def test_merge_refuses_what_does_not_fit() -> None:
         basis.push(sample)
     with pytest.raises(SettingError, match="larger capacity"):
         merge(*full)
+    with pytest.raises(SettingError, match="window cannot be merged"):
+        merge(StreamBasis(4), StreamBasis(4, window=8))
     with pytest.raises(TypeError, match="StreamBasis and a PrincipalBasis"):
         merge(StreamBasis(4), PrincipalBasis(4))
     with pytest.raises(SettingError, match="different dtype: float64 and float32"):

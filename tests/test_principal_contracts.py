@@ -30,7 +30,7 @@ def finite(scores) -> bool:
     block=st.sampled_from([None, 1, 9]),
     channels=st.sampled_from([6, 70]),
 )
-@settings(max_examples=30, deadline=None)
+@settings(max_examples=15, deadline=None)
 def test_powers_of_two_change_no_direction(
     exponent: int, centre: bool, block: int | None, channels: int
 ) -> None:
@@ -99,8 +99,8 @@ def test_one_sample_repeated_is_one_direction(dtype: str, centre: bool) -> None:
     rng = np.random.default_rng(3)
     sample = normal(rng, (40,), dtype) + 100
     basis = PrincipalBasis(40, dtype=dtype, centre=centre, block=8)
-    for _ in range(10):
-        scores = basis.push_many(np.tile(sample, (500, 1)))
+    for _ in range(4):
+        scores = basis.push_many(np.tile(sample, (200, 1)))
         assert finite(scores)
     assert basis.rank == (0 if centre else 1)
     expected = 0.0 if centre else np.linalg.norm(sample.astype(complex)) ** 2
