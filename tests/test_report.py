@@ -23,7 +23,7 @@ from matplotlib.figure import Figure
 from matplotlib.image import imread
 from matplotlib.text import Text
 
-from streambasis import cli
+from streambasis import cli, save
 from streambasis.errors import RecordError
 from streambasis.report import canvas, courses, tables
 from streambasis.report import pictures as pictures_module
@@ -32,6 +32,8 @@ from streambasis.report.making import make_report
 from streambasis.report.pictures import Picture, pictures
 from streambasis.report.reading import STRONGEST, KeptRun, read_run
 from streambasis.report.thinning import NO_TIME, Envelope
+from streambasis.snapshot import read_state
+from streambasis.state import State
 from tests.homes import START, make_home, names_of
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
@@ -265,6 +267,31 @@ def test_events_of_the_wrong_kind_are_left_out(tmp_path: Path, changes: dict[str
     run = read_run(home, 100)
     assert run.events == []
     assert len(run.notes) == 1
+
+
+def test_decisions_that_fill_no_file_yet_are_read(tmp_path: Path) -> None:
+    """What a run that goes on holds in its snapshot follows what its files hold, each once."""
+    whole = read_run(make_home(tmp_path / "whole", 140_000, 5, 6), 700)
+    home = make_home(tmp_path / "home", 140_000, 5, 6)
+    file = sorted((home / "decisions").iterdir())[-1]
+    late = pa.ipc.open_file(file).read_all()
+    held = {
+        name: late[name].fill_null(-1).to_numpy() if name == "event" else late[name].to_numpy()
+        for name in late.schema.names
+    }
+    held["time"] = held["time"].view(np.int64)
+    waiting = State("Segment", {}, held)
+    parts = {"core": read_state(home / "state.arrow"), "decisions": waiting}
+    save(State("Run", {}, {}, parts), home / "state.arrow")
+    for gone in (False, True):
+        if gone:
+            file.unlink()
+        run = read_run(home, 700)
+        assert run.counts == whole.counts
+        assert run.notes == []
+        assert run.facts == whole.facts
+        for name in ("spe", "t2", "rank"):
+            np.testing.assert_array_equal(whole.envelope.high[name], run.envelope.high[name])
 
 
 @pytest.mark.parametrize("name", ["progress.arrow", "state.arrow"])

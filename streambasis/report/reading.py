@@ -5,7 +5,6 @@ from __future__ import annotations
 import heapq
 import json
 import math
-from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, Self
@@ -16,6 +15,15 @@ from numpy.typing import NDArray
 
 from streambasis.errors import RecordError, SnapshotError
 from streambasis.monitor.events import History
+from streambasis.report.segments import (
+    SERIES,
+    Decisions,
+    decisions_of,
+    end_of,
+    find,
+    segments_of,
+    waiting,
+)
 from streambasis.report.thinning import NO_TIME, Envelope
 from streambasis.snapshot import read_state
 from streambasis.state import State
@@ -23,9 +31,6 @@ from streambasis.state import State
 STRONGEST = 40
 """Events drawn by channel and compared with each other: more would not be legible."""
 
-SERIES = ("spe", "t2", "limit", "t2_limit", "rank")
-NEEDED = ("sample", "time", *SERIES, "novel", "extreme", "event")
-ARROW, PARQUET = ".arrow", ".parquet"
 LARGEST = 2**62
 """Bound of sample and event numbers."""
 
@@ -186,18 +191,25 @@ def read_run(home: Path, columns: int) -> KeptRun:
     -----
     Decisions are read one record batch at a time, in the order of the names of their files.
     """
-    segments = _segments(home)
+    notes: list[str] = []
+    # before the files are listed: what a running daemon moves from the snapshot to a file
+    # meanwhile is then seen in both instead of in neither
+    snapshot = _snapshot(home / "state.arrow", notes)
+    segments = segments_of(home)
+    late = waiting(snapshot)
+    ends = [] if late is None else [late.samples[0], late.samples[-1] + 1]
     if segments:
-        first, stop = _end(segments[0], 0), _end(segments[-1], -1) + 1
-    else:
-        first = stop = 0
-    run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, SERIES))
+        ends += [end_of(segments[0], 0), end_of(segments[-1], -1) + 1]
+    first, stop = (int(min(ends)), int(max(ends))) if ends else (0, 0)
+    run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, SERIES), notes=notes)
     run.counts = dict.fromkeys(("samples", "judged", "novel", "extreme"), 0)
     spans: dict[int, tuple[int, int]] = {}
     last = first - 1
     for segment in segments:
-        for batch in _batches(segment):
-            last = _take(run, segment, batch, last, spans)
+        for decisions in decisions_of(segment):
+            last = _take(run, segment, decisions, last, spans)
+    if late is not None and late.samples[-1] > last:
+        _take(run, home / "state.arrow", late.after(last), last, spans)
     if run.counts["samples"] < stop - first:
         missing = stop - first - run.counts["samples"]
         run.notes.append(f"{missing:,} samples between the first and the last have no decision.")
@@ -205,96 +217,37 @@ def read_run(home: Path, columns: int) -> KeptRun:
     closed = {event.event for event in run.events}
     run.unclosed = {number: span for number, span in spans.items() if number not in closed}
     run.progress = _read_progress(run, home / "progress.arrow")
-    _read_snapshot(run, home / "state.arrow")
+    if snapshot is not None:
+        _read_monitor(run, snapshot)
     return run
 
 
-def _segments(home: Path) -> list[Path]:
-    if not home.exists():
-        raise RecordError(f"{home}: no such folder; give the one that watch --home wrote")
-    if not home.is_dir():
-        raise RecordError(f"{home}: not a folder; give the one that watch --home wrote")
-    folder = home / "decisions"
-    if not folder.is_dir():
-        raise RecordError(
-            f"{home}: holds no run (no decisions/ in it); give the folder that watch --home wrote"
-        )
-    try:
-        found = [path for path in folder.iterdir() if path.suffix in (ARROW, PARQUET)]
-    except OSError as error:
-        raise RecordError(f"{folder}: cannot be read ({error.strerror or error})") from None
-    return sorted(path for path in found if not path.name.startswith("."))
-
-
-def _batches(segment: Path, rows: slice | None = None) -> Iterator[pa.RecordBatch]:
-    """Yield the record batches of a segment, or those that a slice of their list picks."""
-    try:
-        with pa.OSFile(str(segment)) as source:
-            if segment.suffix == PARQUET:
-                import pyarrow.parquet as pq
-
-                groups = pq.ParquetFile(source)
-                for group in range(groups.num_row_groups)[rows or slice(None)]:
-                    yield from groups.read_row_group(group).to_batches()
-            else:
-                file = pa.ipc.open_file(source)
-                for number in range(file.num_record_batches)[rows or slice(None)]:
-                    yield file.get_batch(number)
-    except (OSError, pa.ArrowException) as error:
-        detail = str(error).splitlines()[0]
-        raise RecordError(f"{segment}: cannot be read as decisions ({detail})") from None
-
-
-def _end(segment: Path, which: int) -> int:
-    """Return the number of the first (0) or last (-1) sample of a segment."""
-    picked = slice(0, 1) if which == 0 else slice(-1, None)
-    for batch in list(_batches(segment, picked))[which:]:
-        numbers = _column(segment, batch, "sample")
-        if len(numbers) and pa.types.is_integer(numbers.type):
-            return int(numbers[which].as_py())
-    raise RecordError(f"{segment}: holds no numbered decisions")
-
-
-def _column(segment: Path, batch: pa.RecordBatch, name: str) -> pa.Array:
-    if name not in batch.schema.names:
-        raise RecordError(f"{segment}: no column {name!r}; these are not decisions")
-    return batch.column(name)
-
-
 def _take(
-    run: KeptRun, segment: Path, batch: pa.RecordBatch, last: int, spans: dict[int, tuple[int, int]]
+    run: KeptRun, source: Path, taken: Decisions, last: int, spans: dict[int, tuple[int, int]]
 ) -> int:
-    """Add a batch to the run; return the number of its last sample."""
-    if len(batch) == 0:
-        return last
-    columns = {name: _column(segment, batch, name) for name in NEEDED}
-    try:
-        samples = columns["sample"].cast(pa.int64()).to_numpy()
-        moments = columns["time"].cast(pa.timestamp("ns")).cast(pa.int64())
-        times = moments.fill_null(int(NO_TIME)).to_numpy(zero_copy_only=False)
-        series = {
-            name: columns[name].cast(pa.float64()).to_numpy(zero_copy_only=False) for name in SERIES
-        }
-        novel, extreme = (columns[name].true_count for name in ("novel", "extreme"))
-        events = columns["event"].cast(pa.int64()).fill_null(-1).to_numpy(zero_copy_only=False)
-    except (pa.ArrowException, AttributeError) as error:
-        raise RecordError(f"{segment}: a column of the wrong kind ({error})") from None
+    """Add decisions to the run; return the number of their last sample."""
+    samples, times = taken.samples, taken.times
     stop = run.envelope.first + run.envelope.count
     if samples[0] <= last or samples[-1] >= stop or np.any(np.diff(samples) <= 0):
         raise RecordError(
-            f"{segment}: samples out of order after sample {last}; move files that do not belong "
+            f"{source}: samples out of order after sample {last}; move files that do not belong "
             "to the run out of decisions/"
         )
-    judged = ~np.isnan(series["spe"])
+    judged = ~np.isnan(taken.series["spe"])
     # during the baseline there is no basis, and its rank of 0 would only stretch the axis
-    series["rank"] = np.where(judged, series["rank"], np.nan)
+    series = taken.series | {"rank": np.where(judged, taken.series["rank"], np.nan)}
     run.envelope.take(samples, None if times[0] == NO_TIME else times, series)
-    for name, count in zip(run.counts, (len(batch), judged.sum(), novel, extreme), strict=True):
+    for name, count in (
+        ("samples", len(samples)),
+        ("judged", judged.sum()),
+        ("novel", taken.novel.sum()),
+        ("extreme", taken.extreme.sum()),
+    ):
         run.counts[name] += int(count)
     if run.first_judged is None and judged.any():
         run.first_judged = int(samples[judged.argmax()])
-    for number in np.unique(events[events >= 0]).tolist():
-        inside = samples[events == number]
+    for number in np.unique(taken.events[taken.events >= 0]).tolist():
+        inside = samples[taken.events == number]
         begin = spans.get(number, (int(inside[0]), 0))[0]
         spans[number] = begin, int(inside[-1])
     return int(samples[-1])
@@ -362,30 +315,28 @@ def _read_progress(run: KeptRun, path: Path) -> Progress | None:
         return None
 
 
-def _read_snapshot(run: KeptRun, path: Path) -> None:
+def _snapshot(path: Path, notes: list[str]) -> State | None:
     if not path.exists():
-        return
+        return None
     try:
-        monitor = _find(read_state(path), "NoveltyMonitor")
-        if monitor is None:
-            raise SnapshotError("it holds no monitor")
-        run.facts = {
-            "channels": monitor.facts["channels"],
-            "baseline": monitor.facts["baseline"],
-            **monitor.facts["settings"],
-        }
-        part = _find(monitor, "History")
-        history = None if part is None else History.from_state(part)
-    except (SnapshotError, *_UNREADABLE) as error:
-        run.notes.append(f"state.arrow cannot be read ({error}).")
+        return read_state(path)
+    except SnapshotError as error:
+        notes.append(f"state.arrow cannot be read ({error}).")
+        return None
+
+
+def _read_monitor(run: KeptRun, snapshot: State) -> None:
+    """Take the settings of the monitor and the directions of its events."""
+    monitor = find(snapshot, "NoveltyMonitor")
+    if monitor is None:
+        run.notes.append("state.arrow holds no monitor.")
         return
-    if history is not None:
-        run.directions = {number: e.direction for number, e in history.events.items()}
-
-
-def _find(state: State, kind: str) -> State | None:
-    """Return the first state of a kind, this one or one of its parts."""
-    if state.kind == kind:
-        return state
-    found = (_find(part, kind) for part in state.parts.values())
-    return next((part for part in found if part is not None), None)
+    run.facts = {
+        "channels": monitor.facts["channels"],
+        "baseline": monitor.facts["baseline"],
+        **monitor.facts["settings"],
+    }
+    part = find(monitor, "History")
+    if part is not None:
+        events = History.from_state(part).events
+        run.directions = {number: event.direction for number, event in events.items()}
