@@ -106,7 +106,7 @@ def against_incremental(quick: bool) -> Table:
     table.notes.append(
         "angle : batch is the largest angle to the true subspace over that of one SVD of all "
         "samples (sine); both sides keep a mean. The core goes through its Gram matrix where "
-        "streambasis.folding.GRAM_RANGE allows, which is so here but for the first folds."
+        "streambasis.core_svd.GRAM_RANGE allows, which is so here but for the first folds."
     )
     return table
 

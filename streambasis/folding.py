@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.audit import LEAST_DIMENSION, unit_roundoff
+from streambasis.core_svd import core_spectrum
 from streambasis.errors import SnapshotError
 from streambasis.kernels import principal as kernels
 from streambasis.ranks import Spectrum
@@ -31,14 +32,6 @@ LEVEL_RANGE = 64
 """Powers of two from 1 within which a core is left as it is."""
 SUSPECT = 1e-6
 """Part in the first direction below which a channel may be silent."""
-GRAM_RANGE = 1e-4
-"""Least ratio of the energies kept at which the Gram matrix of the core serves for its singular
-value decomposition. Forming it costs an error of one epsilon of the largest energy, so the least
-energy kept stays right to 1e-12 at each fold, and to 1e-10 over the thousands that it takes for
-rounding to build up."""
-GRAM_RANGE_CUT = 1e-8
-"""The same where directions are being cut: what the cut takes away from the least direction kept
-is far above that error."""
 
 
 class Subspace:
@@ -208,11 +201,6 @@ class Subspace:
         -----
         For m samples, k directions held and n channels: 2n(2km + m² + k(k + m) + 2k²) flops in
         matrix products and about 10(k + m)³ in the core.
-
-        The scatter about the new mean is that about the old one less the mean shift, counted W
-        times. With v the square roots of the weights this is the scatter of the weighted rows
-        times I - g·vvᵀ, g = (1 - √(Wa/W))/Wb, where Wa, Wb and W are the weights before, of the
-        block and after. (Ross et al. 2008 append the shift as one more row: the same scatter.)
         """
         if len(block) != len(self.roots):
             self._weigh(len(block))
@@ -245,21 +233,42 @@ class Subspace:
             coordinates *= roots[:, None]
             rest *= typed[: len(rest)]
         if self.centred:
-            shift = (typed * typed).T @ deviations / total
-            factor = (1.0 - math.sqrt(before / total)) / added
-            coordinates -= (factor * roots)[:, None] * (roots @ coordinates)
-            if len(rest):
-                rest -= (factor * typed) * (typed.T @ rest)
-            self.mean += _times_power(shift[0].astype(block.dtype), self.exponent)
-            if self.forget < 1.0 and np.abs(self.mean).max() < np.finfo(block.dtype).tiny:
-                # rounding would hold it at a subnormal number for ever
-                self.mean[:] = 0
+            self._move_mean(deviations, coordinates, rest, before, added)
         self.weight = total
         self.weight_squares = decay**2 * self.weight_squares + float(weights @ weights)
         self.power = decay * self.power + float(weights @ squares)
         self.outside *= decay
         self._refactor(math.sqrt(decay), coordinates, rest, squares * weights)
         self._forget_the_vanished()
+
+    def _move_mean(
+        self,
+        deviations: NDArray[Any],
+        coordinates: NDArray[Any],
+        rest: NDArray[Any],
+        before: float,
+        added: float,
+    ) -> None:
+        """Move the mean, and turn weighted rows about the old one into rows about the new one.
+
+        Notes
+        -----
+        The scatter about the new mean is that about the old one less the mean shift, counted W
+        times. With v the square roots of the weights this is the scatter of the weighted rows
+        times I - g·vvᵀ, g = (1 - √(Wa/W))/Wb, where Wa, Wb and W are the weights before, of the
+        block and after. (Ross et al. 2008 append the shift as one more row: the same scatter.)
+        """
+        roots, typed = self.roots, self.typed_roots
+        total = before + added
+        factor = (1.0 - math.sqrt(before / total)) / added
+        coordinates -= (factor * roots)[:, None] * (roots @ coordinates)
+        if len(rest):
+            rest -= (factor * typed) * (typed.T @ rest)
+        shift = (typed * typed).T @ deviations / total
+        self.mean += _times_power(shift[0].astype(self.mean.dtype), self.exponent)
+        if self.forget < 1.0 and np.abs(self.mean).max() < np.finfo(self.mean.dtype).tiny:
+            # rounding would hold it at a subnormal number for ever
+            self.mean[:] = 0
 
     def absorb(self, other: Subspace, folded: int) -> None:
         """Add the scatter of a subspace whose ``folded`` samples followed those of this one.
@@ -466,48 +475,6 @@ class Subspace:
         self.stack[: self.held] = directions
         self.singular, self.mean = singular, mean
         self.weight, self.weight_squares, self.outside, self.power = sums.tolist()
-
-
-def core_spectrum(
-    before: NDArray[np.float64],
-    coordinates: NDArray[Any],
-    factor: NDArray[Any],
-    limit: int,
-    whole: bool,
-) -> tuple[NDArray[np.float64], NDArray[Any]]:
-    """Return singular values, descending, and right singular vectors as rows, of the core.
-
-    Parameters
-    ----------
-    before : ndarray of float64, shape (k,)
-        Singular values before the fold, descending.
-    coordinates, factor : ndarray, shapes (m, k) and (m, q)
-        The core is diag(before) and zeros above the two side by side.
-    limit : int
-        How many singular values are kept.
-    whole : bool
-        Whether nothing is ever cut.
-    """
-    held, width = len(before), factor.shape[1]
-    wide = GRAM_RANGE if whole else GRAM_RANGE_CUT
-    if held == limit and before[-1] ** 2 > wide * before[0] ** 2:
-        gram = np.empty((held + width, held + width), factor.dtype)
-        # the upper triangle is not read
-        gram[:held, :held] = coordinates.conj().T @ coordinates
-        gram[np.arange(held), np.arange(held)] += before**2
-        if width:
-            gram[held:, :held] = factor.conj().T @ coordinates
-            gram[held:, held:] = factor.conj().T @ factor
-        energies, columns = np.linalg.eigh(gram, UPLO="L")
-        if energies[-limit] > wide * energies[-1]:
-            singular = np.sqrt(np.maximum(energies[::-1], 0.0))
-            return singular, np.ascontiguousarray(columns.conj().T[::-1])
-    core = np.zeros((held + len(coordinates), held + width), factor.dtype)
-    core[np.arange(held), np.arange(held)] = before
-    core[held:, :held] = coordinates
-    core[held:, held:] = factor
-    _, singular, rows = np.linalg.svd(core, full_matrices=False)
-    return singular, rows
 
 
 def _times_power(values: NDArray[Any], exponent: int) -> NDArray[Any]:

@@ -15,8 +15,8 @@ PACKAGE = Path(__file__).parent.parent / "streambasis"
 LAYERS = [
     {"kernels"},
     {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "memory",
-     "projecting", "growth", "window", "basis", "ranks", "folding", "gaps", "principal_settings",
-     "intake", "principal", "compare"},
+     "projecting", "growth", "window", "basis", "ranks", "core_svd", "folding", "gaps",
+     "principal_settings", "intake", "principal", "compare"},
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
     {"monitor"},

@@ -134,3 +134,40 @@ def test_directions_stay_orthonormal(dtype: str) -> None:
         for _ in range(8):
             basis.push_many(normal(rng, (1000, channels), dtype) * scales.astype(dtype))
             assert basis.audit().orthogonality < ORTHOGONALITY_LIMIT
+
+
+@pytest.mark.parametrize("spread", [1.5, 1.9, 2.1, 5.0])
+def test_small_energies_are_right_beside_large_ones(spread: float) -> None:
+    """Over a thousand folds every energy equals that of the SVD of all samples.
+
+    Amplitudes of 10**-1.9 to 1 go through the Gram matrix of the core, wider ones through its SVD:
+    1e-10 in either, and beyond that a few roundings of the largest amplitude at each fold.
+    """
+    rng = np.random.default_rng(7)
+    turn = np.linalg.qr(rng.standard_normal((16, 16)))[0]
+    amplitudes = np.logspace(0, -spread, 16)
+    feed = (rng.standard_normal((4000, 16)) * amplitudes) @ turn
+    basis = PrincipalBasis(16, rank=16, block=4)
+    basis.take_many(feed)
+    energies, vectors, _ = batch(feed)
+    bound = max(1e-10, 1000 * 10 * np.finfo(float).eps * 10**spread)
+    np.testing.assert_allclose(basis.energies, energies, rtol=bound)
+    for k in (1, 4, 12):
+        assert sine(basis.vectors[:k], vectors[:k]) < bound
+
+
+@pytest.mark.parametrize("channels", [24, 200])
+def test_a_feed_without_noise_keeps_every_direction(channels: int) -> None:
+    """A feed of exact rank 9 is held exactly, by either rule and with any block."""
+    rng = np.random.default_rng(8)
+    feed = rng.standard_normal((500, 9)) @ rng.standard_normal((9, channels))
+    energies, vectors, _ = batch(feed)
+    for rule in ("noise", "mdl", 9):
+        for block in (None, 1, 64):
+            basis = PrincipalBasis(channels, rank=rule, max_rank=12, block=block)
+            basis.take_many(feed)
+            basis.flush()
+            assert basis.rank == 9
+            np.testing.assert_allclose(basis.energies, energies[:9], rtol=1e-10)
+            assert sine(basis.vectors, vectors[:9]) < 1e-10
+            assert basis.noise < 1e-25
