@@ -10,7 +10,7 @@ import threading
 import time
 from collections.abc import Iterable
 from pathlib import Path
-from typing import Any
+from typing import Any, Self
 
 import paho.mqtt.client as paho
 import pytest
@@ -37,7 +37,21 @@ def free_port() -> int:
         return int(probe.getsockname()[1])
 
 
-class Mosquitto:
+class Held:
+    """Something that ends with the block that holds it, however that ends."""
+
+    def close(self) -> None:
+        """End it."""
+        raise NotImplementedError
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+
+class Mosquitto(Held):
     """A broker with a configuration and a folder of its own.
 
     Parameters
@@ -76,7 +90,7 @@ class Mosquitto:
             else:
                 return
 
-    def stop(self) -> None:
+    def close(self) -> None:
         """End it as a service manager does, so that it keeps its sessions."""
         self._process.send_signal(signal.SIGTERM)
         self._process.wait(10)
@@ -87,7 +101,7 @@ class Mosquitto:
         return f"{scheme}://{LOOPBACK}:{port or self.port}/{topic}"
 
 
-class Publisher:
+class Publisher(Held):
     """A client that publishes with QoS 1 and waits until the broker has it."""
 
     def __init__(self, port: int, client: str = "publisher", **login: str) -> None:
@@ -146,7 +160,7 @@ def make_session(port: int, client: str, topic: str = "plant", *, version: str =
     subscriber.loop_stop()
 
 
-class Line:
+class Line(Held):
     """A line between a client and a broker that can be frozen: nothing passes, nothing closes."""
 
     def __init__(self, port: int) -> None:

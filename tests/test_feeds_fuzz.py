@@ -19,7 +19,7 @@ from hypothesis import strategies as st
 from streambasis.errors import FeedError
 from streambasis.feeds import FeedOptions, open_feed
 from streambasis.feeds.objects import RowError
-from streambasis.feeds.payloads import MOST_PAYLOAD, MOST_ROWS, PayloadReader
+from streambasis.feeds.payloads import MOST_PAYLOAD, MOST_ROWS, PayloadReader, columns_in
 
 ROUNDS = 400
 FILE_ROUNDS = 100
@@ -72,6 +72,11 @@ def mutated(rng: np.random.Generator, data: bytes) -> bytes:
     return bytes(changed)
 
 
+def reader_of_first() -> PayloadReader:
+    """Return a reader of payloads like the first one."""
+    return PayloadReader("feed", columns_in("feed", FIRST, None, None))
+
+
 def read_payload(reader: PayloadReader, payload: bytes) -> bool:
     """Read a payload; return whether it held samples, which are sound then."""
     try:
@@ -96,7 +101,7 @@ SEEDS: dict[str, Callable[[], bytes]] = {
 def test_mutated_payloads_are_read_or_refused(seed: str) -> None:
     """Damage of every kind is a RowError or sound samples, within bounded memory."""
     rng = np.random.default_rng(5)
-    reader = PayloadReader("feed", FIRST, None, None)
+    reader = reader_of_first()
     data = SEEDS[seed]()
     assert read_payload(reader, data)
     before = pa.total_allocated_bytes()
@@ -113,7 +118,7 @@ def test_mutated_payloads_are_read_or_refused(seed: str) -> None:
 @given(st.binary(max_size=300))
 def test_random_bytes_are_no_payload(payload: bytes) -> None:
     """Bytes without any sense are refused; so they are behind the mark of an Arrow stream."""
-    reader = PayloadReader("feed", FIRST, None, None)
+    reader = reader_of_first()
     read_payload(reader, payload)
     assert not read_payload(reader, b"\xff\xff\xff\xff" + payload)
 
@@ -128,7 +133,7 @@ VALUES = st.recursive(
 @given(st.dictionaries(st.sampled_from(["time", "seq", "a", "b", "c"]), VALUES))
 def test_any_json_is_read_or_refused(found: dict[str, object]) -> None:
     """Values of any kind under the names of channels give finite samples or a reason."""
-    read_payload(PayloadReader("feed", FIRST, None, None), json.dumps(found).encode())
+    read_payload(reader_of_first(), json.dumps(found).encode())
 
 
 def variable_width() -> bytes:
@@ -176,7 +181,7 @@ def test_streams_that_could_do_harm_are_refused_unread(
     payload: Callable[[], bytes], reason: str
 ) -> None:
     """Packed, of variable width, or claiming too much: refused with the reason."""
-    reader = PayloadReader("feed", FIRST, None, None)
+    reader = reader_of_first()
     with pytest.raises(RowError, match=reason):
         reader.read("topic", payload())
 

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import os
-import signal
 import subprocess
 import sys
 import threading
@@ -53,33 +52,33 @@ def run_killed(source: str, kept: Path, follow: bool, kills: int, seed: int) -> 
             [sys.executable, "-c", PROGRAM, source, str(kept), str(int(follow))]
         )
         runs += 1
-        before = len(kept_samples(kept))
-        while len(kept_samples(kept)) == before and time.monotonic() < deadline:
-            assert program.poll() is None or program.returncode == 0
-            time.sleep(0.002)
-        if runs <= kills:
-            time.sleep(rng.uniform(0, 0.03))
-        else:
-            while len(kept_samples(kept)) < SAMPLES and time.monotonic() < deadline:
-                time.sleep(0.01)
-        program.send_signal(signal.SIGKILL)
-        program.wait()
+        try:
+            before = len(kept_samples(kept))
+            while len(kept_samples(kept)) == before and time.monotonic() < deadline:
+                assert program.poll() is None
+                time.sleep(0.002)
+            if runs <= kills:
+                time.sleep(rng.uniform(0, 0.03))
+            else:
+                while len(kept_samples(kept)) < SAMPLES and time.monotonic() < deadline:
+                    time.sleep(0.01)
+        finally:
+            program.kill()
+            program.wait()
     return runs
 
 
 def test_no_message_is_lost_or_taken_twice(tmp_path: Path) -> None:
     """Messages with a time, published all the while, each exactly once and in order."""
-    broker = Mosquitto(tmp_path)
-    make_session(broker.port, "monitor")
-    publisher = Publisher(broker.port)
     payloads = [json.dumps({"time": n, "a": n}) for n in range(SAMPLES)]
-    sending = threading.Thread(target=publisher.publish, args=[payloads])
-    sending.start()
     kept = tmp_path / "kept.json"
-    runs = run_killed(broker.url(), kept, False, kills=4, seed=1)
-    sending.join()
-    publisher.close()
-    broker.stop()
+    with Mosquitto(tmp_path) as broker:
+        make_session(broker.port, "monitor")
+        with Publisher(broker.port) as publisher:
+            sending = threading.Thread(target=publisher.publish, args=[payloads])
+            sending.start()
+            runs = run_killed(broker.url(), kept, False, kills=4, seed=1)
+            sending.join()
     assert runs > 1
     assert kept_samples(kept) == list(range(SAMPLES))
 

@@ -7,7 +7,7 @@ import json
 import subprocess
 import threading
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import ExitStack, contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -29,9 +29,15 @@ SETTINGS = Broker(client=CLIENT, patience=5.0)
 @pytest.fixture(scope="module")
 def shared(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Mosquitto]:
     """Give a broker that the tests of this file share; each uses a topic of its own."""
-    broker = Mosquitto(tmp_path_factory.mktemp("broker"))
-    yield broker
-    broker.stop()
+    with Mosquitto(tmp_path_factory.mktemp("broker")) as broker:
+        yield broker
+
+
+@pytest.fixture
+def held() -> Iterator[ExitStack]:
+    """Give what ends brokers and clients of one test, however it ends."""
+    with ExitStack() as held:
+        yield held
 
 
 @pytest.fixture
@@ -100,9 +106,8 @@ def waiting(broker: Mosquitto, topic: str, payloads: list[Any], version: str = "
 
 def publish(broker: Mosquitto, topic: str, payloads: list[Any]) -> None:
     """Publish while nobody is connected; the session that exists keeps it."""
-    publisher = Publisher(broker.port, f"{topic}-publisher")
-    publisher.publish(payloads, topic)
-    publisher.close()
+    with Publisher(broker.port, f"{topic}-publisher") as publisher:
+        publisher.publish(payloads, topic)
 
 
 def settings(topic: str, **changes: Any) -> Broker:
@@ -200,6 +205,25 @@ def test_without_time_or_sequence_every_message_counts(shared: Mosquitto, topic:
         assert read(feed, 30) == [7] * 30
 
 
+def test_a_run_that_goes_on_does_not_wait_for_a_message(shared: Mosquitto, topic: str) -> None:
+    """With its position and channels a feed opens though the topic is quiet."""
+    url = waiting(shared, topic, ['{"time_ms": 1500, "a": 1}'])
+    with opened(url, broker=settings(topic)) as feed:
+        (batch,) = batches(feed, 1)
+        feed.commit(batch.position)
+    with opened(url, batch.position, channels=["a"], broker=settings(topic)) as feed:
+        publish(shared, topic, ['{"time_ms": 2500, "a": 2}'])
+        (batch,) = batches(feed, 1)
+        assert batch.times is not None
+        assert (batch.first, batch.times.tolist()) == (1, [2_500_000_000])
+    damaged = {**batch.position, "unit": "s"}
+    with (
+        pytest.raises(FeedError, match="position to go on from is damaged"),
+        opened(url, damaged, channels=["a"], broker=settings(topic)),
+    ):
+        raise AssertionError("opened at a damaged position")
+
+
 def test_more_messages_than_the_broker_sends_ahead(shared: Mosquitto, topic: str) -> None:
     """The feed says when a commit is due, and goes on after it; nothing is held without bound."""
     url = waiting(shared, topic, objects(0, 500))
@@ -218,10 +242,10 @@ def test_more_messages_than_the_broker_sends_ahead(shared: Mosquitto, topic: str
     assert most <= 16
 
 
-def test_dropping_the_oldest_is_counted(shared: Mosquitto, topic: str) -> None:
+def test_dropping_the_oldest_is_counted(shared: Mosquitto, topic: str, held: ExitStack) -> None:
     """With room for 10 messages and nobody reading, the newest are kept, in order."""
     make_session(shared.port, topic, topic)
-    publisher = Publisher(shared.port, f"{topic}-publisher")
+    publisher = held.enter_context(Publisher(shared.port, f"{topic}-publisher"))
     publisher.publish(objects(0, 1), topic)
     with opened(
         shared.url(topic), broker=settings(topic, queue=10, when_full="drop-oldest")
@@ -230,7 +254,6 @@ def test_dropping_the_oldest_is_counted(shared: Mosquitto, topic: str) -> None:
         until(lambda: feed.counts["dropped"] >= 189)
         assert read(feed, 11) == [0, *range(190, 200)]
         assert feed.counts["dropped"] == 189
-    publisher.close()
 
 
 def until(condition: Callable[[], bool]) -> None:
@@ -243,35 +266,35 @@ def until(condition: Callable[[], bool]) -> None:
     raise AssertionError("what was waited for did not happen")
 
 
-def test_a_restart_of_the_broker_loses_and_repeats_nothing(tmp_path: Path) -> None:
+def test_a_restart_of_the_broker_loses_and_repeats_nothing(tmp_path: Path, held: ExitStack) -> None:
     """Published before, during and after a restart; half of it not yet acknowledged then."""
-    broker = Mosquitto(tmp_path)
+    broker = held.enter_context(Mosquitto(tmp_path))
     make_session(broker.port, CLIENT)
-    publisher = Publisher(broker.port)
+    publisher = held.enter_context(Publisher(broker.port))
     publisher.publish(objects(0, 300))
     with opened(broker.url()) as feed:
         assert read(feed, 300, commit=False) == list(range(300))
-        broker.stop()
+        broker.close()
         until(lambda: feed.trouble != "")
         publisher.send(objects(300, 400))
         broker.start()
         assert read(feed, 100) == list(range(300, 400))
-        until(lambda: feed.trouble == "")
-        assert feed.counts["connections"] == 2
+        until(lambda: feed.counts["connections"] == 2)
+        assert feed.trouble == ""
         assert feed.counts["sessions lost"] == 0
         publisher.publish(objects(400, 500))
         found = read(feed, 100)
         assert found == list(range(400, 500))
-    publisher.close()
-    broker.stop()
 
 
-def test_a_network_that_is_gone_for_a_while_loses_and_repeats_nothing(tmp_path: Path) -> None:
+def test_a_network_that_is_gone_for_a_while_loses_and_repeats_nothing(
+    tmp_path: Path, held: ExitStack
+) -> None:
     """Nothing passes and nothing closes for longer than the keep-alive; then all of it comes."""
-    broker = Mosquitto(tmp_path)
-    line = Line(broker.port)
+    broker = held.enter_context(Mosquitto(tmp_path))
+    line = held.enter_context(Line(broker.port))
     make_session(broker.port, CLIENT)
-    publisher = Publisher(broker.port)
+    publisher = held.enter_context(Publisher(broker.port))
     publisher.publish(objects(0, 100))
     url = broker.url(port=line.port)
     with opened(url, broker=replace(SETTINGS, keepalive=1)) as feed:
@@ -281,14 +304,11 @@ def test_a_network_that_is_gone_for_a_while_loses_and_repeats_nothing(tmp_path: 
         until(lambda: feed.trouble != "")
         line.thaw()
         assert read(feed, 100) == list(range(100, 200))
-        assert feed.counts["connections"] >= 2
-    publisher.close()
-    line.close()
-    broker.stop()
+        until(lambda: feed.counts["connections"] >= 2)
 
 
 def test_user_and_password_come_from_the_environment_and_are_never_shown(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, held: ExitStack
 ) -> None:
     """The right password opens, a wrong one is an error that does not repeat it."""
     secret, wrong = "s3cret-pass", "wr0ng-pass"
@@ -296,7 +316,9 @@ def test_user_and_password_come_from_the_environment_and_are_never_shown(
     subprocess.run(
         [program("mosquitto_passwd"), "-b", "-c", str(passwords), "me", secret], check=True
     )
-    broker = Mosquitto(tmp_path, f"allow_anonymous false\npassword_file {passwords}\n")
+    broker = held.enter_context(
+        Mosquitto(tmp_path, f"allow_anonymous false\npassword_file {passwords}\n")
+    )
     credentials = tmp_path / "credentials"
     credentials.write_text(f"me\n{wrong}\n")
     monkeypatch.setenv("STREAMBASIS_MQTT_CREDENTIALS", str(credentials))
@@ -304,15 +326,13 @@ def test_user_and_password_come_from_the_environment_and_are_never_shown(
         raise AssertionError("opened with a wrong password")
     assert wrong not in str(caught.value)
     credentials.write_text(f"me\n{secret}\n")
-    publisher = Publisher(broker.port, user="me", password=secret)
+    publisher = held.enter_context(Publisher(broker.port, user="me", password=secret))
     timer = threading.Timer(1.0, publisher.publish, [objects(0, 1)])
     timer.start()
     with opened(broker.url()) as feed:
         assert read(feed, 1) == [0]
         assert secret not in repr(vars(feed))
     timer.join()
-    publisher.close()
-    broker.stop()
     assert secret not in repr(Broker(user="me", password=secret))
 
 
@@ -320,7 +340,7 @@ def test_user_and_password_come_from_the_environment_and_are_never_shown(
 @pytest.mark.filterwarnings(
     "ignore:Exception ignored in. <ssl.SSLSocket:pytest.PytestUnraisableExceptionWarning"
 )
-def test_tls_checks_who_the_broker_is(tmp_path: Path) -> None:
+def test_tls_checks_who_the_broker_is(tmp_path: Path, held: ExitStack) -> None:
     """A broker whose certificate nobody vouches for is refused; with its authority, it is read."""
     key, certificate = tmp_path / "key.pem", tmp_path / "certificate.pem"
     subprocess.run(
@@ -333,11 +353,8 @@ def test_tls_checks_who_the_broker_is(tmp_path: Path) -> None:
         capture_output=True,
     )
     port = free_port()
-    broker = Mosquitto(
-        tmp_path,
-        f"allow_anonymous true\nlistener {port} {LOOPBACK}\ncertfile {certificate}\n"
-        f"keyfile {key}\n",
-    )
+    secured = f"listener {port} {LOOPBACK}\ncertfile {certificate}\nkeyfile {key}\n"
+    broker = held.enter_context(Mosquitto(tmp_path, f"allow_anonymous true\n{secured}"))
     url = broker.url(port=port, scheme="mqtts")
     with (
         pytest.raises(FeedError, match=r"no connection within 1 s"),
@@ -345,12 +362,10 @@ def test_tls_checks_who_the_broker_is(tmp_path: Path) -> None:
     ):
         raise AssertionError("opened without trust")
     make_session(broker.port, CLIENT)
-    publisher = Publisher(broker.port)
+    publisher = held.enter_context(Publisher(broker.port))
     publisher.publish(objects(0, 5))
     with opened(url, broker=replace(SETTINGS, ca_file=certificate)) as feed:
         assert read(feed, 5) == list(range(5))
-    publisher.close()
-    broker.stop()
     with (
         pytest.raises(FeedError, match="TLS files cannot be used"),
         opened(url, broker=replace(SETTINGS, ca_file=tmp_path / "none.pem")),
@@ -385,9 +400,9 @@ def test_a_strict_feed_refuses_a_malformed_message(shared: Mosquitto, topic: str
         list(feed.batches())
 
 
-def test_retained_messages_are_no_samples(shared: Mosquitto, topic: str) -> None:
+def test_retained_messages_are_no_samples(shared: Mosquitto, topic: str, held: ExitStack) -> None:
     """What was retained before anybody listened is old and passed over."""
-    publisher = Publisher(shared.port, f"{topic}-publisher")
+    publisher = held.enter_context(Publisher(shared.port, f"{topic}-publisher"))
     publisher.publish(objects(0, 1), topic, retain=True)
     timer = threading.Timer(1.0, publisher.publish, [objects(1, 2), topic])
     timer.start()
@@ -395,11 +410,10 @@ def test_retained_messages_are_no_samples(shared: Mosquitto, topic: str) -> None
         assert read(feed, 1) == [1]
         assert feed.counts["retained"] == 1
     timer.join()
-    publisher.close()
 
 
 def test_an_error_in_a_callback_reaches_the_reader(
-    shared: Mosquitto, topic: str, monkeypatch: pytest.MonkeyPatch
+    shared: Mosquitto, topic: str, monkeypatch: pytest.MonkeyPatch, held: ExitStack
 ) -> None:
     """It neither kills the network thread unnoticed nor leaves the reader waiting."""
     url = waiting(shared, topic, objects(0, 1))
@@ -410,11 +424,10 @@ def test_an_error_in_a_callback_reaches_the_reader(
             raise RuntimeError(f"no room for {more}")
 
         monkeypatch.setattr(feed._connection, "_full", broken)
-        publisher = Publisher(shared.port, f"{topic}-publisher")
+        publisher = held.enter_context(Publisher(shared.port, f"{topic}-publisher"))
         publisher.publish(objects(1, 2), topic)
         with pytest.raises(FeedError, match="RuntimeError in a callback: no room for"):
             next(feed.batches())
-        publisher.close()
 
 
 def test_a_broker_that_is_not_there_is_named() -> None:

@@ -258,6 +258,28 @@ def test_a_pipe_that_is_opened_again_goes_on_counting(tmp_path: Path) -> None:
     assert again[1] == np.array([4.0]).tobytes().hex()
 
 
+@pytest.mark.parametrize("kind", ["csv", "jsonl", "arrows"])
+def test_a_pipe_gives_what_has_come_without_waiting_for_more(kind: str) -> None:
+    """A producer that pauses gets its samples through before it goes on."""
+    table = table_of(30)
+    data = {"csv": csv_bytes, "jsonl": json_bytes, "arrows": stream_bytes}[kind](table)
+    program = PROGRAM.replace("wait=None", "wait=0.01").replace("]))", "]), flush=True)")
+    with subprocess.Popen(
+        [sys.executable, "-c", program, "null"], stdin=subprocess.PIPE, stdout=subprocess.PIPE
+    ) as process:
+        assert process.stdin is not None
+        assert process.stdout is not None
+        process.stdin.write(data)
+        process.stdin.flush()
+        # the pipe is still open while this line is read
+        batch = json.loads(process.stdout.readline())
+        process.stdin.close()
+        rest = [json.loads(line) for line in process.stdout]
+    assert batch[0] == 0
+    assert len(batch[2]) == (30 if kind != "arrows" else len(batch[2])) > 0
+    assert len(batch[2]) + sum(len(b[2]) for b in rest[:-1]) == 30
+
+
 def test_a_format_that_needs_a_file_is_refused_on_a_pipe(tmp_path: Path) -> None:
     """Parquet through a pipe is an error with a way out."""
     with pytest.raises(subprocess.CalledProcessError) as caught:

@@ -15,7 +15,7 @@ from streambasis.feeds.broker import Broker, address_of, credentials_of
 from streambasis.feeds.columns import Columns
 from streambasis.feeds.connection import Connection, Message, Receipt
 from streambasis.feeds.objects import RowError
-from streambasis.feeds.payloads import ID_BYTES, Content, PayloadReader
+from streambasis.feeds.payloads import ID_BYTES, Content, PayloadReader, columns_in
 from streambasis.feeds.reading import (
     BATCH_ROWS,
     FeedOptions,
@@ -46,8 +46,8 @@ class MqttFeed(PieceFeed):
     url : str
         ``mqtt://host:port/topic`` or ``mqtts://host:port/topic``.
     channels, time
-        As of :func:`streambasis.feeds.open_feed`; what is left open is told by the first message,
-        for which the opening waits.
+        As of :func:`streambasis.feeds.open_feed`. What is left open is told by the first message,
+        for which the opening waits; with a position and channels nothing is left open.
     options, position
         As of :class:`~streambasis.feeds.reading.PieceFeed`. Where the options name no user, the
         environment does.
@@ -99,11 +99,14 @@ class MqttFeed(PieceFeed):
         self._connection = Connection(url, address, broker, options.stop, position is not None)
         try:
             self._connection.wait_for_first()
-            self._reader = self._first_reader(channels, time)
+            if position is not None and channels is not None:
+                self.columns = self._same_columns(position, channels)
+            else:
+                self.columns = self._first_columns(channels, time)
         except BaseException:
             self._connection.close()
             raise
-        self.columns = self._reader.columns
+        self._reader = PayloadReader(self.name, self.columns)
 
     def _go_on(self, position: Position) -> None:
         self._serial = self._committed = whole_number(self.name, position, "serial")
@@ -116,14 +119,21 @@ class MqttFeed(PieceFeed):
             raise FeedError(f"{self.name}: the position to go on from is damaged") from None
         self._ids = self._ids[: len(self._ids) // ID_BYTES * ID_BYTES]
 
-    def _first_reader(self, channels: Sequence[str] | None, time: str | None) -> PayloadReader:
+    def _same_columns(self, position: Position, channels: Sequence[str]) -> Columns:
+        """Return the columns of an earlier run."""
+        time, unit = position.get("time"), position.get("unit")
+        if not isinstance(time, str | None) or not isinstance(unit, int | None):
+            raise FeedError(f"{self.name}: the position to go on from is damaged")
+        return Columns(tuple(channels), time, unit)
+
+    def _first_columns(self, channels: Sequence[str] | None, time: str | None) -> Columns:
         """Wait for the first message that shows the channels; keep all that came until then."""
         reason = "the feed was asked to stop before the first message came"
         while not self.options.stop.is_set() and len(self._looked_at) < MOST_LOOKED_AT:
             for message in self._connection.take(1, 0.0):
                 self._looked_at.append(message)
                 try:
-                    return PayloadReader(self.name, message.payload, channels, time)
+                    return columns_in(self.name, message.payload, channels, time)
                 except RowError as error:
                     reason = f"none of the first messages holds samples ({error})"
                     if self.options.strict:
@@ -177,7 +187,7 @@ class MqttFeed(PieceFeed):
             messages = self._connection.take(BATCH_ROWS, wait)
 
     def _piece(self, messages: list[Message]) -> Piece:
-        gathered = _Gathered(self._serial, self._ids, self._remembered)
+        gathered = _Gathered(self._serial, self._ids, self._remembered, self.columns)
         for message in messages:
             try:
                 content = self._reader.read(message.topic, message.payload)
@@ -198,7 +208,7 @@ class MqttFeed(PieceFeed):
                             self._malformed_row(message, reason),
                         )
                     )
-        piece = gathered.piece(self.columns)
+        piece = gathered.piece()
         self._ids = gathered.ids_behind(len(gathered.entries))
         return piece
 
@@ -250,7 +260,8 @@ class MqttFeed(PieceFeed):
 class _Gathered:
     """Messages that make one piece, and where each of them ends."""
 
-    def __init__(self, serial: int, ids: bytes, remembered: int) -> None:
+    def __init__(self, serial: int, ids: bytes, remembered: int, columns: Columns) -> None:
+        self._columns = columns
         self._serial_before = serial
         self._ids_before = ids
         self._most = remembered * ID_BYTES
@@ -272,10 +283,10 @@ class _Gathered:
         self.faults.append((self.count, row))
         self.entries.append(_Entry(serial, None, self.count, 0))
 
-    def piece(self, columns: Columns) -> Piece:
-        values = np.concatenate([np.empty((0, len(columns.channels))), *self._values])
+    def piece(self) -> Piece:
+        values = np.concatenate([np.empty((0, len(self._columns.channels))), *self._values])
         times = None
-        if columns.time is not None:
+        if self._columns.time is not None:
             times = np.concatenate([np.empty(0, np.int64), *self._times])
         return Piece(values, times, self._place, self.faults)
 
@@ -299,7 +310,13 @@ class _Gathered:
                 partial = {"id": entry.id.hex(), "rows": rows}
         serial = self.entries[whole - 1].serial if whole else self._serial_before
         ids = base64.b64encode(self.ids_behind(whole)).decode()
-        return {"serial": serial, "ids": ids, "partial": partial}
+        return {
+            "serial": serial,
+            "ids": ids,
+            "partial": partial,
+            "time": self._columns.time,
+            "unit": self._columns.unit,
+        }
 
 
 @dataclass(frozen=True, slots=True)

@@ -57,6 +57,38 @@ class Content:
     faults: list[tuple[int, str]]
 
 
+def columns_in(
+    name: str, payload: bytes, channels: Sequence[str] | None, time: str | None
+) -> Columns:
+    """Choose channels and time among what a payload holds.
+
+    Parameters
+    ----------
+    name : str
+        What the feed is called in messages.
+    payload : bytes
+        A sequence number in it is no channel unless it is asked for.
+    channels, time
+        As of :func:`streambasis.feeds.open_feed`.
+
+    Raises
+    ------
+    RowError
+        If the payload cannot be read.
+    FeedError
+        If its columns do not fit.
+    """
+    if payload.startswith(_CONTINUATION):
+        schema = _batches(payload)[0].schema
+        if channels is None:
+            schema = pa.schema([field for field in schema if field.name not in SEQUENCES])
+        return choose(name, schema, channels, time)
+    found = object_of(payload)
+    if channels is None:
+        found = {key: found[key] for key in found if key not in SEQUENCES}
+    return columns_of(name, found, channels, time)
+
+
 class PayloadReader:
     """Reads payloads of one feed.
 
@@ -64,36 +96,15 @@ class PayloadReader:
     ----------
     name : str
         What the feed is called in messages.
-    first : bytes
-        A payload that shows which channels there are.
-    channels, time
-        As of :func:`streambasis.feeds.open_feed`.
-
-    Raises
-    ------
-    RowError
-        If the first payload cannot be read.
-    FeedError
-        If its columns do not fit.
+    columns : Columns
+        Its channels and its time.
     """
 
-    def __init__(
-        self, name: str, first: bytes, channels: Sequence[str] | None, time: str | None
-    ) -> None:
+    def __init__(self, name: str, columns: Columns) -> None:
         self._name = name
-        if first.startswith(_CONTINUATION):
-            schema = _batches(first)[0].schema
-            if channels is None:
-                # a sequence number is no channel unless it is asked for
-                schema = pa.schema([field for field in schema if field.name not in SEQUENCES])
-            self.columns = choose(name, schema, channels, time)
-        else:
-            found = object_of(first)
-            if channels is None:
-                found = {key: found[key] for key in found if key not in SEQUENCES}
-            self.columns = columns_of(name, found, channels, time)
-        self._objects = ObjectReader(self.columns)
-        self._sequence = [key for key in SEQUENCES if key not in self.columns.channels]
+        self.columns = columns
+        self._objects = ObjectReader(columns)
+        self._sequence = [key for key in SEQUENCES if key not in columns.channels]
 
     def read(self, topic: str, payload: bytes) -> Content:
         """Return the samples of a payload.
