@@ -17,7 +17,7 @@ for name in ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"):
 
 from bench import harness  # noqa: E402 - numpy reads those variables when it loads
 
-QUESTIONS = ("grow", "window", "principal", "snapshot", "detect")
+QUESTIONS = ("grow", "window", "principal", "snapshot", "detect", "feeds")
 
 
 def main(arguments: list[str] | None = None) -> int:

@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import json
+import shutil
+import socket
 import subprocess
+import sys
 import tempfile
 import threading
 import time
@@ -12,12 +15,34 @@ from pathlib import Path
 import numpy as np
 import pyarrow as pa
 import pyarrow.csv
+import pyarrow.json
 import pyarrow.parquet
 
 from bench.harness import Table, interleaved
 
 CHANNELS = 32
 LOOPBACK = "127.0.0.1"
+_PUBLISHER = f"""
+import json, sys, time
+from paho.mqtt.client import Client
+from paho.mqtt.enums import CallbackAPIVersion
+port, count, rate = map(int, sys.argv[1:])
+client = Client(CallbackAPIVersion.VERSION2, client_id="bench-publisher")
+client.max_inflight_messages_set(0)
+client.connect("{LOOPBACK}", port)
+client.loop_start()
+time.sleep(1)
+values = {{f"c{{i:02}}": 0.125 * i for i in range({CHANNELS})}}
+start = time.perf_counter()
+sent = 0
+while sent < count:
+    due = min(count, int((time.perf_counter() - start) * rate))
+    while sent < due:
+        client.publish("bench", json.dumps({{"time": time.time(), **values}}), qos=1)
+        sent += 1
+    time.sleep(0.0005)
+time.sleep(0.5)
+"""
 
 
 def run(quick: bool) -> list[Table]:
@@ -61,10 +86,8 @@ def reading(rows: int) -> Table:
             torn: lambda: pa.csv.read_csv(csv),
             parquet: lambda: pa.parquet.read_table(parquet, memory_map=False),
             arrow: lambda: pa.ipc.open_file(pa.OSFile(str(arrow))).read_all(),
-            lines: lambda: pa.json.read_json(lines) if hasattr(pa, "json") else None,
+            lines: lambda: pa.json.read_json(lines),
         }
-        import pyarrow.json
-
         options = FeedOptions(strict=False)
         for path, theirs in own.items():
             count = rows // 10 if path == lines else rows
@@ -86,57 +109,38 @@ def reading(rows: int) -> Table:
 
 def latency(seconds: float, rate: int = 1000) -> Table:
     """Measure the time from publishing a sample to holding it in a batch."""
-    from paho.mqtt.client import Client
-    from paho.mqtt.enums import CallbackAPIVersion
-
     from streambasis.feeds import Broker, FeedOptions, open_feed
 
     result = Table(
         f"From publishing to a batch, {rate:,} messages per second of {CHANNELS} channels",
         ["batches committed", "messages", "median ms", "99th percentile ms", "largest ms"],
-        notes=["QoS 1 through mosquitto on the same machine; the publisher runs beside the feed"],
+        notes=[
+            "QoS 1 through mosquitto on the same machine; the publisher is a process of its own"
+        ],
     )
     count = round(seconds * rate)
     with tempfile.TemporaryDirectory() as folder:
         port, broker = _broker(Path(folder))
-        client = Client(CallbackAPIVersion.VERSION2, client_id="bench-publisher")
-        client.connect(LOOPBACK, port)
-        client.max_inflight_messages_set(0)
-        client.loop_start()
+        arguments = [sys.executable, "-c", _PUBLISHER, str(port), str(count), str(rate)]
         stop = threading.Event()
-
-        def publish() -> None:
-            values = {f"c{i:02}": 0.125 * i for i in range(CHANNELS)}
-            start = time.perf_counter()
-            sent = 0
-            while sent < count and not stop.is_set():
-                due = int((time.perf_counter() - start) * rate)
-                while sent < min(due, count):
-                    now = time.perf_counter()
-                    client.publish("bench", json.dumps({"time": now, **values}), qos=1)
-                    sent += 1
-                time.sleep(0.0005)
-
         options = FeedOptions(broker=Broker(client="bench"), stop=stop)
-        threading.Timer(0.5, publish).start()
         delays: list[np.ndarray] = []
         batches = taken = 0
-        try:
-            with open_feed(f"mqtt://{LOOPBACK}:{port}/bench", options=options) as feed:
-                for batch in feed.batches():
-                    now = time.perf_counter()
-                    delays.append(now - batch.times / 1e9)
-                    feed.commit(batch.position)
-                    batches += 1
-                    taken += len(batch)
-                    if taken >= count - 200:
-                        break
-        finally:
-            stop.set()
-            client.disconnect()
-            client.loop_stop()
-            broker.terminate()
-            broker.wait()
+        with subprocess.Popen(arguments) as publisher:
+            # what is left of the messages when the publisher has ended does not count
+            threading.Thread(target=lambda: (publisher.wait(), stop.set())).start()
+            try:
+                with open_feed(f"mqtt://{LOOPBACK}:{port}/bench", options=options) as feed:
+                    for batch in feed.batches():
+                        now = time.time()
+                        delays.append(now - batch.times / 1e9)
+                        feed.commit(batch.position)
+                        batches += 1
+                        taken += len(batch)
+            finally:
+                publisher.kill()
+                broker.terminate()
+                broker.wait()
     middle, high, most = np.quantile(np.concatenate(delays) * 1e3, [0.5, 0.99, 1.0])
     result.add(batches, taken, float(middle), float(high), float(most))
     return result
@@ -144,9 +148,6 @@ def latency(seconds: float, rate: int = 1000) -> Table:
 
 def _broker(folder: Path) -> tuple[int, subprocess.Popen[bytes]]:
     """Start mosquitto on a free port of the loopback address."""
-    import shutil
-    import socket
-
     program = shutil.which("mosquitto", path="/usr/sbin:/usr/bin:/usr/local/sbin")
     if program is None:
         raise SystemExit("mosquitto is not installed: apt-get install mosquitto")

@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 from numpy.typing import NDArray
 from pyarrow import csv as arrow_csv
 
@@ -101,6 +102,7 @@ class CsvRows:
         self._as_text = arrow_csv.ConvertOptions(
             column_types={number: pa.string() for number in self._order},
             include_columns=self._order,
+            strings_can_be_null=True,
         )
 
     def _types(self, body: bytes) -> pa.Schema:
@@ -215,9 +217,11 @@ class CsvRows:
         if len(table) != len(good):
             return faults
         for position, name in enumerate(self._kinds):
-            kind = self._kinds[name]
-            for i, text in zip(good, table.column(position).to_pylist(), strict=True):
-                if i not in faults and not _fits(text, kind):
+            kind, column = self._kinds[name], table.column(position)
+            if _all_fit(column, kind):
+                continue
+            for i, text in zip(good, column.to_pylist(), strict=True):
+                if i not in faults and text is not None and not _fits(text, kind):
                     shown = text if len(text) <= _SHOWN else text[:_SHOWN] + "..."
                     faults[i] = f"column {name!r}: invalid value {shown!r}"
         return faults
@@ -244,6 +248,14 @@ def _is_number(text: str) -> bool:
     try:
         float(text)
     except ValueError:
+        return False
+    return True
+
+
+def _all_fit(column: pa.ChunkedArray, kind: pa.DataType) -> bool:
+    try:
+        pc.utf8_trim_whitespace(column).cast(kind)
+    except pa.ArrowInvalid:
         return False
     return True
 
