@@ -158,7 +158,7 @@ class ObjectReader:
             unit = self.columns.unit
             if isinstance(given, int) or math.isfinite(given):
                 whole = math.floor(given)
-                value = whole * unit + round((given - whole) * unit)
+                value: int = whole * unit + round((given - whole) * unit)
                 if abs(value) <= MOST_NANOSECONDS:
                     return value
             raise RowError("the time is no number of seconds within 292 years")
