@@ -348,13 +348,61 @@ def test_few_channels_are_watched(channels: int) -> None:
 
 
 def test_memory_is_bounded() -> None:
-    """What a snapshot holds does not grow with the feed."""
+    """What is held does not grow with the feed, and no snapshot is larger than it."""
     monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
-    sizes = []
-    for seed in range(6):
-        monitor.push_many(plant(18, 4000)[: 4000 - seed])
-        sizes.append(len(to_bytes(monitor)))
-    assert max(sizes[2:]) < 1.6 * sizes[1] + 300_000
+    monitor.push_many(plant(18, 4000))
+    held = monitor.nbytes
+    for samples in (4000, 3999, 3998, 5000):
+        monitor.push_many(plant(18, samples))
+        assert monitor.nbytes < 1.05 * held
+        assert len(to_bytes(monitor)) < held + 100_000
+
+
+def test_channel_without_a_value_in_the_baseline() -> None:
+    """A dead channel leaves the others watched and the limit refined; its first value is news."""
+    feed = plant(19, 6000)
+    feed[:5900, 4] = np.nan
+    monitor, table = run(feed, [6000])
+    assert monitor.constant == ("c4",)
+    limits = table["limit"].to_numpy()
+    assert np.unique(limits[BASELINE:5900]).size > 1
+    assert table["novel"].to_numpy()[BASELINE:5900].mean() < 2e-3
+    assert [(e["start"], e["channels"]) for e in monitor.events] == [(5900, ["c4"])]
+
+
+def test_every_sample_has_gaps() -> None:
+    """A feed of which every sample lacks two channels is learnt and watched all the same."""
+    feed = plant(20, 3000)
+    rng = np.random.default_rng(22)
+    for row in feed:
+        row[rng.choice(10, 2, replace=False)] = np.nan
+    feed[2500:2700, 10] += 12.0 * units(20)[10]
+    monitor, table = run(feed, [3000])
+    assert monitor.rank == 3
+    assert table["novel"].to_numpy()[BASELINE:2500].mean() < 5e-3
+    assert [e["channels"][0] for e in monitor.events] == ["c10"]
+
+
+def test_nothing_moves_in_the_baseline() -> None:
+    """Where every channel is constant, any movement is novel, and nothing else is."""
+    monitor = NoveltyMonitor(NAMES, baseline=100)
+    still = np.full((300, 12), 2.0)
+    table = monitor.push_many(still)
+    assert monitor.constant == tuple(NAMES)
+    assert not table["novel"].to_numpy().any()
+    still[0, 3] = 2.0000001
+    assert monitor.push(still[0]).novel
+
+
+def test_noise_too_large_to_square_is_refused_by_name() -> None:
+    """A baseline that double precision cannot square names its channel and changes nothing."""
+    feed = plant(21, BASELINE)
+    feed[:, 7] *= 1e200
+    monitor = NoveltyMonitor(NAMES, baseline=BASELINE)
+    with pytest.raises(SampleError, match="channel 'c7': its noise"):
+        monitor.push_many(feed)
+    assert monitor.count == 0
+    assert not monitor.baseline_done
 
 
 @pytest.mark.parametrize(

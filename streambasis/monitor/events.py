@@ -112,6 +112,11 @@ class OpenEvent:
         self.cosine: float | None = None
         self.label: str | None = None
 
+    @property
+    def nbytes(self) -> int:
+        """Bytes of the arrays."""
+        return self.rows.nbytes + self.directions.nbytes
+
     def collect(self, residuals: NDArray[np.float64], ratio: float, time: int) -> None:
         """Take residuals of samples that show the event.
 
@@ -210,6 +215,12 @@ class History:
     def channels(self) -> int:
         """Channels of the directions."""
         return self._directions.shape[1]
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes of the directions."""
+        kept = sum(event.directions.nbytes for event in self.events.values())
+        return self._directions.nbytes + kept
 
     def put(self, event: Event) -> None:
         """Keep a closed event."""

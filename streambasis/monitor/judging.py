@@ -20,6 +20,9 @@ from streambasis.state import State, owned
 MOST_OPEN = 8
 """Most events open at the same time."""
 
+NEARLY_WHOLE = 0.75
+"""A sample with gaps refines the limit, in proportion, if its own limit is this part of it."""
+
 BUFFERED = ("z", "spe", "number", "time", "loose", "fold", "pool")
 COUNTED = ("ring", "counters", "last", "quiet", "taken")
 """The arrays that hold a row of the buffer each, and those of the walk."""
@@ -64,6 +67,13 @@ class Judge:
         self._spe = np.zeros(rows)
         self._number, self._time = np.full(rows, -1), np.full(rows, NO_TIME)
         self._loose, self._fold, self._pool = (np.zeros(rows, np.bool_) for _ in range(3))
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes of what is held."""
+        own: int = sum(getattr(self, f"_{name}").nbytes for name in (*BUFFERED, *COUNTED))
+        events = self.history.nbytes + sum(event.nbytes for event in self.open)
+        return own + self.model.nbytes + events
 
     @property
     def _forming(self) -> bool:
@@ -171,8 +181,11 @@ class Judge:
             whole = self.model.free
             left = whole - sum(len(directions) for directions in self._standing)
             self._spe[rows] *= whole / max(left, 1)
-        if scored.special:
-            self._pool[[rows.start + i for i in scored.special if i < size]] = False
+        for i in scored.special:
+            if i < size and judged[i]:
+                part = float(scored.limit[i]) / self.model.limit.value
+                self._spe[rows.start + i] /= part
+                self._pool[rows.start + i] &= part >= NEARLY_WHOLE
         early = self._pool[rows] & beyond
         if early.any():
             self.precursors.hold(self._number[rows][early], self._spe[rows][early])

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.basis import StreamBasis
-from streambasis.errors import SnapshotError
+from streambasis.errors import SampleError, SnapshotError
 from streambasis.kernels.monitor import standardize, take_off
 from streambasis.monitor.contributions import shares
 from streambasis.monitor.learning import Learnt
@@ -28,12 +28,17 @@ its directions are known no better than that when it suddenly grows."""
 FOLLOW = 0.1
 """Relative change in the number of samples behind the basis at which the T² limit follows."""
 
-MOST_PATTERNS = 16
-"""Most patterns of missing channels whose directions are kept ready."""
+LEAST_PATTERNS = 16
+PATTERN_VALUES = 2**20
+"""Patterns of missing channels whose directions are kept ready: as many as have so many numbers
+between them, and so many at least."""
 
 REACH = 1e8
 """A value further than this many noise standard deviations is scored as if it stood there: no
 answer depends on more, and no sum of squares can overflow."""
+
+LEAST_SCALE = 1e-150
+"""Noise is squared, so it has to lie between this and its inverse."""
 
 MOVED = 1.5
 """SPE over its limit that any movement of a constant channel alone makes, and a frozen channel at
@@ -103,10 +108,21 @@ class Model:
         What to go by.
     learnt : Learnt
         What the baseline taught.
+
+    Raises
+    ------
+    SampleError
+        If the noise of a channel cannot be squared.
     """
 
     def __init__(self, names: tuple[str, ...], settings: Settings, learnt: Learnt) -> None:
         self.scaling = learnt.scaling
+        for name, scale in zip(names, self.scaling.scale, strict=True):
+            if not LEAST_SCALE < scale < 1.0 / LEAST_SCALE:
+                raise SampleError(
+                    f"channel {name!r}: its noise in the baseline is {scale:.3g}, whose square is "
+                    "beyond double precision; give the channel in another unit"
+                )
         self._set_up(names, settings)
         self.basis.take_many(learnt.z * self.scaling.scale + self.scaling.centre)
         self.basis.flush()
@@ -139,6 +155,14 @@ class Model:
         self._reach, self._freeze = np.full(n, REACH), np.zeros(n)
         # workspace of a fold: a fresh array of this size costs more in page faults than its use
         self._rows = np.zeros((settings.block, n))
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes of what is held."""
+        arrays = [self._rows, self._held, self._runs, self.behaviour, self.first_vectors]
+        arrays += [self.vectors, self.mean, self.projection.directions]
+        own: int = sum(array.nbytes for array in arrays)
+        return own + self.basis.nbytes + self.known.nbytes
 
     @property
     def rank(self) -> int:
@@ -176,7 +200,8 @@ class Model:
         """
         squares = self.vectors**2
         own = np.maximum(1.0 - squares.sum(axis=0), 1e-6)
-        floor = MOVED * self.limit.value
+        # where nothing moved in the baseline the limit is zero
+        floor = MOVED * max(self.limit.value, 1.0)
         self._freeze = self.mean + np.sqrt(floor / own) + 3.0 * np.sqrt(self.energies @ squares)
         self._reach[self.scaling.constant] = math.sqrt(floor)
 
@@ -242,7 +267,8 @@ class Model:
         """
         key = observed.tobytes()
         if key not in self._patterns:
-            if len(self._patterns) == MOST_PATTERNS:
+            size = self.projection.directions.size
+            if len(self._patterns) >= max(LEAST_PATTERNS, PATTERN_VALUES // max(size, 1)):
                 self._patterns.clear()
             projection = Projection(*self._directions, observed)
             moving = ~self.scaling.constant
