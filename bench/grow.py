@@ -53,8 +53,8 @@ def single(repetitions: int, seconds: float) -> Table:
         ["channels", "rank", "push us", "NumPy us", "qr_insert us", "NumPy : push",
          "qr_insert : push", "to reach"],
         notes=["NumPy: two projection passes and the norm. SciPy: qr_insert of one more column, "
-               "beside the span, where it is refused. Medians of interleaved repetitions, one BLAS thread; the numbers "
-               "count as ratios."],
+               "taken beside the span, within which it is refused.",
+               "Medians of interleaved repetitions, one BLAS thread; only the ratios count."],
     )  # fmt: skip
     for count, rank in SIZES:
         basis, sources = filled(count, rank)

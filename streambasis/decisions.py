@@ -135,5 +135,5 @@ class Scores(_Columns):
 
 def reason_names(codes: NDArray[Any]) -> NDArray[np.str_]:
     """Turn an array of reason codes into an array of their names."""
-    names: NDArray[np.str_] = _NAMES[codes]
+    names: NDArray[np.str_] = _NAMES.take(codes)
     return names

@@ -5,6 +5,7 @@ Promise: a C-contiguous array of the right dtype is used as it is, without a cop
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 from typing import Any
 
@@ -178,9 +179,8 @@ def _numbers(values: Any, dtype: np.dtype[Any], what: str) -> NDArray[Any]:
 def _refuse_non_finite(array: NDArray[Any], channels: Channels, first: int, missing: bool) -> None:
     # a finite sum of squares has finite terms only, and costs a third of looking at each
     flat = array.reshape(-1)
-    with np.errstate(all="ignore"):
-        if np.isfinite(np.vdot(flat, flat)):
-            return
+    if math.isfinite(np.vdot(flat, flat).real):
+        return
     fine = ~np.isinf(array) if missing else np.isfinite(array)
     if not fine.all():
         row, column = (int(i) for i in np.argwhere(~fine)[0])

@@ -16,6 +16,7 @@ from streambasis.kernels.growth import (
     DEPENDENT,
     FULL,
     INDEPENDENT,
+    INEXACT,
     NEEDS_ROOM,
     POLICY,
     RANK,
@@ -94,6 +95,54 @@ def measure_block(samples, rests, coefficients, measures):
         measures[TAKEN, i] = absolute_sum(coefficients[i])
 
 
+@kernel(reassociate=True)
+def distance(sample, inside):
+    """Return the square sums of ``sample`` and of ``sample - inside``, real numbers."""
+    square = 0.0
+    left = 0.0
+    for i in range(sample.shape[0]):
+        whole = sample[i]
+        rest = whole - inside[i]
+        square += whole * whole
+        left += rest * rest
+    return square, left
+
+
+@kernel()
+def measure_interpolated(samples, inside, measures):
+    """Measure samples and their distance from interpolated ones, in double precision."""
+    kind = samples.real.dtype
+    for i in range(samples.shape[0]):
+        square, left = distance(samples[i].view(kind), inside[i].view(kind))
+        measures[SQUARE, i] = square
+        measures[LEFT, i] = left
+
+
+@kernel()
+def pick_columns(rows, picked):
+    """Pick as many columns of ``rows`` as there are rows, such that their square is well-behaved.
+
+    Gaussian elimination that pivots over columns; ``rows`` is overwritten. ``picked`` is filled
+    with the columns in the order in which they were picked.
+    """
+    count, width = rows.shape
+    for j in range(count):
+        row = rows[j]
+        largest = -1.0
+        for i in range(width):
+            size = abs(row[i])
+            if size > largest:
+                largest = size
+                picked[j] = i
+        pivot = row[picked[j]]
+        if pivot == 0:
+            return
+        for other in range(j + 1, count):
+            factor = rows[other, picked[j]] / pivot
+            for i in range(width):
+                rows[other, i] -= factor * row[i]
+
+
 @kernel()
 def correct_block(directions, last, rests, start, measures, work):
     """Take one more direction, in row ``last``, out of the rests from row ``start`` on."""
@@ -106,7 +155,18 @@ def correct_block(directions, last, rests, start, measures, work):
 
 @kernel()
 def decide_block(
-    directions, factor, work, integers, reals, samples, rests, measures, start, floats, whole
+    directions,
+    factor,
+    work,
+    integers,
+    reals,
+    samples,
+    rests,
+    measures,
+    exactness,
+    start,
+    floats,
+    whole,
 ):
     """Decide the samples of a block from row ``start`` on, in order.
 
@@ -116,6 +176,10 @@ def decide_block(
     rests of the following samples are corrected by the new direction. Without measures (no rows of
     ``rests``) every sample goes that way.
 
+    With an ``exactness`` above 0 the rests are distances from interpolated samples, which are
+    bounds of the residuals; they decide where they are below that share of the norm, and need no
+    correction, since a span that grows comes no farther from a sample.
+
     Returns the row to go on from: the number of samples, or less where a growth needs room.
     """
     epsilon = epsilon_of(samples)
@@ -123,6 +187,7 @@ def decide_block(
     largest = 2.0**800 if samples.real.itemsize == 8 else 2.0**120
     channels = directions.shape[1]
     measured = rests.shape[0] > 0 and integers[POLICY] == CRITERION
+    doubted = 0
     for i in range(start, samples.shape[0]):
         rank = integers[RANK]
         if measured and 1.0 / largest < measures[SQUARE, i] < largest:
@@ -131,8 +196,13 @@ def decide_block(
             doubt = epsilon * measures[TAKEN, i]
             rtol = max(reals[RTOL], rounding_floor(rank) * epsilon)
             tolerance = max(rtol * length, reals[ATOL])
-            dependent = left + doubt <= tolerance
-            if dependent or (rank == integers[CAPACITY] and left - doubt > tolerance):
+            if exactness > 0.0:
+                dependent = left <= exactness * length
+                full = False
+            else:
+                dependent = left + doubt <= tolerance
+                full = rank == integers[CAPACITY] and left - doubt > tolerance
+            if dependent or full:
                 integers[COUNT] += 1
                 floats[NORM, i], floats[RESIDUAL, i] = length, left
                 floats[TOLERANCE, i] = tolerance
@@ -140,15 +210,21 @@ def decide_block(
                 if dependent:
                     whole[REASON, i] = DEPENDENT
                     reals[COVERAGE] = max(reals[COVERAGE], left / tolerance)
+                    reals[INEXACT] = max(reals[INEXACT], left / length)
                 else:
                     whole[REASON, i] = FULL
                     integers[UNCOVERED] += 1
+                    reals[INEXACT] = 1.0
                 continue
+        doubted += 1
         record = push_growing(directions, factor, work, integers, reals, samples[i])
         if record[5] == NEEDS_ROOM:
             return i
         floats[NORM, i], floats[RESIDUAL, i], floats[TOLERANCE, i] = record[1:4]
         whole[REASON, i], whole[RANK_AFTER, i], whole[PASSES, i] = record[5:8]
-        if measured and record[5] == INDEPENDENT:
+        if measured and exactness == 0.0 and record[5] == INDEPENDENT:
             correct_block(directions, rank, rests, i + 1, measures, work[channels:])
+    if exactness > 0.0 and 4 * doubted > samples.shape[0]:
+        # interpolation decides too few to be worth it
+        reals[INEXACT] = 1.0
     return samples.shape[0]

@@ -21,8 +21,8 @@ __all__ = ["ALWAYS", "CRITERION", "NEVER", "mgs_pass", "norm", "orthogonalize", 
 COUNT, RANK, CAPACITY, POLICY, UNCOVERED, RENEWALS = range(6)
 HEADER = 6
 # entries of the real header
-RTOL, ATOL, COVERAGE = range(3)
-REALS = 3
+RTOL, ATOL, COVERAGE, INEXACT = range(4)
+REALS = 4
 # reasons, in the order of streambasis.decisions.REASONS, and what a caller must see to first
 INDEPENDENT, DEPENDENT, FULL, ZERO = range(4)
 NOT_FINITE, NEEDS_ROOM = -1, -2
@@ -33,8 +33,9 @@ def push_growing(directions, factor, work, integers, reals, sample):
     """Push one sample to a basis without a window.
 
     ``work`` holds the residual, then the coefficients; ``integers`` the header, then the pivot
-    samples, then their exponents. Every second sample walks the directions backwards, and so finds
-    in cache what the one before it left there.
+    samples, then their exponents; ``reals`` the tolerances, the largest residual of a rejected
+    sample over its tolerance, and the largest over its norm since the last growth. Every second
+    sample walks the directions backwards, and so finds in cache what the one before it left there.
 
     Returns ``(sample number, norm, residual, tolerance, grew, reason, rank, passes, 0, 0)``; a
     negative reason says that nothing was changed: NOT_FINITE or NEEDS_ROOM.
@@ -59,13 +60,16 @@ def push_growing(directions, factor, work, integers, reals, sample):
     elif left <= tolerance:
         reason = DEPENDENT
         reals[COVERAGE] = max(reals[COVERAGE], left / tolerance)
+        reals[INEXACT] = max(reals[INEXACT], left / length)
     elif rank >= integers[CAPACITY]:
         reason = FULL
+        reals[INEXACT] = 1.0
         integers[UNCOVERED] += 1
     elif rank >= rows:
         return number, 0.0, 0.0, 0.0, False, NEEDS_ROOM, rank, 0, 0, 0
     else:
         reason = INDEPENDENT
+        reals[INEXACT] = 0.0
         grew = True
         for i in range(channels):
             directions[rank, i] = residual[i] / left
