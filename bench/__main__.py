@@ -18,13 +18,17 @@ for name in ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"):
 from bench import harness  # noqa: E402 - numpy reads those variables when it loads
 
 QUESTIONS = ("grow", "window", "principal", "snapshot", "detect", "feeds")
+ON_REQUEST = ("window_soak",)
+"""Long ones, that run only when they are named."""
 
 
 def main(arguments: list[str] | None = None) -> int:
     """Run the questions asked for, all of them when none is named."""
     present = [q for q in QUESTIONS if (Path(__file__).parent / f"{q}.py").exists()]
     parser = argparse.ArgumentParser(prog="python -m bench", description=__doc__)
-    parser.add_argument("question", nargs="*", choices=[*present, []], help=", ".join(present))
+    choices = [*present, *ON_REQUEST, []]
+    named = ", ".join([*present, *ON_REQUEST])
+    parser.add_argument("question", nargs="*", choices=choices, help=named)
     parser.add_argument("--quick", action="store_true", help="smaller sizes, rougher figures")
     parser.add_argument("--out", type=Path, default=Path("bench-results"), metavar="FOLDER")
     options = parser.parse_args(arguments)
