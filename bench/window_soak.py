@@ -118,7 +118,7 @@ def reproduction(basis: StreamBasis, rows: np.ndarray) -> float:
     scaled = rows.astype(wide) * powers[:, None]
     made = arrays["coordinates"][order].astype(wide) @ arrays["vectors"].astype(wide)
     outside = np.linalg.norm(scaled - made, axis=1)
-    beyond = np.sqrt(np.maximum(outside**2 - sizes[order, kernels.LOST] ** 2, 0.0))
+    beyond = np.maximum(outside - sizes[order, kernels.LOST], 0.0)
     lengths = np.maximum(sizes[order, kernels.LENGTH], 0.5)
     unit = max(rows.shape[1], 16) * unit_roundoff(rows.dtype)
     return float((beyond / lengths).max(initial=0.0) / unit)

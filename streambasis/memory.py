@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+import mmap
 from typing import Any
 
 import numpy as np
@@ -25,3 +27,27 @@ def aligned_zeros(shape: int | tuple[int, ...], dtype: DTypeLike) -> NDArray[Any
     raw = np.zeros(size + CACHE_LINE, np.uint8)
     start = -raw.ctypes.data % CACHE_LINE
     return raw[start : start + size].view(kind).reshape(shape)
+
+
+LARGE = 1 << 20
+"""Bytes. The allocator keeps what is freed below some limit, which it raises as larger arrays are
+freed; an array that is enlarged by doubling leaves holes of its own size behind."""
+
+
+def mapped_zeros(shape: tuple[int, ...], dtype: DTypeLike) -> NDArray[Any]:
+    """Return zeros like :func:`aligned_zeros`, in pages of their own where they are large.
+
+    When the array goes, its pages go back to the system at once.
+
+    Parameters
+    ----------
+    shape : tuple of int
+    dtype : dtype
+    """
+    kind = np.dtype(dtype)
+    size = math.prod(shape) * kind.itemsize
+    if size < LARGE:
+        return aligned_zeros(shape, kind)
+    # private: a forked process gets a copy, as of any other memory
+    pages = mmap.mmap(-1, size, flags=mmap.MAP_PRIVATE | mmap.MAP_ANONYMOUS)
+    return np.frombuffer(pages, kind).reshape(shape)

@@ -13,7 +13,7 @@ from streambasis.errors import SampleError, SnapshotError, UnknownSampleError
 from streambasis.kernels import growth
 from streambasis.kernels import window as kernels
 from streambasis.kernels._jit import entry
-from streambasis.memory import aligned_zeros
+from streambasis.memory import aligned_zeros, mapped_zeros
 from streambasis.projecting import shift_entries
 from streambasis.state import State, owned
 from streambasis.times import EARLIEST, many_nanoseconds, nanoseconds, shown
@@ -568,7 +568,7 @@ def _linked(header: NDArray[np.int64], members: NDArray[np.int64]) -> bool:
 
 
 def _enlarged(array: NDArray[Any], shape: tuple[int, ...]) -> NDArray[Any]:
-    out = aligned_zeros(shape, array.dtype)
+    out = mapped_zeros(shape, array.dtype)
     out[tuple(slice(extent) for extent in array.shape)] = array
     return out
 

@@ -147,5 +147,5 @@ def reproduction(basis: StreamBasis, entered: NDArray) -> float:
     made = held["coordinates"].astype(wide) @ held["vectors"].astype(wide)
     lengths = np.where(held["lengths"] > 0, held["lengths"], 1.0)
     error = np.linalg.norm(scaled - made, axis=1)
-    beyond = np.sqrt(np.maximum(error**2 - held["lost"] ** 2, 0.0))
+    beyond = np.maximum(error - held["lost"], 0.0)
     return float((beyond / lengths).max(initial=0.0) / (max(entered.shape[1], 16) * unit))

@@ -658,7 +658,7 @@ def is_worn(a):
     An exchange or a drop rounds every entry of V at most once, by half an epsilon of it: an entry
     of V Vᴴ - I takes a random step of about 0.4·epsilon/√n. After m steps a column of k entries
     sums up to 0.3·k·√(m/n) epsilons, here kept to half of n (of 16 at least), a third of what the
-    contract allows; measured in tests/test_window_soak.py. The second bound is for Q.
+    contract allows; measured in bench/window_soak.py. The second bound is for Q.
     """
     n = a.residual.shape[0]
     k = max(a.header[RANK], 1)
