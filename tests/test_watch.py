@@ -163,6 +163,20 @@ def test_without_adoption_the_event_stays_open_to_the_end(tmp_path: Path) -> Non
     assert summary.adopted == 0
 
 
+def test_an_event_inside_another_is_told_when_it_closes(tmp_path: Path) -> None:
+    """A fault during a change of level opens and closes while the change goes on."""
+    path = shifted_feed(tmp_path, 6000, 3000)
+    table = pa.ipc.open_file(path).read_all()
+    values = table["c5"].to_numpy().copy()
+    values[4500:4600] += 5.0
+    with pa.ipc.new_file(path, table.schema) as file:
+        file.write_table(table.set_column(5, "c5", pa.array(values)))
+    listener, summary, monitor = run_over(path, 0)
+    assert listener.heard == [("opened", 0), ("opened", 1), ("closed", 1), ("closed", 0)]
+    assert monitor.events[1]["channels"] == ["c5"]
+    assert summary.events == 2
+
+
 def test_a_wish_to_stop_is_heard_after_the_batch(tmp_path: Path) -> None:
     """A run asked to stop ends after the batch in hand, with its results whole."""
     feed = open_feed(shifted_feed(tmp_path, 6000, 4000))
@@ -171,6 +185,19 @@ def test_a_wish_to_stop_is_heard_after_the_batch(tmp_path: Path) -> None:
     asked.set()
     summary = Run(feed, monitor, Listener(), adopt_after=0)(asked)
     assert summary.samples == BATCH_ROWS
+
+
+def test_a_run_stopped_within_the_baseline_ends_well(tmp_path: Path) -> None:
+    """Stopped before anything could be judged, a run still keeps and tells what there is."""
+    feed = open_feed(shifted_feed(tmp_path, 6000, 4000))
+    monitor = NoveltyMonitor(feed.columns.channels, baseline=2000)
+    asked = threading.Event()
+    asked.set()
+    home = Home(tmp_path / "home")
+    summary = Run(feed, monitor, Listener(), home=home, adopt_after=0)(asked)
+    home.close()
+    assert (summary.samples, summary.rank, summary.events) == (BATCH_ROWS, 0, 0)
+    assert len(read_decisions(tmp_path / "home" / "decisions")) == BATCH_ROWS
 
 
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])

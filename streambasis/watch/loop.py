@@ -103,7 +103,8 @@ class Run:
         self._reporter = reporter
         self._home = home
         self._adopt_after = adopt_after
-        self._opened = self._closed = self._repeats = self._adopted = 0
+        self._opened = self._repeats = self._adopted = 0
+        self._open: set[int] = set()
         columns = feed.columns
         clock = "seconds" if columns.unit else "timestamps"
         self._progress = Progress(
@@ -150,7 +151,8 @@ class Run:
         monitor.finish()
         self._tell()
         if self._home is not None:
-            self._home.keep_progress(self._progress.table(monitor))
+            if monitor.baseline_done:
+                self._home.keep_progress(self._progress.table(monitor))
             self._home.keep_snapshot(monitor)
         return Summary(
             samples,
@@ -159,11 +161,11 @@ class Run:
             monitor.rank,
             monitor.noise,
             monitor.drift,
-            self._closed,
+            self._opened,
             self._repeats,
             self._adopted,
             time.perf_counter() - start,
-            monitor.basis.audit().orthogonality,
+            monitor.basis.audit().orthogonality if monitor.baseline_done else 0.0,
         )
 
     def _take(self, batch: Batch) -> None:
@@ -207,11 +209,14 @@ class Run:
     def _tell(self) -> None:
         """Report the events that have opened or closed since the last call."""
         for event in self._monitor.events:
-            if event["event"] >= self._opened:
-                self._opened = event["event"] + 1
+            number = event["event"]
+            if number >= self._opened:
+                self._opened = number + 1
+                self._open.add(number)
                 self._reporter.opened(event)
-            if event["event"] >= self._closed and not event.open:
-                self._closed = event["event"] + 1
+            # of events that overlap, the later one may close first
+            if number in self._open and not event.open:
+                self._open.remove(number)
                 self._repeats += event["repeats"] is not None
                 if self._home is not None:
                     self._home.take_event(event)
