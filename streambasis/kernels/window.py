@@ -655,10 +655,11 @@ def enter(a, coefficients, length, tolerance, lost, exponent):
 def is_worn(a):
     """Say whether the directions must be renewed before anything else is done to them.
 
-    An exchange or a drop rounds every entry of V at most once, by half an epsilon of it: an entry
-    of V Vᴴ - I takes a random step of about 0.4·epsilon/√n. After m steps a column of k entries
-    sums up to 0.3·k·√(m/n) epsilons, here kept to half of n (of 16 at least), a third of what the
-    contract allows; measured in bench/window_soak.py. The second bound is for Q.
+    A replacement or a drop rounds every entry of V once, by at most half an epsilon of it: an
+    entry of V Vᴴ - I takes a random step of about 0.4·epsilon/√n. After m of them a column of k
+    entries sums up to about 0.3·k·√(m/n) epsilons; m is limited so that this stays at 0.6·n (of
+    16 at least), two fifths of what the contract allows (measured by bench/window_soak.py). The
+    second limit, m at most WORN·n, is for Q.
     """
     n = a.residual.shape[0]
     k = max(a.header[RANK], 1)
