@@ -244,6 +244,36 @@ def test_an_empty_file_is_waited_for(tmp_path: Path) -> None:
     assert GRACE_LOOKS * PAUSE < 1
 
 
+@pytest.mark.parametrize("wait", [0.01, 0.5, None])
+def test_a_rotated_file_is_gone_on_with_however_long_silence_is(
+    path: Path, wait: float | None
+) -> None:
+    """Looking at the names of the file that a run left off in does not lead out of it."""
+    with following(path) as follower:
+        follower.read(2)
+    append(path, rows(3))
+    path.rename(path.with_name("feed.csv.1"))
+    path.write_text(HEADER + rows(*range(4, BATCH_ROWS + 4)))
+    with following(path, follower.position, wait=wait, strict=True) as again:
+        assert again.read(BATCH_ROWS - 2)[:3] == [3, 4, 5]
+
+
+def test_a_file_replaced_before_its_first_row_is_no_error(tmp_path: Path) -> None:
+    """Names alone, then another file with names and a row."""
+    path = tmp_path / "feed.csv"
+    path.write_text(HEADER)
+
+    def replace() -> None:
+        path.rename(tmp_path / "feed.csv.1")
+        path.write_text(HEADER + rows(1))
+
+    timer = threading.Timer(5 * PAUSE, replace)
+    timer.start()
+    with following(path, strict=True) as follower:
+        assert follower.read(1) == [1]
+    timer.join()
+
+
 def test_binary_files_and_folders_cannot_be_followed(tmp_path: Path) -> None:
     """Each is refused with the reason."""
     (tmp_path / "feed").write_bytes(b"PAR1 and so on")

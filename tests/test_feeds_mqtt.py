@@ -159,7 +159,7 @@ def test_what_was_committed_but_not_acknowledged_is_known_again(
         assert batch.first == 50
         assert batch.values[:, 0].tolist() == list(range(50, 60))
         assert feed.counts["duplicates"] == 50
-        assert feed.counts["sessions lost"] == 0
+        assert feed.counts["sessions_lost"] == 0
         feed.commit(batch.position)
     publish(shared, topic, objects(60, 61))
     with opened(url, position, broker=settings(topic)) as feed:
@@ -281,7 +281,7 @@ def test_a_restart_of_the_broker_loses_and_repeats_nothing(tmp_path: Path, held:
         assert read(feed, 100) == list(range(300, 400))
         until(lambda: feed.counts["connections"] == 2)
         assert feed.trouble == ""
-        assert feed.counts["sessions lost"] == 0
+        assert feed.counts["sessions_lost"] == 0
         publisher.publish(objects(400, 500))
         found = read(feed, 100)
         assert found == list(range(400, 500))

@@ -17,7 +17,7 @@ import pyarrow.parquet as pq
 import pytest
 
 from streambasis.errors import FeedError
-from streambasis.feeds import BATCH_ROWS, Batch, Position, open_feed
+from streambasis.feeds import BATCH_ROWS, Batch, FeedOptions, Position, open_feed
 
 ROWS = 5000
 
@@ -258,10 +258,12 @@ def test_a_pipe_that_is_opened_again_goes_on_counting(tmp_path: Path) -> None:
     assert again[1] == np.array([4.0]).tobytes().hex()
 
 
-@pytest.mark.parametrize("kind", ["csv", "jsonl", "arrows"])
-def test_a_pipe_gives_what_has_come_without_waiting_for_more(kind: str) -> None:
+@pytest.mark.parametrize(
+    ("kind", "rows"), [("csv", 30), ("jsonl", 30), ("jsonl", 1), ("arrows", 30)]
+)
+def test_a_pipe_gives_what_has_come_without_waiting_for_more(kind: str, rows: int) -> None:
     """A producer that pauses gets its samples through before it goes on."""
-    table = table_of(30)
+    table = table_of(rows)
     data = {"csv": csv_bytes, "jsonl": json_bytes, "arrows": stream_bytes}[kind](table)
     program = PROGRAM.replace("wait=None", "wait=0.01").replace("]))", "]), flush=True)")
     with subprocess.Popen(
@@ -276,8 +278,8 @@ def test_a_pipe_gives_what_has_come_without_waiting_for_more(kind: str) -> None:
         process.stdin.close()
         rest = [json.loads(line) for line in process.stdout]
     assert batch[0] == 0
-    assert len(batch[2]) == (30 if kind != "arrows" else len(batch[2])) > 0
-    assert len(batch[2]) + sum(len(b[2]) for b in rest[:-1]) == 30
+    assert len(batch[2]) == rows
+    assert len(rest) == 1
 
 
 def test_a_format_that_needs_a_file_is_refused_on_a_pipe(tmp_path: Path) -> None:
@@ -285,6 +287,17 @@ def test_a_format_that_needs_a_file_is_refused_on_a_pipe(tmp_path: Path) -> None
     with pytest.raises(subprocess.CalledProcessError) as caught:
         from_standard_input(make(tmp_path, "parquet").read_bytes())
     assert b"give the file by name" in caught.value.stderr
+
+
+def test_what_is_no_file_and_options_that_make_no_sense_are_refused(tmp_path: Path) -> None:
+    """A named pipe, an unknown format, a wait of no time: each with the way out."""
+    os.mkfifo(tmp_path / "pipe")
+    with pytest.raises(FeedError, match=r"not a file; send it to standard input"):
+        open_feed(tmp_path / "pipe")
+    with pytest.raises(FeedError, match="format 'xml' is none of csv, json"):
+        FeedOptions(format="xml")
+    with pytest.raises(FeedError, match="wait 0: a number of seconds above 0"):
+        FeedOptions(wait=0)
 
 
 def test_truncated_gzip_is_named(tmp_path: Path) -> None:

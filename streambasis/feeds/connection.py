@@ -244,7 +244,7 @@ class Connection:
                     # longer than the keep-alive, and the broker drops the connection; it sends
                     # again whatever was not acknowledged
                     self._change.wait(PATIENCE)
-            self._queue.append(Message(message.topic, payload, receipt))
+            self._queue.append(Message(_topic_of(message), payload, receipt))
             self._bytes += len(payload)
             self._change.notify_all()
 
@@ -342,3 +342,11 @@ class Connection:
             self._change.notify_all()
         self._client.disconnect()
         self._client.loop_stop()
+
+
+def _topic_of(message: paho.MQTTMessage) -> str:
+    try:
+        return message.topic
+    except UnicodeDecodeError:
+        # against the rules of the protocol, and no reason to end the feed
+        return "(a topic that is not UTF-8)"

@@ -18,7 +18,6 @@ from streambasis.feeds.reading import Feed, FeedOptions, PieceFeed, Position
 from streambasis.feeds.sources import PATIENCE, FileSource, GzipSource, PipeSource, Source
 from streambasis.feeds.text import CsvRows
 
-FORMATS = ("csv", "json")
 STANDARD_INPUT = "-"
 
 _GZIP = b"\x1f\x8b"
@@ -85,8 +84,6 @@ def open_feed(
     [[[1.0, 2.0], [3.0, nan]]]
     """
     options = options or FeedOptions()
-    if options.format not in (None, *FORMATS):
-        raise FeedError(f"format {options.format!r} is none of {', '.join(FORMATS)}")
     opening = _Opening(channels, time, options, position)
     text = str(source)
     if text.startswith(("mqtt://", "mqtts://")):
@@ -149,6 +146,8 @@ class _Opening:
 
     def _beginning(self, path: Path, name: str) -> bytes:
         try:
+            if not stat.S_ISREG(path.stat().st_mode):
+                raise FeedError(f"{name}: not a file; send it to standard input (-) instead")
             with path.open("rb") as handle:
                 beginning = handle.read(_BEGINNING)
         except FileNotFoundError:

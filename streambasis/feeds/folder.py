@@ -45,8 +45,12 @@ class FolderFeed(PieceFeed):
     ) -> None:
         super().__init__(str(path), options, position)
         self._opener = opener
+        try:
+            entries = list(path.iterdir())
+        except OSError as error:
+            raise FeedError(f"{path}: cannot be read ({error.strerror})") from None
         files = sorted(
-            (file for file in path.iterdir() if file.is_file() and not file.name.startswith(".")),
+            (file for file in entries if file.is_file() and not file.name.startswith(".")),
             key=lambda file: file.name,
         )
         if not files:

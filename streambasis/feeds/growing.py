@@ -49,6 +49,8 @@ class GrowingSource:
         self._path = path
         self._stop = stop
         self._looks = max(1, round(wait / PAUSE))
+        # silence is told before the file is left, so that nobody is carried over unawares
+        self._grace = max(GRACE_LOOKS, self._looks + 1)
         self._quiet = 0
         self.generation = 0
         self._file = Descriptor(path)
@@ -126,7 +128,7 @@ class GrowingSource:
         if (now.st_ino, now.st_dev) == (mine.st_ino, mine.st_dev):
             return False
         self._replaced += 1
-        if self._replaced < GRACE_LOOKS:
+        if self._replaced < self._grace:
             return False
         between = [
             (stat.st_mtime_ns, path)

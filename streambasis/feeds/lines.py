@@ -131,6 +131,12 @@ class LineReader:
         self._fresh = True
         self._before = b""
 
+    def _read(self) -> bytes | None:
+        try:
+            return self.source.read()
+        except OSError as error:
+            raise FeedError(f"{self.name}: cannot be read ({error.strerror})") from None
+
     def peek(self) -> bytes:
         """Return the first lines, whole, without taking them: about PEEK_BYTES where there are.
 
@@ -141,16 +147,21 @@ class LineReader:
         """
         ended = False
         while not ended and len(self._held) < PEEK_BYTES:
-            more = self.source.read()
+            more = self._read()
             if more is None:
-                # nothing more for now: a name and a row are enough to begin with
-                if self._held.count(b"\n") >= 2:
+                # nothing more for now: names and a row, or an object, are enough to begin with
+                enough = 1 if self._held.lstrip().startswith(b"{") else 2
+                if self._held.count(b"\n") >= enough:
                     break
                 continue
+            if self.source.generation != self._generation:
+                # replaced before it held more than names
+                self._held = b""
+                self._start_file()
             ended = not more
             self._held += more
         while not ended and b"\n" not in self._held and len(self._held) <= LONGEST_LINE:
-            more = self.source.read()
+            more = self._read()
             ended = more == b""
             self._held += more or b""
         if ended and not self.source.stopped:
@@ -185,7 +196,7 @@ class LineReader:
 
     def _read_exactly(self, count: int) -> bytes:
         self._held = b""
-        while len(self._held) < count and (more := self.source.read()):
+        while len(self._held) < count and (more := self._read()):
             self._held += more
         before, self._held = self._held[:count], self._held[count:]
         return before
@@ -195,7 +206,7 @@ class LineReader:
         ended = False
         while not ended:
             if not self._held or b"\n" not in self._held:
-                more = self.source.read()
+                more = self._read()
                 if more is None:
                     yield None
                     continue
@@ -262,7 +273,7 @@ class LineReader:
         beginning, length = self._held[:CHECKED_BYTES], len(self._held)
         self._held = b""
         while True:
-            more = self.source.read()
+            more = self._read()
             if more is None:
                 yield None
                 continue

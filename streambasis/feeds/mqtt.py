@@ -159,7 +159,7 @@ class MqttFeed(PieceFeed):
             "retained": connection.retained,
             "queued": connection.queued,
             "connections": connection.connections,
-            "sessions lost": connection.sessions_lost,
+            "sessions_lost": connection.sessions_lost,
         }
 
     @property
@@ -248,9 +248,11 @@ class MqttFeed(PieceFeed):
 
     def _malformed_row(self, message: Message, reason: str) -> Malformed:
         if self.options.strict:
-            raise FeedError(f"{self.name}, message {self._serial}: {reason}")
+            raise FeedError(f"{self.name}, message {self._serial}: {shortened(reason.encode())}")
         text = "" if message.payload.startswith(b"\xff") else shortened(message.payload)
-        return Malformed(message.topic, self._serial, reason, text)
+        # topic and reason may hold what somebody sent
+        topic, reason = shortened(message.topic.encode()), shortened(reason.encode())
+        return Malformed(topic, self._serial, reason, text)
 
     def close(self) -> None:
         """Disconnect; the broker keeps what was not acknowledged."""

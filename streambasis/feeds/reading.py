@@ -19,6 +19,9 @@ BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
 blocks, so that the same samples give bit-identical results from every file."""
 
+FORMATS = ("csv", "json")
+"""Formats of text; what is binary is told by its first bytes."""
+
 MOST_TEXT = 4096
 """Characters of a malformed row that are kept."""
 
@@ -128,6 +131,12 @@ class FeedOptions:
     wait: float | None = 0.01
     stop: threading.Event = field(default_factory=threading.Event)
     broker: Broker | None = None
+
+    def __post_init__(self) -> None:
+        if self.format not in (None, *FORMATS):
+            raise FeedError(f"format {self.format!r} is none of {', '.join(FORMATS)}")
+        if self.wait is not None and not self.wait > 0:
+            raise FeedError(f"wait {self.wait!r}: a number of seconds above 0, or None")
 
 
 class Feed(Protocol):

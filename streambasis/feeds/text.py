@@ -170,6 +170,9 @@ class CsvRows:
 
     def _table(self, data: bytes, rows: int) -> pa.Table | None:
         """Parse bytes that should hold so many rows; return None if they do not."""
+        if data.count(b"\r") != data.count(b"\r\n"):
+            # a carriage return inside a line would count as the end of a row
+            return None
         try:
             table = arrow_csv.read_csv(
                 pa.BufferReader(data),
@@ -232,9 +235,7 @@ class CsvRows:
         while waiting:
             part = waiting.pop()
             data = b"".join(lines.text(int(i)) for i in part)
-            # a carriage return inside a line would count as the end of a row
-            whole = data.count(b"\r") == data.count(b"\r\n")
-            table = self._table(data, len(part)) if whole else None
+            table = self._table(data, len(part))
             if table is not None:
                 self._take(table, part, rows)
             elif len(part) == 1:
