@@ -345,7 +345,7 @@ def test_tls_checks_who_the_broker_is(tmp_path: Path, held: ExitStack) -> None:
     key, certificate = tmp_path / "key.pem", tmp_path / "certificate.pem"
     subprocess.run(
         [
-            *("openssl", "req", "-x509", "-newkey", "rsa:2048", "-nodes", "-days", "2"),
+            *(program("openssl"), "req", "-x509", "-newkey", "rsa:2048", "-nodes", "-days", "2"),
             *("-subj", "/CN=test", "-addext", f"subjectAltName=IP:{LOOPBACK}"),
             *("-keyout", str(key), "-out", str(certificate)),
         ],
