@@ -43,14 +43,14 @@ def core_spectrum(
         gram = np.empty((held + width, held + width), factor.dtype)
         # the upper triangle is not read
         gram[:held, :held] = coordinates.conj().T @ coordinates
-        gram[np.arange(held), np.arange(held)] += before**2
+        gram.reshape(-1)[: held * len(gram) : len(gram) + 1] += before * before
         if width:
             gram[held:, :held] = factor.conj().T @ coordinates
             gram[held:, held:] = factor.conj().T @ factor
         energies, columns = np.linalg.eigh(gram, UPLO="L")
         if energies[-limit] > wide * energies[-1]:
             singular = np.sqrt(np.maximum(energies[::-1], 0.0))
-            return singular, np.ascontiguousarray(columns.conj().T[::-1])
+            return singular, np.ascontiguousarray(columns.T[::-1]).conj()
     core = np.zeros((held + len(coordinates), held + width), factor.dtype)
     core[np.arange(held), np.arange(held)] = before
     core[held:, :held] = coordinates

@@ -154,9 +154,9 @@ class Subspace:
         if not self.held:
             return count
         # a channel that has a part in the first direction needs no closer look
-        suspects = np.flatnonzero(np.abs(self.stack[0]) < SUSPECT)
-        if not len(suspects):
+        if kernels.least_magnitude(self.stack[0]) >= SUSPECT:
             return count
+        suspects = np.flatnonzero(np.abs(self.stack[0]) < SUSPECT)
         parts = self.singular[:, None] * np.abs(self.directions[:, suspects])
         levels = np.sqrt((parts * parts).sum(axis=0))
         rounding = ROUNDING_FLOOR * float(np.finfo(self.stack.dtype).eps)

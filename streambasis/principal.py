@@ -16,6 +16,7 @@ from streambasis.decisions import Score, Scores
 from streambasis.errors import SampleError, SettingError
 from streambasis.inner import Inner, inner_of
 from streambasis.intake import Intake
+from streambasis.kernels import principal as kernels
 from streambasis.principal_settings import Settings
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import State, lending, owned
@@ -238,7 +239,7 @@ class PrincipalBasis:
         """Take a batch without asking for its scores."""
         with self._lock:
             checked = self._checked(samples)
-            if np.isnan(checked).any():
+            if kernels.has_gap(checked):
                 self._take(checked, fold=True)
             else:
                 self._core.take_unscored(self._entered(checked))
@@ -258,20 +259,18 @@ class PrincipalBasis:
                 f"sample {self.count} or later: a value in the inner product is beyond "
                 f"{self.dtype}; nothing was taken"
             )
-        if self._core.core.centred:
-            with np.errstate(over="ignore"):
-                small = np.isfinite(4 * entered).all()
-            if not small:
-                raise SampleError(
-                    f"sample {self.count} or later: a value above a quarter of what {self.dtype} "
-                    "holds cannot be taken about a mean; nothing was taken"
-                )
+        quarter = float(np.finfo(self.dtype).max) / 4
+        if self._core.core.centred and kernels.largest_part(np.atleast_2d(entered)) > quarter:
+            raise SampleError(
+                f"sample {self.count} or later: a value above a quarter of what {self.dtype} "
+                "holds cannot be taken about a mean; nothing was taken"
+            )
         return entered
 
     def _take(self, samples: NDArray[Any], *, fold: bool) -> Scores:
         """Score checked samples, (m, n), and take them too where ``fold`` says so."""
-        gaps = np.isnan(samples)
-        if gaps.any():
+        if kernels.has_gap(samples):
+            gaps = np.isnan(samples)
             return self._core.take(self._entered(np.where(gaps, 0, samples)), gaps, fold=fold)
         return self._core.take(self._entered(samples), None, fold=fold)
 
