@@ -74,10 +74,9 @@ class Mosquitto(Held):
 
     def start(self) -> None:
         """Start it and wait until it listens."""
+        command = [program("mosquitto"), "-c", str(self._config)]
         self._log = (self._folder / "mosquitto.log").open("ab")
-        self._process = subprocess.Popen(
-            [program("mosquitto"), "-c", str(self._config)], stderr=self._log, stdout=self._log
-        )
+        self._process = subprocess.Popen(command, stderr=self._log, stdout=self._log)
         deadline = time.monotonic() + START_SECONDS
         while True:
             try:
