@@ -652,8 +652,8 @@ def _checked_window(window: Any) -> int:
         number = index(window)
     except TypeError:
         number = 0
-    if number < 1 or isinstance(window, bool):
-        raise SettingError(f"window={window!r}: a whole number of samples, at least 1")
+    if not 1 <= number < 2**62 or isinstance(window, bool):
+        raise SettingError(f"window={window!r}: a whole number of samples, from 1 to below 2**62")
     return number
 
 

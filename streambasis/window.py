@@ -248,14 +248,14 @@ class Window:
         """
         now = None if at is None else nanoseconds(at)
         self._check_timed(now is not None)
-        if now is None:
-            return
         integers = self._integers
+        if now is None:
+            # a sample that was refused may have left its time
+            integers[kernels.NOW : kernels.TIMED + 1] = 0, EARLIEST - 1, 0
+            return
         if integers[kernels.STAMPED] and now < integers[kernels.LAST]:
             raise _backwards(self.count, now, int(integers[kernels.LAST]), at)
-        integers[kernels.NOW] = now
-        integers[kernels.HORIZON] = self._horizon(now)
-        integers[kernels.TIMED] = 1
+        integers[kernels.NOW : kernels.TIMED + 1] = now, self._horizon(now), 1
         self.timed = True
 
     def _check_timed(self, timed: bool) -> None:
@@ -376,9 +376,9 @@ class Window:
         UnknownSampleError
             If no sample of this number is in the window.
         """
-        slot = kernels.find(number, self._members, self._integers) if number >= 0 else kernels.NONE
+        gone = 0 <= number < self.count
+        slot = kernels.find(number, self._members, self._integers) if gone else kernels.NONE
         if slot == kernels.NONE:
-            gone = 0 <= number < self.count
             raise UnknownSampleError(
                 f"sample {number} has already left the window"
                 if gone

@@ -159,6 +159,18 @@ def test_times_are_given_for_all_samples_or_for_none():
     assert frozen(stamped) == before
 
 
+def test_the_time_of_a_refused_sample_is_forgotten_with_it():
+    """The first sample that is taken decides whether the feed has times."""
+    basis = StreamBasis(2, window=3)
+    with pytest.raises(SampleError):
+        basis.push([np.nan, 1.0], at=5.0)
+    basis.push([1.0, 0.0])
+    basis.push([0.0, 1.0])
+    with pytest.raises(SampleError, match="at="):
+        basis.expire(before=100.0)
+    assert basis.members.tolist() == [0, 1]
+
+
 def test_a_refused_sample_leaves_the_window_as_it_was():
     """NaN, a wrong length and bad times change nothing, whatever would have left for the sample."""
     basis = StreamBasis(2, window=2, span=5.0)
@@ -185,7 +197,7 @@ def test_a_refused_sample_leaves_the_window_as_it_was():
 
 @pytest.mark.parametrize(
     "setting",
-    [{"window": w} for w in (0, -3, 2.5, True)] + [{"span": s} for s in (0, "an hour")],
+    [{"window": w} for w in (0, -3, 2.5, True, 2**62)] + [{"span": s} for s in (0, "an hour")],
 )
 def test_a_window_that_is_none_is_refused_by_name(setting):
     """The error names the setting and the value."""
@@ -229,7 +241,7 @@ def test_an_unknown_sample_is_told_from_one_that_has_left():
     basis.push_many(np.eye(4)[:3])
     basis.retract(2)
     before = frozen(basis)
-    for number, words in ((0, "left"), (2, "left"), (3, "never"), (-1, "never"), (10**12, "never")):
+    for number, words in ((0, "left"), (2, "left"), (3, "never"), (-1, "never"), (2**70, "never")):
         with pytest.raises(UnknownSampleError, match=f"sample {number} .*{words}"):
             basis.retract(number)
     with pytest.raises(TypeError):
