@@ -20,6 +20,11 @@ from streambasis.state import State, owned
 MOST_OPEN = 8
 """Most events open at the same time."""
 
+SURE = 1024
+SELDOM = 16
+"""After so many samples an event's directions are brought up to date only every so many times that
+samples are folded into it: they hardly move any more."""
+
 NEARLY_WHOLE = 0.75
 """A sample with gaps refines the limit, in proportion, if its own limit is this part of it."""
 
@@ -223,7 +228,11 @@ class Judge:
     def _settle(self, which: int) -> None:
         """Bring the directions of an open event up to date, and let it stand if they explain it."""
         forming = self._forming and which == len(self.open) - 1
-        explained = self._look(self.open[which])
+        event = self.open[which]
+        if not forming and event.count > SURE and event.count // COLLECT % SELDOM:
+            event.fold()
+            return
+        explained = self._look(event)
         if forming and explained:
             self._counters[3] = 0
         if explained or not forming:

@@ -14,7 +14,7 @@ from streambasis.kernels.monitor import standardize, take_off
 from streambasis.monitor.contributions import shares
 from streambasis.monitor.learning import Learnt
 from streambasis.monitor.limits import SpeLimit, t2_limit
-from streambasis.monitor.projection import Projection
+from streambasis.monitor.projection import UNSEEN, Projection
 from streambasis.monitor.quantiles import chi2_quantile
 from streambasis.monitor.scaling import Scaling
 from streambasis.principal import PrincipalBasis
@@ -149,6 +149,8 @@ class Model:
         self.known = StreamBasis(names, inner=weights)
         self.adopted = np.zeros(0, np.int64)
         self.behaviour = np.zeros((0, n))
+        # normal quantile that an amount of adopted behaviour has to pass, found when first asked
+        self._chance: float | None = None
         self.t2_limit, self._t2_count = math.inf, 0.0
         # values and lengths of the runs that channels are in
         self._held, self._runs = np.full(n, np.nan), np.zeros(n, np.int64)
@@ -214,6 +216,7 @@ class Model:
         events = np.vstack([np.zeros((0, len(self.names))), *standing])
         self._directions = known, self.vectors, events, self.energies, self.mean
         self._patterns: dict[bytes, tuple[Projection, float]] = {}
+        self._loading: NDArray[np.float64] | None = None
         self.projection = Projection(*self._directions)
 
     def standard(
@@ -332,6 +335,7 @@ class Model:
             self.known.push(direction * self.scaling.scale)
         self.behaviour = np.vstack([self.behaviour, directions])
         self.adopted = np.concatenate([self.adopted, np.full(len(directions), number)])
+        self._chance = None
 
     def restart(self) -> None:
         """Begin another feed: no channel has repeated a value in it."""
@@ -346,19 +350,27 @@ class Model:
         Least squares on the observed channels, together with the basis.
         """
         z = np.empty((1, len(sample)))
-        self.standard(sample[None], z, follow=False)
-        seen = ~np.isnan(sample)
-        rows = np.vstack([self.behaviour, self.vectors])[:, seen]
-        inverse = np.linalg.pinv(rows.T, rcond=1e-6)[: len(self.behaviour)]
-        return inverse @ (z[0] - self.mean)[seen], np.sqrt(np.sum(inverse**2, axis=1))
+        gaps = self.standard(sample[None], z, follow=False)
+        if gaps or self._loading is None:
+            seen = ~np.isnan(sample)
+            rows = np.vstack([self.behaviour, self.vectors]) * seen
+            inverse = np.linalg.pinv(rows.T, rcond=UNSEEN)[: len(self.behaviour)]
+            if not gaps:
+                self._loading = inverse
+        else:
+            inverse = self._loading
+        amounts = inverse @ np.nan_to_num(z[0] - self.mean)
+        return amounts, np.sqrt(np.sum(inverse**2, axis=1))
 
     def shown(self, sample: NDArray[np.float64]) -> tuple[int, ...]:
         """Return the adopted events whose behaviour shows in a sample, (n,)."""
         if not len(self.adopted):
             return ()
         amounts, errors = self.loadings(sample)
-        chance = self.settings.false_alarm / len(self.adopted)
-        floor = errors * math.sqrt(self.basis.noise * chi2_quantile(chance, 1.0))
+        if self._chance is None:
+            chance = self.settings.false_alarm / len(self.adopted)
+            self._chance = math.sqrt(chi2_quantile(chance, 1.0))
+        floor = errors * (self._chance * math.sqrt(self.basis.noise))
         return tuple(sorted(set(self.adopted[np.abs(amounts) > floor].tolist())))
 
     def shares(self, sample: NDArray[np.float64]) -> NDArray[np.float64]:
