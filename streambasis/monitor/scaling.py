@@ -136,8 +136,8 @@ def robust_start(
     """Return median, robust standard deviation, and which channels are constant, or nearly so.
 
     The robust standard deviation is that of the median absolute deviation; where half of the
-    samples share one value it is the ordinary one instead, and the channel counts as nearly
-    constant. A channel without any value counts as constant at zero.
+    samples share one value it is a fifth of the farthest deviation, and the channel counts as
+    nearly constant. A channel without any value counts as constant at zero.
     """
     empty = np.isnan(samples).all(axis=0)
     held = np.where(empty, 0.0, samples) if empty.any() else samples
