@@ -54,6 +54,7 @@ def make_home(
     baseline: int | None = None,
     names: list[str] | None = None,
     step: int | None = 10**9,
+    rank: int = 4,
     label: str | None = None,
     progress: bool = True,
     snapshot: bool = True,
@@ -66,7 +67,7 @@ def make_home(
     rng = np.random.default_rng(seed)
     names = names_of(channels) if names is None else names
     baseline = samples // 10 if baseline is None else baseline
-    free, rank = max(channels - 4, 2), 4
+    free = max(channels - rank, 2)
     spans = spans_of(samples, baseline, events, rng)
     peaks = 10 ** rng.uniform(0.15, 1.6, events)
     patterns = np.zeros((max(events, 1), channels))
@@ -81,7 +82,10 @@ def make_home(
     limit = free + 4.5 * np.sqrt(2 * free)
     for first in range(0, samples, SEGMENT):
         number = np.arange(first, min(first + SEGMENT, samples))
-        spe, t2 = rng.chisquare(free, len(number)), rng.chisquare(rank, len(number))
+        spe, t2 = (
+            rng.chisquare(free, len(number)),
+            rng.chisquare(max(rank, 1), len(number)) * (rank > 0),
+        )
         event = np.full(len(number), -1)
         for i, (start, end) in enumerate(spans):
             inside = (number >= start) & (number <= end)

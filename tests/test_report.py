@@ -223,6 +223,18 @@ def test_a_run_without_events_says_so(tmp_path: Path) -> None:
     assert page.words.endswith(f"Events {nothing}")
 
 
+def test_a_basis_without_directions_says_so(tmp_path: Path) -> None:
+    """Channels that share nothing have no T², no energies and no drift; one event no likeness."""
+    home = make_home(tmp_path / "home", 600, 5, 1, rank=0)
+    page, _, _ = report_on(home, tmp_path)
+    said = absent(page)
+    assert set(said) == {
+        "Hotelling's T² against its control limit", "Energies", "Drift angle", "Likeness of events"
+    }  # fmt: skip
+    assert "nothing in common" in said["Energies"]
+    assert said["Likeness of events"] == "There is one event, and none to compare it with."
+
+
 def test_a_run_within_its_baseline_says_so(tmp_path: Path) -> None:
     """Before any sample is judged there is nothing to draw, and the page says why."""
     home = make_home(tmp_path / "home", 500, 5, 0, baseline=500, progress=False, snapshot=False)
@@ -544,7 +556,12 @@ def test_limits_of_legibility_are_kept(sized: tuple[KeptRun, dict[str, Figure]])
     """Heat map and cosine table hold at most 40 channels and events."""
     run, figures = sized
     shown = tables.shares(run)
-    assert len(shown.channels) == min(len(run.channels), tables.MOST_CHANNELS)
+    assert len(shown.channels) <= tables.MOST_CHANNELS
+    assert len(shown.channels) + shown.left_out == len(run.channels)
+    if shown.left_out:
+        assert shown.values.max(axis=1).min() >= tables.LEAST_SHARE
+    else:
+        assert shown.channels == run.channels
     assert len(shown.events) == min(len(run.events), STRONGEST)
     ticks = figures["cosines"].axes[0].get_yticklabels()
     assert len(ticks) == len(shown.events)

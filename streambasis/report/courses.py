@@ -167,7 +167,7 @@ def rank_and_noise(run: KeptRun, course: Course) -> Figure:
     low, high = run.envelope.low["rank"], run.envelope.high["rank"]
     x, low, high = course.broken(course.x, low, high)
     axes.fill_between(x, low, high, step="mid", color=ORDINARY, linewidth=0)
-    axes.step(x, high, where="mid", color=INK, linewidth=1.3, label="basis")
+    axes.step(x, high, where="mid", color=INK, linewidth=1.3, label="basis", clip_on=False)
     top = float(np.nanmax(high))
     if progress is not None and progress.known.max(initial=0) > 0:
         at = course.at(progress.sample)
@@ -175,7 +175,7 @@ def rank_and_noise(run: KeptRun, course: Course) -> Figure:
                   label="adopted as known behaviour")  # fmt: skip
         axes.legend(loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=2, borderpad=0)
         top = max(top, float(progress.known.max()))
-    axes.set_ylim(0, 1.15 * top + 0.5)
+    axes.set_ylim(0, max(1.15 * top + 0.5, 1.5))
     axes.yaxis.set_major_locator(MaxNLocator(5, integer=True))
     axes.set_ylabel("rank\n(directions)")
     course.dress(axes, named=progress is None)
@@ -236,7 +236,8 @@ def energies(run: KeptRun, course: Course) -> Figure:
         axes.annotate(
             text, (1.0, there), (1.025, height), xycoords="axes fraction",
             textcoords="axes fraction", va="center", fontsize=8.5, color=INK,
-            arrowprops={"arrowstyle": "-", "color": tone, "lw": 0.9, "shrinkA": 1, "shrinkB": 1},
+            arrowprops={"arrowstyle": "-", "color": tone, "lw": 0.9, "shrinkA": 1, "shrinkB": 1,
+                        "relpos": (0.0, 0.5)},
         )  # fmt: skip
     return figure
 

@@ -20,6 +20,9 @@ NO_READINGS = (
 )
 
 
+NO_DIRECTION = "The basis has no direction: the channels of this feed have nothing in common."
+
+
 @dataclass(frozen=True, slots=True)
 class Picture:
     """One picture, or the reason why there is none.
@@ -100,9 +103,8 @@ def _t2(run: KeptRun, axis: Course) -> Picture:
     reason = _unjudged(run)
     if reason:
         return Picture(name, title, reason, None)
-    if not np.nanmax(run.envelope.high["t2"]) > 0:
-        reason = "The basis has no direction, so that T² is zero throughout."
-        return Picture(name, title, reason, None)
+    if not np.nanmax(run.envelope.high["rank"]) > 0:
+        return Picture(name, title, f"{NO_DIRECTION} T² is zero throughout.", None)
     text = f"How far out each sample lies within known directions. {_density(run)}"
     unit = "squared standard deviations"
     return _drawn(
@@ -134,6 +136,9 @@ def _energies(run: KeptRun, axis: Course) -> Picture:
     name, title = "energies", "Energies"
     if not _has_readings(run):
         return Picture(name, title, NO_READINGS, None)
+    assert run.progress is not None
+    if not np.isfinite(run.progress.energies).any():
+        return Picture(name, title, NO_DIRECTION, None)
     text = (
         f"Variance along the leading directions (at most {courses.DRAWN_ENERGIES}), largest first, "
         "above the noise floor."
@@ -145,6 +150,9 @@ def _drift(run: KeptRun, axis: Course) -> Picture:
     name, title = "drift", "Drift angle"
     if not _has_readings(run):
         return Picture(name, title, NO_READINGS, None)
+    assert run.progress is not None
+    if not np.isfinite(run.progress.energies).any():
+        return Picture(name, title, NO_DIRECTION, None)
     text = "Largest principal angle between the subspace of the baseline and that of the moment."
     return _drawn(name, title, text, lambda: courses.drift(run, axis))
 
@@ -182,6 +190,8 @@ def _cosines(run: KeptRun, axis: Course) -> Picture:
             "holds none that can be read with these events in it."
         )
         return Picture(name, title, reason, None)
+    if len(events) == 1:
+        return Picture(name, title, "There is one event, and none to compare it with.", None)
     text = (
         "Cosine of the angle between the directions of two events: 1 is the same pattern over the "
         "channels, 0 none in common. A frame marks an event that was recognised as a repetition."

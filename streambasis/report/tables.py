@@ -18,11 +18,17 @@ from streambasis.report.reading import EventRow, KeptRun
 MOST_CHANNELS = 40
 """Channels drawn: more would not be legible."""
 
+LEAST_SHARE = 0.005
+"""Of so many channels that not all are drawn, those that carry less stay out: rounded, 0 %."""
+
 WRITTEN = 16
 """Up to this many columns the cells also hold their number."""
 
 ROW = 0.21
 """Height of a row in inches."""
+
+FRAME = "#ffb04d"
+"""Light, as a repetition is a dark cell."""
 
 _MAP = LinearSegmentedColormap.from_list("shares", ["#f5f3ee", "#a9c3d9", "#4b7fab", "#0b2c55"])
 """From light to dark, evenly: also a scale in grey, and little ink where there is nothing."""
@@ -55,8 +61,11 @@ def shares(run: KeptRun) -> Shares:
     events, channels = run.strongest, run.channels
     values = np.array([[run.shares[e.event].get(c, 0.0) for e in events] for c in channels])
     values = values.reshape(len(channels), len(events))
-    order = np.argsort(-values.max(axis=1, initial=0.0), kind="stable")[:MOST_CHANNELS]
-    kept = np.sort(order)
+    largest = values.max(axis=1, initial=0.0)
+    kept = np.arange(len(channels))
+    if len(channels) > MOST_CHANNELS:
+        order = np.argsort(-largest, kind="stable")[:MOST_CHANNELS]
+        kept = np.sort(order[largest[order] >= LEAST_SHARE])
     return Shares([channels[i] for i in kept], events, values[kept], len(channels) - len(kept))
 
 
@@ -108,8 +117,8 @@ def alike(events: list[EventRow], table: NDArray[np.float64]) -> Figure:
                 _write(axes, j, i, f"{table[i, j]:.2f}", table[i, j])
         j = place.get(-1 if event.repeats is None else event.repeats, -1)
         if j >= 0:
-            corner = min(j, i) - 0.5, max(j, i) - 0.5
-            axes.add_patch(Rectangle(corner, 1, 1, fill=False, edgecolor=INK, linewidth=2.0))
+            corner = min(j, i) - 0.4, max(j, i) - 0.4
+            axes.add_patch(Rectangle(corner, 0.8, 0.8, fill=False, edgecolor=FRAME, linewidth=2.0))
     _bar(figure, axes, image, "cosine between directions")
     return figure
 
