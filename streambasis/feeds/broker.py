@@ -85,7 +85,7 @@ class Broker:
     Attributes
     ----------
     user, password : str or None
-        Who we are; the password is never shown.
+        Who we are; the password is never shown. Without TLS both travel in the clear.
     client : str or None
         The name under which the broker keeps our session: the same in every run, and no other
         client's: two of one name take the session from each other, which shows as a number of

@@ -83,7 +83,7 @@ class Connection:
         self._queue: deque[Message] = deque()
         self._bytes = 0
         self._connection = 0
-        self._connected = self._closed = False
+        self._closed = False
         self._failure: FeedError | None = None
         self._trouble = ""
         self._known = known
@@ -210,7 +210,7 @@ class Connection:
                 return
         with self._change:
             self.connections += 1
-            self._connected, self._trouble = True, ""
+            self._trouble = ""
             self._change.notify_all()
 
     def _on_disconnect(
@@ -220,7 +220,6 @@ class Connection:
         with self._change:
             # acknowledgements of what came by this connection are worth nothing from now on
             self._connection += 1
-            self._connected = False
             self._trouble = self._trouble or f"the connection is lost ({reason})"
             self._change.notify_all()
 

@@ -128,7 +128,7 @@ class FeedOptions:
     format: str | None = None
     strict: bool = True
     follow: bool = False
-    wait: float | None = 0.01
+    wait: float | None = 0.005
     stop: threading.Event = field(default_factory=threading.Event)
     broker: Broker | None = None
 
