@@ -2,14 +2,11 @@
 
 ``python -m bench principal`` compares scoring and folding every sample with the incremental
 principal component analysis of scikit-learn (which folds but does not score), both on one BLAS
-thread. ``python -m bench.principal --soak 10_000_000`` runs a long feed through and audits it.
+thread. The long run is ``python -m bench principal_soak``.
 """
 
 from __future__ import annotations
 
-import argparse
-import time
-import warnings
 from collections.abc import Callable
 from typing import Any
 
@@ -180,42 +177,3 @@ def run(quick: bool) -> list[Table]:
     # scikit-learn has loaded a BLAS of its own since the limit outside was set
     with one_blas_thread():
         return [against_incremental(quick), singly(quick), closeness(quick)]
-
-
-def soak(samples: int) -> Table:
-    """Run long feeds through, with jumps, silence and a growing scale, and audit all along."""
-    table = Table(
-        f"Soak: {samples:,} samples",
-        ["n", "dtype", "forget", "worst orthogonality (limit 3)", "renewals", "noise : true",
-         "angle", "seconds"],
-    )  # fmt: skip
-    chunk = 20_000
-    for channels, dtype, forget in (
-        (16, "float64", 1.0),
-        (16, "float32", 0.999),
-        (96, "complex64", 0.999),
-    ):
-        rng = np.random.default_rng(channels)
-        basis = PrincipalBasis(channels, max_rank=6, forget=forget, dtype=dtype)
-        block, rows = feed(rng, chunk, channels, 3, NOISE)
-        block = block.astype(dtype)
-        worst, start = 0.0, time.perf_counter()
-        with warnings.catch_warnings():
-            warnings.simplefilter("error")
-            for done in range(0, samples, chunk):
-                scores = basis.push_many(rng.permutation(block))
-                if not np.isfinite(scores.spe).all():
-                    raise RuntimeError(f"a score is not finite near sample {done}")
-                worst = max(worst, basis.audit().orthogonality)
-        seconds = time.perf_counter() - start
-        noise = basis.noise / NOISE**2
-        angle = sine(np.real(basis.vectors[:3]), rows)
-        table.add(channels, dtype, forget, worst, basis.audit().renewals, noise, angle, seconds)
-    return table
-
-
-if __name__ == "__main__":
-    parser = argparse.ArgumentParser(prog="python -m bench.principal", description=__doc__)
-    parser.add_argument("--soak", type=int, default=10_000_000, metavar="SAMPLES")
-    with one_blas_thread():
-        print(soak(parser.parse_args().soak).markdown())

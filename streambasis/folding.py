@@ -25,7 +25,7 @@ ROUNDING_FLOOR = 16.0
 """A residual below this many machine epsilons of its sample is rounding: projecting by matrix
 products leaves a dependent sample with one or a few epsilons."""
 MOST_RENEWALS = 3
-RENEWAL_LIMIT = 1.0
+RENEWAL_LIMIT = 1.5
 """Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
 made orthonormal again."""
 LEVEL_RANGE = 64
