@@ -126,7 +126,7 @@ def test_refused_samples_change_nothing(bad: float) -> None:
 
 @pytest.mark.parametrize("dtype", DTYPES)
 def test_directions_stay_orthonormal(dtype: str) -> None:
-    """Contract 2 holds over a thousand folds, cut and uncut, with a wide spectrum; renewals count."""
+    """Contract 2 holds over a thousand folds, cut and uncut, and renewals are counted."""
     rng = np.random.default_rng(6)
     for channels, rank in ((16, 4), (80, 6)):
         basis = PrincipalBasis(channels, rank=rank, block=4, forget=0.99, dtype=dtype)
