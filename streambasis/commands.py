@@ -8,9 +8,11 @@ from __future__ import annotations
 import csv
 import datetime as dt
 import io
+import os
 import sys
 import traceback
 from collections.abc import Sequence
+from contextlib import ExitStack
 from pathlib import Path
 
 import click
@@ -132,7 +134,8 @@ In the folder of --home:
     "--home",
     type=click.Path(path_type=Path, file_okay=False),
     metavar="DIR",
-    help="Keep decisions and events in this folder.",
+    help="Keep decisions, events and the run itself in this folder; with the same folder again "
+    "the run goes on where it stopped.",
 )
 @click.option("--json", "as_json", is_flag=True, help="Events as JSON lines on standard output.")
 @click.option("--quiet", is_flag=True, help="Show nothing made for reading, errors excepted.")
@@ -157,21 +160,26 @@ def watch(
     from streambasis.watch.stopping import asked_to_stop
     from streambasis.watch.terminal import Terminal
 
-    feed = open_feed(file, channels=_names(channels), time=time)
-    monitor = NoveltyMonitor(
-        feed.columns.channels,
-        baseline=baseline,
-        false_alarm=false_alarm,
-        half_life=half_life or None,
-    )
-    kept = Home(home) if home is not None else None
-    shown = Terminal(sys.stdout, sys.stderr, total=feed.rows, as_json=as_json, quiet=quiet)
-    with asked_to_stop() as asked, shown as terminal:
-        try:
+    memory = half_life or None
+    with ExitStack() as held:
+        kept = held.enter_context(Home(home)) if home is not None else None
+        position = kept.position if kept is not None else None
+        feed = held.enter_context(
+            open_feed(file, channels=_names(channels), time=time, position=position)
+        )
+        names = feed.columns.channels
+        if kept is not None:
+            about = {"feed": os.path.realpath(file), "channels": list(names), "baseline": baseline}
+            about |= {"false_alarm": false_alarm, "half_life": memory, "adopt_after": adopt_after}
+            kept.begin(about)
+        monitor = kept.monitor() if kept is not None else None
+        if monitor is None:
+            monitor = NoveltyMonitor(
+                names, baseline=baseline, false_alarm=false_alarm, half_life=memory
+            )
+        shown = Terminal(sys.stdout, sys.stderr, total=feed.rows, as_json=as_json, quiet=quiet)
+        with asked_to_stop() as asked, shown as terminal:
             summary = Run(feed, monitor, terminal, home=kept, adopt_after=adopt_after)(asked)
-        finally:
-            if kept is not None:
-                kept.close()
     shown.summary(summary)
 
 

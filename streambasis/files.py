@@ -93,7 +93,7 @@ def remove_leftovers(path: str | os.PathLike[str]) -> int:
     Parameters
     ----------
     path : path
-        The file that was to be replaced.
+        The file that was to be replaced, or a folder, for every file in it.
 
     Returns
     -------
@@ -105,8 +105,12 @@ def remove_leftovers(path: str | os.PathLike[str]) -> int:
     A writer holds a lock on its temporary file, which ends with the process however it dies. What
     is locked belongs to a living writer and stays.
     """
-    folder, name = os.path.split(os.path.realpath(path))
-    leftover = re.compile(re.escape(f".{name}.") + r"[0-9a-f]{16}\.partial")
+    target = os.path.realpath(path)
+    if os.path.isdir(target):
+        folder, name = target, ".+"
+    else:
+        folder, name = os.path.dirname(target), re.escape(os.path.basename(target))
+    leftover = re.compile(rf"\.{name}\.[0-9a-f]{{16}}\.partial")
     removed = 0
     with os.scandir(folder) as entries:
         found = [entry.path for entry in entries if leftover.fullmatch(entry.name)]

@@ -153,7 +153,7 @@ def test_a_refusal_is_one_line_and_an_exit_code(
     lines = feed.read_text().splitlines()
     Path("infinite.csv").write_text("\n".join([*lines[:250], "1,2,inf,4,5,6"]) + "\n")
     (tmp_path / "full" / "decisions").mkdir(parents=True)
-    (tmp_path / "full" / "events.jsonl").touch()
+    (tmp_path / "full" / "events.jsonl").write_text("{}\n")
     assert cli.main(["watch", *arguments]) == code
     shown = capsys.readouterr()
     assert shown.out == ""

@@ -181,6 +181,8 @@ def test_leftovers_are_removed_and_nothing_else(tmp_path: Path) -> None:
         assert remove_leftovers(path) == 1
     assert sorted(tmp_path.iterdir()) == sorted([path, in_use, *stay])
     assert remove_leftovers(path) == 1
+    assert remove_leftovers(tmp_path) == 1
+    assert sorted(tmp_path.iterdir()) == sorted([path, *stay[1:]])
 
 
 def test_a_writer_survives_the_cleaner(tmp_path: Path) -> None:

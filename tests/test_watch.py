@@ -14,7 +14,6 @@ import pyarrow as pa
 import pytest
 
 from streambasis import cli
-from streambasis.errors import HomeError
 from streambasis.feeds import BATCH_ROWS, open_feed
 from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.watch import home as home_module
@@ -113,14 +112,6 @@ def test_a_run_without_home_leaves_no_file(tmp_path: Path, monkeypatch: pytest.M
     monkeypatch.chdir(tmp_path)
     assert cli.main(["watch", str(SHIPPED), "--quiet"]) == cli.OK
     assert list(tmp_path.iterdir()) == []
-
-
-def test_a_used_home_is_refused_and_untouched(kept: Path) -> None:
-    """A second run into the same folder is an error, and the first run's files stay."""
-    before = {path: path.read_bytes() for path in kept.rglob("*") if path.is_file()}
-    with pytest.raises(HomeError, match="holds an earlier run"):
-        Home(kept)
-    assert {path: path.read_bytes() for path in kept.rglob("*") if path.is_file()} == before
 
 
 def shifted_feed(folder: Path, rows: int, shift_at: int) -> Path:

@@ -11,10 +11,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.errors import FeedError
-from streambasis.feeds import Batch, Feed
+from streambasis.feeds import Batch, Feed, Position
 from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.watch.home import Home
 from streambasis.watch.progress import Progress
+
+COMMIT_SAMPLES = 1 << 16
+COMMIT_SECONDS = 10.0
+"""Samples and seconds between two commits: what a crash makes the next run do again."""
+
+_COUNTERS = ("opened", "repeats", "adopted", "first_time", "last_time")
 
 
 class Reporter(Protocol):
@@ -82,7 +88,10 @@ class Run:
     reporter : Reporter
         Told of every event as it opens and closes.
     home : Home, optional
-        Where decisions and closed events are kept.
+        Where decisions, closed events and the run itself are kept. Where it holds an earlier part
+        of this run, the feed and the monitor are those that go on from there.
+    every : (int, float)
+        Samples, and seconds, after which what was taken is committed to the home.
     adopt_after : int
         An event still open after so many samples is adopted as known behaviour: a change that
         lasts is another way of running, and what happens on top of it must be seen as its own.
@@ -96,6 +105,7 @@ class Run:
         reporter: Reporter,
         *,
         home: Home | None = None,
+        every: tuple[int, float] = (COMMIT_SAMPLES, COMMIT_SECONDS),
         adopt_after: int,
     ) -> None:
         self._feed = feed
@@ -104,7 +114,12 @@ class Run:
         self._home = home
         self._adopt_after = adopt_after
         self._opened = self._repeats = self._adopted = 0
-        self._open: set[int] = set()
+        self._open = {event["event"] for event in self._open_events()}
+        self._first_time: int | None = None
+        self._last_time: int | None = None
+        self._position: Position | None = None
+        self._every = every
+        self._committed = (monitor.count, time.monotonic())
         columns = feed.columns
         clock = "seconds" if columns.unit else "timestamps"
         self._progress = Progress(
@@ -115,6 +130,12 @@ class Run:
                 "adopt_after": adopt_after,
             }
         )
+        if home is not None and home.state is not None:
+            facts = home.state.facts
+            for name in _COUNTERS:
+                setattr(self, f"_{name}", facts[name])
+            self._position = facts["position"]
+            self._progress.take_state(home.state.parts["progress"])
 
     def __call__(self, asked: threading.Event) -> Summary:
         """Read the feed to its end, or until asked to stop.
@@ -129,35 +150,40 @@ class Run:
         FeedError
             If the feed cannot be read, or is shorter than the baseline.
         """
-        first_time = last_time = None
-        samples = 0
-        start = time.perf_counter()
+        start, before = time.perf_counter(), self._monitor.count
+        if self._home is not None and self._home.state is None:
+            self._commit()
         for batch in self._feed.batches():
-            if batch.times is not None:
-                first_time = int(batch.times[0]) if first_time is None else first_time
-                last_time = int(batch.times[-1])
+            if batch.times is not None and len(batch):
+                first = int(batch.times[0])
+                self._first_time = first if self._first_time is None else self._first_time
+                self._last_time = int(batch.times[-1])
             self._take(batch)
+            self._position = batch.position
             self._progress.take(self._monitor)
-            samples += len(batch)
-            self._reporter.advance(samples)
+            self._reporter.advance(self._monitor.count)
+            if self._commit_due():
+                self._commit()
             if asked.is_set():
                 break
-        monitor = self._monitor
+        monitor, samples = self._monitor, self._monitor.count
         if not monitor.baseline_done and not asked.is_set():
             raise FeedError(
                 f"{self._feed.name}: {samples} samples, fewer than the baseline of "
                 f"{monitor.baseline}; lower --baseline or give a longer feed"
             )
-        monitor.finish()
-        self._tell()
+        if self._home is None or not asked.is_set():
+            # a run that was asked to stop and goes on later leaves its open events open
+            monitor.finish()
+            self._tell()
         if self._home is not None:
             if monitor.baseline_done:
                 self._home.keep_progress(self._progress.table(monitor))
-            self._home.keep_snapshot(monitor)
+            self._commit()
         return Summary(
-            samples,
-            first_time,
-            last_time,
+            samples - before,
+            self._first_time,
+            self._last_time,
             monitor.rank,
             monitor.noise,
             monitor.drift,
@@ -167,6 +193,31 @@ class Run:
             time.perf_counter() - start,
             monitor.basis.audit().orthogonality if monitor.baseline_done else 0.0,
         )
+
+    def _commit_due(self) -> bool:
+        if self._home is None:
+            return False
+        samples, seconds = self._every
+        count, then = self._committed
+        return (
+            self._monitor.count - count >= samples
+            or time.monotonic() - then >= seconds
+            or self._feed.due
+        )
+
+    def _commit(self) -> None:
+        """Keep the run as it is after the last batch, and tell the feed."""
+        if self._home is None:
+            return
+        facts = {name: getattr(self, f"_{name}") for name in _COUNTERS}
+        self._home.commit(
+            self._monitor,
+            {**facts, "position": self._position},
+            {"progress": self._progress.to_state()},
+        )
+        if self._position is not None:
+            self._feed.commit(self._position)
+        self._committed = (self._monitor.count, time.monotonic())
 
     def _take(self, batch: Batch) -> None:
         """Push a batch, cut where an open event is due to be adopted."""

@@ -11,6 +11,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from streambasis.monitor import NoveltyMonitor
+from streambasis.state import State
 
 SPACING = 1024
 """Samples between two readings at first."""
@@ -55,6 +56,16 @@ class Progress:
             self._rows = self._rows[1::2]
             self._spacing *= 2
         self._due = (monitor.count // self._spacing + 1) * self._spacing
+
+    def to_state(self) -> State:
+        """Hand over the readings."""
+        rows = np.array(self._rows).reshape(len(self._rows), 4 + ENERGIES)
+        return State("Progress", {"spacing": self._spacing, "due": self._due}, {"readings": rows})
+
+    def take_state(self, state: State) -> None:
+        """Take over the readings of an earlier part of the run."""
+        self._rows = list(state.take("readings", np.float64, (None, 4 + ENERGIES)))
+        self._spacing, self._due = state.facts["spacing"], state.facts["due"]
 
     def table(self, monitor: NoveltyMonitor) -> pa.Table:
         """Return the readings and one of how the monitor stands now.

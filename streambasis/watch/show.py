@@ -10,7 +10,6 @@ from pathlib import Path
 from typing import Any, TextIO
 
 import numpy as np
-from numpy.typing import NDArray
 from rich.console import Console
 from rich.table import Table
 
@@ -95,9 +94,7 @@ def _stream(basis: StreamBasis) -> dict[str, Any]:
         **_window(basis),
         "directions": [
             {"pivot": pivot, "channels": leading}
-            for pivot, leading in zip(
-                basis.pivots, _leading(basis.vectors, basis.channels), strict=True
-            )
+            for pivot, leading in zip(basis.pivots, _leading(basis), strict=True)
         ],
         "audit": basis.audit()._asdict(),
     }
@@ -139,9 +136,7 @@ def _principal(basis: PrincipalBasis) -> dict[str, Any]:
         "newest_sample": basis.count - 1 if basis.count else None,
         "directions": [
             {"energy": energy, "channels": leading}
-            for energy, leading in zip(
-                basis.energies, _leading(basis.vectors, basis.channels), strict=True
-            )
+            for energy, leading in zip(basis.energies, _leading(basis), strict=True)
         ],
         "audit": basis.audit()._asdict(),
     }
@@ -172,13 +167,16 @@ def _monitor(monitor: NoveltyMonitor) -> dict[str, Any]:
     }
 
 
-def _leading(vectors: NDArray[Any], channels: tuple[str, ...]) -> list[dict[str, float]]:
-    """Return for each direction the channels that carry most of it, with their shares."""
+def _leading(basis: StreamBasis | PrincipalBasis) -> list[dict[str, float]]:
+    """Return for each direction the channels that carry most of it, with their shares.
+
+    Shares are taken in the inner product, where the units of the channels do not count.
+    """
     found = []
-    for squares in np.abs(vectors) ** 2:
+    for squares in np.abs(basis._inner.enter(basis.vectors)) ** 2:
         shares = squares / squares.sum()
         order = np.argsort(shares)[::-1][:LEADING]
-        found.append({channels[i]: float(shares[i]) for i in order})
+        found.append({basis.channels[i]: float(shares[i]) for i in order})
     return found
 
 
