@@ -189,6 +189,25 @@ def test_page_carries_caution_and_provenance(hostile: tuple[Page, str, list[str]
     assert lines[-1].endswith("report.html: 7 pictures, 8 events")
 
 
+def test_times_in_seconds_stay_seconds(tmp_path: Path) -> None:
+    """A feed that counts seconds gets no date, neither in the settings nor among the events."""
+    home = make_home(tmp_path / "home", 600, 5, 1, progress=False, snapshot=False)
+    for path in (home / "decisions").iterdir():
+        table = pa.ipc.open_file(path).read_all()
+        time = pa.array(table["time"].to_numpy().view(np.int64) - START, pa.timestamp("ns"))
+        table = table.set_column(1, "time", time)
+        with pa.ipc.new_file(path, table.schema) as file:
+            file.write_table(table)
+    event = json.loads((home / "events.jsonl").read_text())
+    event |= {"start_time": "1970-01-01T00:01:40.500000000", "end_time": "soon"}
+    (home / "events.jsonl").write_text(json.dumps(event) + "\n")
+    page, _, _ = report_on(home, tmp_path)
+    told = {row[0]: row[1] for row in page.cells if len(row) == 2}
+    assert told["time"] == "0 s to 599 s"
+    assert "dates" not in told
+    assert page.cells[-1][1:3] == ["100.5 s", "soon"]
+
+
 def absent(page: Page) -> dict[str, str]:
     """Return title and sentence of what the page shows no picture of."""
     pictured = [a["alt"] or "" for tag, a in page.elements if tag == "img"]

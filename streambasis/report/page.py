@@ -11,7 +11,8 @@ from xml.etree import ElementTree as ET
 import numpy as np
 
 from streambasis._version import __version__
-from streambasis.report.canvas import DPI
+from streambasis.report.canvas import DPI, dated
+from streambasis.report.dates import SECOND
 from streambasis.report.pictures import Picture
 from streambasis.report.reading import EventRow, KeptRun
 from streambasis.report.thinning import NO_TIME
@@ -116,9 +117,11 @@ def provenance(run: KeptRun, made: dt.datetime) -> list[tuple[str, str]]:
         samples += f" (numbers {envelope.first:,} to {last:,})"
     rows.append(("samples", samples))
     there = envelope.begin != NO_TIME
-    if there.any() and run.about.get("clock") != "seconds":
+    if there.any():
+        dates = dated(envelope, run.about.get("clock"))
         ends = (envelope.begin[there][0], envelope.end[there][-1])
-        rows.append(("dates", " to ".join(_moment(str(np.datetime64(int(t), "ns"))) for t in ends)))
+        texts = (_moment(str(np.datetime64(int(t), "ns")), dates) for t in ends)
+        rows.append(("dates" if dates else "time", " to ".join(texts)))
     judged = max(counts["judged"], 1)
     rows.append(("judged", f"{counts['judged']:,}"))
     for name, what in (("novel", "SPE"), ("extreme", "T²")):
@@ -177,7 +180,8 @@ def _events(body: ET.Element, run: KeptRun) -> None:
         text = f"The {MOST_LISTED} strongest of {len(run.events):,}; all are in events.jsonl."
         _add(section, "p", text)
     if listed:
-        _table(section, [_row(event) for event in sorted(listed, key=lambda e: e.event)])
+        dates = dated(run.envelope, run.about.get("clock"))
+        _table(section, [_row(event, dates) for event in sorted(listed, key=lambda e: e.event)])
     else:
         _add(section, "p", "No event has closed in this run.").set("class", "missing")
     for number, (first, last) in sorted(run.unclosed.items())[:MOST_LISTED]:
@@ -185,7 +189,7 @@ def _events(body: ET.Element, run: KeptRun) -> None:
         _add(section, "p", f"{text}begun at sample {first:,}.")
 
 
-def _row(event: EventRow) -> list[str]:
+def _row(event: EventRow, dates: bool) -> list[str]:
     more = len(event.channels) - MOST_NAMES
     names = ", ".join(event.channels[:MOST_NAMES]) + (f" and {more:,} more" if more > 0 else "")
     repeats = "" if event.repeats is None else f"event {event.repeats}"
@@ -193,7 +197,7 @@ def _row(event: EventRow) -> list[str]:
         repeats += f" (cosine {event.cosine:.2f})"
     return [
         str(event.event),
-        *("" if time is None else _moment(time) for time in (event.start_time, event.end_time)),
+        *("" if t is None else _moment(t, dates) for t in (event.start_time, event.end_time)),
         f"{event.start:,}",
         f"{event.end:,}",
         f"{event.peak:,.3g}" if event.peak < 1000 else f"{event.peak:,.0f}",
@@ -203,8 +207,14 @@ def _row(event: EventRow) -> list[str]:
     ]
 
 
-def _moment(time: str) -> str:
-    """Return a date and time without the zeros that end it."""
+def _moment(time: str, dates: bool) -> str:
+    """Return a date and time without the zeros that end it, or the seconds that it stands for."""
+    if not dates:
+        try:
+            return f"{int(np.datetime64(time.rstrip('Z'), 'ns').astype(np.int64)) / SECOND:,.10g} s"
+        except ValueError:
+            # a line that somebody edited: as it stands
+            return time
     whole, _, fraction = time.replace("T", " ").partition(".")
     fraction = fraction.rstrip("0")
     return f"{whole}.{fraction}" if fraction else whole
