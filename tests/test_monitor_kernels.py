@@ -12,6 +12,7 @@ from tests import reference_monitor as reference
 
 pytestmark = pytest.mark.kernels
 
+pytestmark = pytest.mark.kernels
 ROUNDING = 1e-12
 
 
