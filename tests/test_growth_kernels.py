@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+import numba
 import numpy as np
 import pytest
 
@@ -16,6 +17,13 @@ from tests.reference import (
     random_rows,
     scaled_copy,
 )
+
+pytestmark = pytest.mark.kernels
+
+# as plain Python the large ones would take minutes
+SHAPES = [(1, 16), (16, 64), (64, 64)]
+if not numba.config.DISABLE_JIT:
+    SHAPES += [(128, 1024), (600, 1500)]
 
 ROUNDINGS = 16
 """Difference allowed between two orders of summation, in epsilons of the largest norm."""
@@ -101,12 +109,28 @@ def test_a_pass_is_a_pass_in_groups_or_one_by_one(dtype: str, rank: int, backwar
             assert taken == pytest.approx(np.abs(expected).sum(), rel=1e-5)
 
 
+def test_long_rows_are_taken_out_like_short_ones() -> None:
+    """Rows longer than LONG_ROW take another way to the same residual."""
+    rng = np.random.default_rng(12)
+    count = projection.LONG_ROW // 8 + 5
+    held = orthonormal_rows(rng, 9, count)
+    sample = random_rows(rng, 1, count)[0]
+    expected, left = one_pass(held, sample)
+    bound = ROUNDINGS * epsilon("float64") * np.linalg.norm(sample)
+    for backward in (False, True):
+        residual, coefficients = sample.copy(), np.zeros(9)
+        projection.take_out_groups(held, 2, residual, coefficients, backward)
+        projection.take_out_real(held, 8, 9, residual, coefficients)
+        assert np.abs(coefficients - expected).max() <= bound
+        assert np.abs(residual - left).max() <= bound
+
+
 def test_a_dependent_sample_leaves_less_than_a_third_of_the_rounding_floor() -> None:
     """One pass leaves less than 0.34·max(8, sqrt(rank)) epsilons of a sample in the span."""
     rng = np.random.default_rng(3)
     share = 0.34
     for dtype in ("float32", "float64", "complex128"):
-        for rank, count in ((1, 16), (16, 64), (64, 64), (128, 1024), (600, 1500)):
+        for rank, count in SHAPES:
             held = orthonormal_rows(rng, rank, count, dtype)
             worst = 0.0
             for row in random_rows(rng, 10, rank, dtype):

@@ -5,7 +5,8 @@ Directions are taken in groups of four. Within a group the coefficients come fro
 Gram-Schmidt). For directions with ``V Vᴴ = I + E`` the two differ by ``|E|·|residual|`` at most,
 which is rounding as long as V is kept orthonormal to working precision, as the bases do. One
 sweep over the entries takes out one group and meets the next, so that the residual is read and
-written once per group and the directions come from memory once.
+written once per group, and directions come from memory once: what takes them out finds them in
+cache.
 
 Sums are reordered so that they vectorize: every bound used here (Björck 1967; Giraud & Langou 2003;
 Giraud, Langou, Rozložník & van den Eshof 2005) holds for any order of summation.
@@ -25,6 +26,10 @@ LOSS_LIMIT = 0.99
 """L of Giraud & Langou (2003): any value below 1 makes the criterion sound."""
 MOST_PASSES = 4
 """Two suffice (Kahan, in Parlett 1980) unless the residual is near the rounding floor."""
+LONG_ROW = 2**17
+"""Bytes of a direction above which a group is taken out before the next one is met. In one sweep
+nine rows are read at once, from two levels of the memory: measured a tenth slower for long rows, a
+tenth faster for short ones."""
 ROUNDING_FLOOR = 8.0
 """No relative tolerance is below this many epsilons, nor below ``sqrt(rank)`` epsilons.
 
@@ -131,6 +136,7 @@ def take_out_groups(directions, groups, residual, coefficients, backward):
     """Take the first ``groups`` groups of four real directions out, the last first if backward."""
     step = -4 if backward else 4
     j = 4 * (groups - 1) if backward else 0
+    apart = residual.shape[0] * residual.itemsize > LONG_ROW
     c0, c1, c2, c3 = group_dots(directions, j, residual)
     taken = 0.0
     for left in range(groups - 1, -1, -1):
@@ -139,11 +145,17 @@ def take_out_groups(directions, groups, residual, coefficients, backward):
         coefficients[j + 2] += c2
         coefficients[j + 3] += c3
         taken += abs(c0) + abs(c1) + abs(c2) + abs(c3)
-        if left > 0:
-            c0, c1, c2, c3 = group_update_dots(directions, j, j + step, residual, c0, c1, c2, c3)
-            j += step
-        else:
+        if left == 0 or apart:
             group_update(directions, j, residual, c0, c1, c2, c3)
+        if left > 0:
+            following = j + step
+            if apart:
+                c0, c1, c2, c3 = group_dots(directions, following, residual)
+            else:
+                c0, c1, c2, c3 = group_update_dots(
+                    directions, j, following, residual, c0, c1, c2, c3
+                )
+            j = following
     return taken
 
 
