@@ -19,6 +19,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 from matplotlib.axes._base import _AxesBase
+from matplotlib.colors import to_rgba
 from matplotlib.figure import Figure
 from matplotlib.image import imread
 from matplotlib.text import Text
@@ -388,6 +389,39 @@ def test_cosines_are_those_of_the_directions(tmp_path: Path) -> None:
             assert abs(table[i, j] - b.cosine) < 1e-12
 
 
+def beyond_columns(figure: Figure) -> set[int]:
+    """Return the columns of an envelope of 100 in which the mark of what is beyond is drawn."""
+    found: set[int] = set()
+    for drawn in figure.axes[1].collections:
+        if np.allclose(drawn.get_edgecolor()[0], to_rgba(canvas.BEYOND)):
+            for path in drawn.get_paths():
+                found |= set(np.round(path.vertices[:, 0]).astype(int).tolist())
+    return found
+
+
+def test_only_columns_with_such_samples_are_marked_beyond(tmp_path: Path) -> None:
+    """What is marked as beyond the limit is what the decisions say, one sample alone included."""
+    home = make_home(tmp_path / "home", 100, 5, 0, baseline=10, step=None, rank=0)
+    path = home / "decisions" / "000000000000.arrow"
+    table = pa.ipc.open_file(path).read_all()
+    novel = np.zeros(100, np.bool_)
+    novel[[40, 70, 71, 72]] = True
+    limit = table["limit"][50].as_py()
+    spe = np.where(novel, 3.0 * limit, 0.3 * limit)
+    # a sample with fewer channels has a lower limit, and is no reason to mark its neighbours
+    limits = np.where(np.arange(100) == 50, 0.31 * limit, limit)
+    for name, values in (("spe", spe), ("limit", limits), ("novel", novel)):
+        table = table.set_column(table.schema.get_field_index(name), name, pa.array(values))
+    with pa.ipc.new_file(path, table.schema) as file:
+        file.write_table(table)
+    run = read_run(home, 100)
+    with canvas.style():
+        figure = courses.scores(run, canvas.course(run.envelope, None), courses.SPE)
+    assert beyond_columns(figure) == {40, 70, 71, 72}
+    alone = figure.axes[1].collections[-1].get_paths()[0].vertices
+    np.testing.assert_allclose(alone, [[40, limit], [40, 3.0 * limit]])
+
+
 def test_segments_out_of_order_are_refused(tmp_path: Path) -> None:
     """A file of another run in the folder is an error that names it."""
     home = make_home(tmp_path / "home", 70_000, 5, 0)
@@ -681,7 +715,7 @@ def test_scores_of_zero_and_infinite_limits_are_drawn(tmp_path: Path) -> None:
     run.envelope.low["limit"][:] = run.envelope.high["limit"][:] = np.inf
     axis = canvas.course(run.envelope, None)
     with canvas.style():
-        figure = courses.scores(run, axis, "spe", "limit", "SPE", "unit")
+        figure = courses.scores(run, axis, courses.SPE)
         check_legible(figure, "spe")
         low, high = figure.axes[1].get_ylim()
     assert 0 < low < high < np.inf

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import NamedTuple
 
 import numpy as np
 from matplotlib import colormaps
@@ -36,26 +37,46 @@ NUMBER_WIDTH = 0.0065
 """Width of a digit over an event, as a part of the axis."""
 
 
-def scores(run: KeptRun, course: Course, score: str, limit: str, name: str, unit: str) -> Figure:
+class Score(NamedTuple):
+    """A score to draw: its series, its limit's, the one that says what is beyond, its name."""
+
+    series: str
+    limit: str
+    beyond: str
+    name: str
+    unit: str
+
+
+SPE = Score("spe", "limit", "novel", "SPE", "squared noise standard deviations")
+T2 = Score("t2", "t2_limit", "extreme", "T²", "squared standard deviations")
+
+
+def scores(run: KeptRun, course: Course, score: Score) -> Figure:
     """Draw a score against its limit, with the events shaded and numbered."""
     figure = blank(3.9)
     strip, axes = figure.subplots(2, 1, sharex=True, height_ratios=[1, 14])
-    low, high = run.envelope.low[score], run.envelope.high[score]
-    bound_low, bound = run.envelope.low[limit], run.envelope.high[limit]
-    x, low, high, bound_low, bound = course.broken(course.x, low, high, bound_low, bound)
+    least, most = run.envelope.low, run.envelope.high
+    x, low, high, bound_low, bound, beyond = course.broken(
+        course.x,
+        least[score.series],
+        most[score.series],
+        least[score.limit],
+        most[score.limit],
+        most[score.beyond],
+    )
     # a limit fitted to too few samples for its rank is infinite: none
     bound_low, bound = (np.where(np.isinf(one), np.nan, one) for one in (bound_low, bound))
     floor = _floor(low, high, bound)
     low, high = np.maximum(low, floor), np.maximum(high, floor)
     _shade(axes, run, course)
     axes.fill_between(
-        x, low, high, color=ORDINARY, linewidth=0.8, label=f"{name}, lowest to highest"
+        x, low, high, color=ORDINARY, linewidth=0.8, label=f"{score.name}, lowest to highest"
     )
-    _draw_beyond(axes, x, low, high, bound_low)
+    _draw_beyond(axes, x, (low, high), bound_low, beyond > 0)
     axes.plot(x, bound, color=INK, linestyle="--", linewidth=1.1, label="control limit")
     top = float(np.fmax(np.nanmax(high), np.fmax.reduce(bound)))
     logarithmic(axes, floor, top * (top / floor) ** 0.06)
-    axes.set_ylabel(f"{name}\n({unit})")
+    axes.set_ylabel(f"{score.name}\n({score.unit})")
     course.dress(axes)
     _baseline(axes, run, course)
     _number_events(strip, run, course)
@@ -66,18 +87,17 @@ def scores(run: KeptRun, course: Course, score: str, limit: str, name: str, unit
 def _draw_beyond(
     axes: Axes,
     x: NDArray[np.float64],
-    low: NDArray[np.float64],
-    high: NDArray[np.float64],
+    scores: tuple[NDArray[np.float64], NDArray[np.float64]],
     bound: NDArray[np.float64],
+    above: NDArray[np.bool_],
 ) -> None:
-    """Draw what lies above the limit over the rest."""
-    above = high > bound
+    """Draw what lies beyond the limit over the rest, in the columns that hold such samples."""
     if not above.any():
         return
+    low, high = np.fmax(scores[0], bound), scores[1]
     axes.fill_between(
-        x, np.maximum(low, bound), high, where=above, color=BEYOND, linewidth=0.8,
-        label="beyond the limit",
-    )  # fmt: skip
+        x, low, high, where=above, color=BEYOND, linewidth=0.8, label="beyond the limit"
+    )
     # a polygon needs two columns; one alone is a line up from the limit
     neighbours = np.pad(above, 1)
     alone = above & ~neighbours[:-2] & ~neighbours[2:]

@@ -94,8 +94,7 @@ def _spe(run: KeptRun, axis: Course) -> Picture:
         "How much of each sample the basis does not explain. Events are shaded and numbered as far "
         f"as there is room, the strongest first. {_density(run)}"
     )
-    unit = "squared noise standard deviations"
-    return _drawn(name, title, text, lambda: courses.scores(run, axis, "spe", "limit", "SPE", unit))
+    return _drawn(name, title, text, lambda: courses.scores(run, axis, courses.SPE))
 
 
 def _t2(run: KeptRun, axis: Course) -> Picture:
@@ -106,10 +105,7 @@ def _t2(run: KeptRun, axis: Course) -> Picture:
     if not np.nanmax(run.envelope.high["rank"]) > 0:
         return Picture(name, title, f"{NO_DIRECTION} T² is zero throughout.", None)
     text = f"How far out each sample lies within known directions. {_density(run)}"
-    unit = "squared standard deviations"
-    return _drawn(
-        name, title, text, lambda: courses.scores(run, axis, "t2", "t2_limit", "T²", unit)
-    )
+    return _drawn(name, title, text, lambda: courses.scores(run, axis, courses.T2))
 
 
 def _rank(run: KeptRun, axis: Course) -> Picture:

@@ -31,6 +31,7 @@ from streambasis.state import State
 STRONGEST = 40
 """Events drawn by channel and compared with each other: more would not be legible."""
 
+DRAWN = (*SERIES, "novel", "extreme")
 LARGEST = 2**62
 """Bound of sample and event numbers."""
 
@@ -201,7 +202,7 @@ def read_run(home: Path, columns: int) -> KeptRun:
     if segments:
         ends += [end_of(segments[0], 0), end_of(segments[-1], -1) + 1]
     first, stop = (int(min(ends)), int(max(ends))) if ends else (0, 0)
-    run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, SERIES), notes=notes)
+    run = KeptRun(home, Envelope(first, max(stop - first, 1), columns, DRAWN), notes=notes)
     run.counts = dict.fromkeys(("samples", "judged", "novel", "extreme"), 0)
     spans: dict[int, tuple[int, int]] = {}
     last = first - 1
@@ -235,7 +236,12 @@ def _take(
         )
     judged = ~np.isnan(taken.series["spe"])
     # during the baseline there is no basis, and its rank of 0 would only stretch the axis
-    series = taken.series | {"rank": np.where(judged, taken.series["rank"], np.nan)}
+    series = {
+        **taken.series,
+        "rank": np.where(judged, taken.series["rank"], np.nan),
+        "novel": taken.novel.astype(np.float64),
+        "extreme": taken.extreme.astype(np.float64),
+    }
     run.envelope.take(samples, None if times[0] == NO_TIME else times, series)
     for name, count in (
         ("samples", len(samples)),
