@@ -12,7 +12,8 @@ import pytest
 from streambasis.errors import FeedError
 from streambasis.feeds import BATCH_ROWS, Batch, FeedOptions, Malformed, open_feed
 from streambasis.feeds.lines import LONGEST_LINE
-from streambasis.feeds.reading import MOST_TEXT
+from streambasis.feeds.reading import MOST_TEXT, OUTNUMBERED
+from streambasis.feeds.sources import CHUNK_BYTES
 
 LENIENT = FeedOptions(strict=False)
 
@@ -149,12 +150,21 @@ def test_numbers_of_lines_and_reports_survive_a_break(tmp_path: Path) -> None:
 def test_malformed_rows_are_held_in_bounded_number(tmp_path: Path) -> None:
     """A file without a single good row gives batches of nothing but malformed rows."""
     path = tmp_path / "feed.csv"
-    path.write_bytes(b"a,b\n1,2\n" + b"bad\n" * (10 * BATCH_ROWS))
+    path.write_bytes(b"a,b\n1,2\n" + b"not good\n" * (100 * BATCH_ROWS))
     batches = list(open_feed(path, options=LENIENT).batches())
     assert sum(len(b) for b in batches) == 1
-    assert sum(len(b.malformed) for b in batches) == 10 * BATCH_ROWS
-    # less than a batch is held when a block of lines arrives
-    assert max(len(b.malformed) for b in batches) < BATCH_ROWS + (1 << 18) // len(b"bad\n") + 1
+    assert sum(len(b.malformed) for b in batches) == 100 * BATCH_ROWS
+    block = CHUNK_BYTES // len(b"not good\n") + 1
+    assert max(len(b.malformed) for b in batches) <= OUTNUMBERED * BATCH_ROWS + block
+
+
+def test_malformed_rows_do_not_move_the_boundaries_of_batches(tmp_path: Path) -> None:
+    """With three rows of four malformed, batches still end where the sample number divides."""
+    path = tmp_path / "feed.csv"
+    path.write_bytes(b"a,b\n" + b"1,2\nbad\nbad\nbad\n" * (5 * BATCH_ROWS))
+    batches, faults = read(path)
+    assert [len(b) for b in batches] == [BATCH_ROWS] * 5
+    assert len(faults) == 15 * BATCH_ROWS
 
 
 def test_odd_words_in_the_first_rows_do_not_make_a_column_text(tmp_path: Path) -> None:

@@ -114,7 +114,8 @@ class MqttFeed(PieceFeed):
             self._ids = base64.b64decode(position["ids"], validate=True)
             partial = position["partial"]
             if partial is not None:
-                self._partial = (bytes.fromhex(partial["id"]), int(partial["rows"]))
+                rows = whole_number(self.name, dict(partial), "rows")
+                self._partial = (bytes.fromhex(partial["id"]), rows)
         except (KeyError, TypeError, ValueError):
             raise FeedError(f"{self.name}: the position to go on from is damaged") from None
         self._ids = self._ids[: len(self._ids) // ID_BYTES * ID_BYTES]
@@ -169,7 +170,7 @@ class MqttFeed(PieceFeed):
 
     def commit(self, position: Position) -> None:
         """Acknowledge the messages up to a position, in the thread that reads the batches."""
-        self._committed = whole_number(self.name, position, "serial")
+        self._committed = max(self._committed, whole_number(self.name, position, "serial"))
         done = [serial for serial in self._receipts if serial <= self._committed]
         for serial in sorted(done):
             self._connection.acknowledge(self._receipts.pop(serial))

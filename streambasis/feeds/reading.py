@@ -25,6 +25,9 @@ FORMATS = ("csv", "json")
 MOST_TEXT = 4096
 """Characters of a malformed row that are kept."""
 
+OUTNUMBERED = 8
+"""Malformed rows per sample of a whole batch at which a batch is given before its boundary."""
+
 Position = dict[str, Any]
 """Where a feed goes on: JSON things only, made by a feed and understood by that kind of feed."""
 
@@ -332,8 +335,8 @@ def cut(
 
     Notes
     -----
-    Holds less than one batch of samples beside the piece in hand, whatever the length of the feed;
-    malformed rows count as samples in that.
+    Holds less than one batch of samples and OUTNUMBERED times as many malformed rows beside the
+    piece in hand, whatever the length of the feed.
     """
     held = _Held(first, columns)
     for piece in pieces:
@@ -373,7 +376,8 @@ class _Held:
         return bool(self.count or self._malformed)
 
     def full(self, rows: int) -> bool:
-        return len(self._malformed) >= rows
+        # samples that are held stay for their boundary, unless malformed rows by far outnumber them
+        return len(self._malformed) >= (OUTNUMBERED * rows if self.count else rows)
 
     def take(self, piece: Piece, start: int, stop: int) -> None:
         self._values.append(piece.values[start:stop])
