@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import shutil
 import subprocess
 import sys
 import tempfile
@@ -151,15 +152,20 @@ def cold_start(repetitions: int) -> Table:
     }
     push = "; t = time.perf_counter(); streambasis.StreamBasis(8).push(numpy.ones(8))"
     found: dict[str, list[float]] = {name: [] for name in scripts}
+    no_bytecode = shutil.ignore_patterns("__pycache__")
     with tempfile.TemporaryDirectory() as folder:
         for repetition in range(repetitions + 1):
             for name, script in scripts.items():
                 if name.endswith("empty cache") and repetition > 1:
                     continue
-                cache = Path(folder, str(repetition) if name.endswith("empty cache") else "warm")
+                root, cache = ROOT, Path(folder, "warm")
+                if name.endswith("empty cache"):
+                    # a copy of the package, since compiled kernels are also kept in it
+                    root, cache = Path(folder, f"copy{repetition}"), Path(folder, str(repetition))
+                    shutil.copytree(ROOT / "streambasis", root / "streambasis", ignore=no_bytecode)
                 code = f"import time; t = time.perf_counter(); {script}"
                 code += push if name.startswith("first") else ""
-                took = _process(f"{code}; print(time.perf_counter() - t)", cache)
+                took = _process(f"{code}; print(time.perf_counter() - t)", cache, root)
                 if repetition:  # the first round fills the caches of the disk
                     found[name].append(took)
     table = Table(
@@ -175,10 +181,15 @@ def cold_start(repetitions: int) -> Table:
     return table
 
 
-def _process(code: str, cache: Path) -> float:
-    environment = {**os.environ, "PYTHONPATH": str(ROOT), "STREAMBASIS_CACHE_DIR": str(cache)}
+def _process(code: str, cache: Path, root: Path) -> float:
+    environment = {**os.environ, "PYTHONPATH": str(root), "STREAMBASIS_CACHE_DIR": str(cache)}
     done = subprocess.run(
-        [sys.executable, "-c", code], env=environment, capture_output=True, text=True, check=True
+        [sys.executable, "-c", code],
+        env=environment,
+        cwd="/",  # the package is the one of the root and no other
+        capture_output=True,
+        text=True,
+        check=True,
     )
     return float(done.stdout)
 

@@ -311,7 +311,43 @@ class StreamBasis:
             return self._core.triangular()
 
     def push(self, sample: ArrayLike, at: Any = None) -> Decision:
-        """Take one sample, shape (n,), and decide whether it adds a direction."""
+        """Take one sample and decide whether it adds a direction.
+
+        Parameters
+        ----------
+        sample : array_like, shape (n,)
+            One finite value per channel. An array of the dtype of the basis, contiguous and
+            writable, is read where it lies; anything else is converted first. It is neither
+            written to nor kept.
+        at : float, int, datetime.datetime or numpy.datetime64, optional
+            Time of the sample, where there is a window; plain numbers are seconds.
+
+        Returns
+        -------
+        Decision
+            Sample number, norm, residual, tolerance, whether it grew the basis and why (not).
+
+        Raises
+        ------
+        SampleError
+            If the length is wrong, a value is not finite, or the time runs backwards; the message
+            names sample, channel and value. The basis is as it was, bit for bit.
+        SampleTypeError
+            If the values are not numbers, or complex ones for a real basis.
+
+        Notes
+        -----
+        4·n·rank flops; allocates nothing but the answer, and more rows when the basis outgrows
+        them.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> basis = StreamBasis(["inlet", "outlet"])
+        >>> decision = basis.push([3.0, 4.0])
+        >>> decision.norm, decision.grew, decision.reason, decision.rank
+        (5.0, True, 'independent', 1)
+        """
         # a with statement costs 70 ns more than this, and a push of 16 channels 1 us in all
         self._acquire()
         try:
@@ -374,7 +410,39 @@ class StreamBasis:
         return _new(Decision, (*record[:5], REASONS[reason], *record[6:]))
 
     def push_many(self, samples: Any, at: Any = None) -> Decisions:
-        """Take a batch, (m, n) or Arrow, as if pushed one at a time."""
+        """Take a batch of samples as if they were pushed one at a time.
+
+        Parameters
+        ----------
+        samples : array_like of shape (m, n), or an Arrow table or batch
+            All of it is checked before any of it is taken. Arrow columns (pyarrow, polars, pandas,
+            duckdb, ...) are matched to named channels by name.
+        at : array_like of m times, optional
+            Times of the samples, where there is a window.
+
+        Returns
+        -------
+        Decisions
+            The decisions, one array per field; ``to_arrow()`` makes a record batch of them.
+
+        Raises
+        ------
+        SampleError, SampleTypeError
+            As for push; a column that is missing or doubled is named. The basis is as it was.
+
+        Notes
+        -----
+        At the speed of matrix products while the basis does not change. Residuals agree with
+        those of single pushes to 1e-12 of the norm (the same number of roundings in single
+        precision), so a decision differs only where the residual is that close to its tolerance.
+
+        Examples
+        --------
+        >>> from streambasis import StreamBasis
+        >>> decisions = StreamBasis(2).push_many([[1.0, 0.0], [2.0, 0.0], [0.0, 0.5]])
+        >>> decisions.grew
+        array([ True, False,  True])
+        """
         with self._lock:
             first = self._core.count
             checked = many_samples(samples, self._channels, self._dtype, first=first)
