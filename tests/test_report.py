@@ -8,6 +8,7 @@ import io
 import json
 import re
 import shutil
+import sys
 from html.parser import HTMLParser
 from itertools import combinations, pairwise
 from pathlib import Path
@@ -35,6 +36,7 @@ from streambasis.report.reading import STRONGEST, KeptRun, read_run
 from streambasis.report.thinning import NO_TIME, Envelope
 from streambasis.snapshot import read_state
 from streambasis.state import State
+from streambasis.watch.segment import Segment
 from tests.homes import START, make_home, names_of
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
@@ -307,13 +309,9 @@ def test_decisions_that_fill_no_file_yet_are_read(tmp_path: Path) -> None:
     home = make_home(tmp_path / "home", 140_000, 5, 6)
     file = sorted((home / "decisions").iterdir())[-1]
     late = pa.ipc.open_file(file).read_all()
-    held = {
-        name: late[name].fill_null(-1).to_numpy() if name == "event" else late[name].to_numpy()
-        for name in late.schema.names
-    }
-    held["time"] = held["time"].view(np.int64)
-    waiting = State("Segment", {}, held)
-    parts = {"core": read_state(home / "state.arrow"), "decisions": waiting}
+    waiting = Segment(first=int(file.stem))
+    assert waiting.take(late) == len(late)
+    parts = {"core": read_state(home / "state.arrow"), "decisions": waiting.to_state()}
     save(State("Run", {}, {}, parts), home / "state.arrow")
     for gone in (False, True):
         if gone:
@@ -480,6 +478,17 @@ def test_what_is_no_home_is_one_line_and_an_exit_code(
 def cli_columns() -> list[str]:
     """Return the names of the decision columns but the first."""
     return ["time", "spe", "t2", "limit", "t2_limit", "novel", "extreme", "rank", "event"]
+
+
+def test_without_the_extra_the_command_says_what_to_install(
+    monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """An installation without matplotlib names the extra that brings it."""
+    for module in [name for name in sys.modules if name.startswith("streambasis.report")]:
+        monkeypatch.delitem(sys.modules, module)
+    monkeypatch.setitem(sys.modules, "matplotlib", None)
+    assert cli.main(["report", "anything", "--out", "report.html"]) == cli.EXTRA
+    assert "pip install 'streambasis[report]'" in capsys.readouterr().err
 
 
 def test_nothing_to_write_is_a_usage_error(capsys: pytest.CaptureFixture[str]) -> None:
