@@ -15,7 +15,7 @@ import numpy as np
 from bench.harness import Table
 from streambasis import StreamBasis
 from streambasis.audit import unit_roundoff
-from streambasis.kernels import window as kernels
+from streambasis.kernels import exchange
 
 SLIDES = 10_000_000
 CHECKPOINTS = 40
@@ -111,14 +111,14 @@ def reproduction(basis: StreamBasis, rows: np.ndarray) -> float:
     """Return the error of the coordinates kept, in units of max(n, 16) roundoffs."""
     arrays = basis.to_state().parts["core"].arrays
     members, sizes = arrays["members"], arrays["sizes"]
-    order = np.argsort(members[:, kernels.ID])
-    order = order[members[order, kernels.ID] != kernels.NONE]
+    order = np.argsort(members[:, exchange.ID])
+    order = order[members[order, exchange.ID] != exchange.NONE]
     wide = np.complex128 if rows.dtype.kind == "c" else np.float64
-    powers = np.ldexp(1.0, -members[order, kernels.EXPONENT])
+    powers = np.ldexp(1.0, -members[order, exchange.EXPONENT])
     scaled = rows.astype(wide) * powers[:, None]
     made = arrays["coordinates"][order].astype(wide) @ arrays["vectors"].astype(wide)
     outside = np.linalg.norm(scaled - made, axis=1)
-    beyond = np.maximum(outside - sizes[order, kernels.LOST], 0.0)
-    lengths = np.maximum(sizes[order, kernels.LENGTH], 0.5)
+    beyond = np.maximum(outside - sizes[order, exchange.LOST], 0.0)
+    lengths = np.maximum(sizes[order, exchange.LENGTH], 0.5)
     unit = max(rows.shape[1], 16) * unit_roundoff(rows.dtype)
     return float((beyond / lengths).max(initial=0.0) / unit)

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from streambasis.decisions import Decisions, reason_names
 from streambasis.errors import SampleError, SnapshotError, UnknownSampleError
-from streambasis.kernels import growth
+from streambasis.kernels import exchange, growth
 from streambasis.kernels import window as kernels
 from streambasis.kernels._jit import entry
 from streambasis.memory import aligned_zeros, mapped_zeros
@@ -86,19 +86,19 @@ class Window:
         self.timed = span is not None
         self._span = span
         rows, slots = min(FIRST_ROWS, capacity), min(FIRST_SLOTS, window or FIRST_SLOTS)
-        integers = np.zeros(kernels.HEADER + rows, np.int64)
+        integers = np.zeros(exchange.HEADER + rows, np.int64)
         integers[growth.CAPACITY] = capacity
         integers[growth.POLICY] = policy
-        integers[kernels.WINDOW] = window or 0
-        integers[[kernels.OLDEST, kernels.NEWEST, kernels.FREE]] = kernels.NONE
-        integers[kernels.HORIZON] = EARLIEST - 1
+        integers[exchange.WINDOW] = window or 0
+        integers[[exchange.OLDEST, exchange.NEWEST, exchange.FREE]] = exchange.NONE
+        integers[exchange.HORIZON] = EARLIEST - 1
         self._integers = integers
         self._reals = np.array([rtol, atol, 0.0])
         self._scratch = aligned_zeros((2, count), dtype)
         self._directions = aligned_zeros((rows, count), dtype)
-        self._small = aligned_zeros((2 * rows + kernels.WORK, rows), dtype)
+        self._small = aligned_zeros((2 * rows + exchange.WORK, rows), dtype)
         self._coordinates = aligned_zeros((slots, rows), dtype)
-        self._members = np.zeros((slots, kernels.MEMBER), np.int64)
+        self._members = np.zeros((slots, exchange.MEMBER), np.int64)
         self._sizes = np.zeros((slots, 3))
         self._pool = aligned_zeros((0, count), dtype)
         self._bind()
@@ -115,7 +115,7 @@ class Window:
             self._integers,
             self._reals,
         )
-        sample = self._scratch[kernels.RESIDUAL]
+        sample = self._scratch[exchange.RESIDUAL]
         self.step = partial(entry(kernels.push_window, *self.arrays, sample), *self.arrays)
 
     @property
@@ -136,7 +136,7 @@ class Window:
     @property
     def version(self) -> tuple[int, int, int]:
         """What changes when a direction changes."""
-        return self.rank, self.renewals, int(self._integers[kernels.WEAR])
+        return self.rank, self.renewals, int(self._integers[exchange.WEAR])
 
     @property
     def uncovered(self) -> int:
@@ -146,7 +146,7 @@ class Window:
     @property
     def live(self) -> int:
         """Samples in the window."""
-        return int(self._integers[kernels.LIVE])
+        return int(self._integers[exchange.LIVE])
 
     @property
     def renewals(self) -> int:
@@ -161,16 +161,16 @@ class Window:
     @property
     def pivots(self) -> NDArray[np.int64]:
         """Numbers of the pivot samples, one per direction."""
-        numbers: NDArray[np.int64] = self._members[self._holders, kernels.ID]
+        numbers: NDArray[np.int64] = self._members[self._holders, exchange.ID]
         return numbers
 
     @property
     def _holders(self) -> NDArray[np.int64]:
-        return self._integers[kernels.HEADER :][: self.rank]
+        return self._integers[exchange.HEADER :][: self.rank]
 
     @property
     def _owners(self) -> NDArray[np.int64]:
-        owners = self._integers[kernels.HEADER + len(self._directions) :]
+        owners = self._integers[exchange.HEADER + len(self._directions) :]
         return owners[: self._integers[growth.UNCOVERED]]
 
     @property
@@ -181,13 +181,13 @@ class Window:
     @property
     def members(self) -> NDArray[np.int64]:
         """Numbers of the samples in the window, oldest first."""
-        numbers = self._members[: self._integers[kernels.TOP], kernels.ID]
-        return np.sort(numbers[numbers != kernels.NONE])
+        numbers = self._members[: self._integers[exchange.TOP], exchange.ID]
+        return np.sort(numbers[numbers != exchange.NONE])
 
     @property
     def waiting(self) -> NDArray[np.int64]:
         """Numbers of the samples that the capacity leaves uncovered, oldest first."""
-        return np.sort(self._members[self._owners, kernels.ID])
+        return np.sort(self._members[self._owners, exchange.ID])
 
     @property
     def nbytes(self) -> int:
@@ -196,14 +196,14 @@ class Window:
 
     def make_room(self) -> None:
         """See to what the kernel asked for: more slots, rows or copies, or a renewal."""
-        wanted = self._integers[kernels.WANTED]
-        if wanted == kernels.RENEWAL:
+        wanted = self._integers[exchange.WANTED]
+        if wanted == exchange.RENEWAL:
             self.renew()
-        elif wanted == kernels.SLOTS:
-            window = int(self._integers[kernels.WINDOW])
+        elif wanted == exchange.SLOTS:
+            window = int(self._integers[exchange.WINDOW])
             slots = 2 * len(self._members)
             self._allot_slots(min(slots, window) if window else slots)
-        elif wanted == kernels.ROWS:
+        elif wanted == exchange.ROWS:
             rows = 2 * len(self._directions)
             self._allot_rows(min(rows, int(self._integers[growth.CAPACITY])))
         else:
@@ -212,12 +212,12 @@ class Window:
     def _allot_rows(self, rows: int) -> None:
         slots, count = len(self._members), self._directions.shape[1]
         held = len(self._directions)
-        small = aligned_zeros((2 * rows + kernels.WORK, rows), self._small.dtype)
+        small = aligned_zeros((2 * rows + exchange.WORK, rows), self._small.dtype)
         small[:held, :held] = self._small[:held]
         small[rows : rows + held, :held] = self._small[held : 2 * held]
         integers = np.zeros(len(self._integers) + rows - held, np.int64)
-        integers[: kernels.HEADER + held] = self._integers[: kernels.HEADER + held]
-        integers[kernels.HEADER + rows :] = self._integers[kernels.HEADER + held :]
+        integers[: exchange.HEADER + held] = self._integers[: exchange.HEADER + held]
+        integers[exchange.HEADER + rows :] = self._integers[exchange.HEADER + held :]
         directions = _enlarged(self._directions, (rows, count))
         self._coordinates = _enlarged(self._coordinates, (slots, rows))
         self._directions, self._small, self._integers = directions, small, integers
@@ -225,13 +225,13 @@ class Window:
 
     def _allot_slots(self, slots: int) -> None:
         coordinates = _enlarged(self._coordinates, (slots, self._coordinates.shape[1]))
-        members = _enlarged(self._members, (slots, kernels.MEMBER))
+        members = _enlarged(self._members, (slots, exchange.MEMBER))
         self._sizes = _enlarged(self._sizes, (slots, 3))
         self._coordinates, self._members = coordinates, members
         self._bind()
 
     def _allot_copies(self, copies: int) -> None:
-        end = kernels.HEADER + len(self._directions)
+        end = exchange.HEADER + len(self._directions)
         integers = _enlarged(self._integers, (end + copies,))
         self._pool = _enlarged(self._pool, (copies, self._directions.shape[1]))
         self._integers = integers
@@ -251,11 +251,11 @@ class Window:
         integers = self._integers
         if now is None:
             # a sample that was refused may have left its time
-            integers[kernels.NOW : kernels.TIMED + 1] = 0, EARLIEST - 1, 0
+            integers[exchange.NOW : exchange.TIMED + 1] = 0, EARLIEST - 1, 0
             return
-        if integers[kernels.STAMPED] and now < integers[kernels.LAST]:
-            raise _backwards(self.count, now, int(integers[kernels.LAST]), at)
-        integers[kernels.NOW : kernels.TIMED + 1] = now, self._horizon(now), 1
+        if integers[exchange.STAMPED] and now < integers[exchange.LAST]:
+            raise _backwards(self.count, now, int(integers[exchange.LAST]), at)
+        integers[exchange.NOW : exchange.TIMED + 1] = now, self._horizon(now), 1
         self.timed = True
 
     def _check_timed(self, timed: bool) -> None:
@@ -263,7 +263,7 @@ class Window:
             raise SampleError(
                 f"sample {self.count}: a basis with span= needs the time of every sample; give at="
             )
-        if self.count and timed != bool(self._integers[kernels.STAMPED]):
+        if self.count and timed != bool(self._integers[exchange.STAMPED]):
             this, others = ("a time", "none") if timed else ("no time", "one")
             raise SampleError(
                 f"sample {self.count} has {this}, the samples before it have {others}: "
@@ -282,7 +282,7 @@ class Window:
         if at is None:
             return clocks
         times = many_nanoseconds(at, count)
-        first = self._integers[kernels.LAST] if self._integers[kernels.STAMPED] else times[0]
+        first = self._integers[exchange.LAST] if self._integers[exchange.STAMPED] else times[0]
         before = np.concatenate([[first], times[:-1]])
         if (times < before).any():
             row = int((times < before).argmax())
@@ -323,7 +323,7 @@ class Window:
                 if row == end:
                     size *= 2
                     continue
-            self._integers[kernels.NOW : kernels.TIMED + 1] = clocks[row]
+            self._integers[exchange.NOW : exchange.TIMED + 1] = clocks[row]
             answer = self.step(samples[row])
             while answer[5] == growth.NEEDS_ROOM:
                 self.make_room()
@@ -377,8 +377,8 @@ class Window:
             If no sample of this number is in the window.
         """
         gone = 0 <= number < self.count
-        slot = kernels.find(number, self._members, self._integers) if gone else kernels.NONE
-        if slot == kernels.NONE:
+        slot = kernels.find(number, self._members, self._integers) if gone else exchange.NONE
+        if slot == exchange.NONE:
             raise UnknownSampleError(
                 f"sample {number} has already left the window"
                 if gone
@@ -395,11 +395,11 @@ class Window:
             If the samples have no times.
         """
         horizon = nanoseconds(before) - 1
-        if self.live and not self._integers[kernels.STAMPED]:
+        if self.live and not self._integers[exchange.STAMPED]:
             raise SampleError(
                 "expire: the samples of this window have no times; push them with at="
             )
-        return self._forget(kernels.NONE, horizon)
+        return self._forget(exchange.NONE, horizon)
 
     def _forget(self, slot: int, horizon: int) -> tuple[int, int]:
         expired, dropped = kernels.forget(*self.arrays, slot, horizon)
@@ -429,22 +429,22 @@ class Window:
             columns = directions[:, part].astype(wide)
             directions[:, part] = columns - 0.5 * (defect @ columns)
         integers = self._integers
-        if not integers[kernels.VACANT]:
+        if not integers[exchange.VACANT]:
             orthogonal, triangular = np.linalg.qr(self._coordinates[self._holders, :k].T)
             q, r = self._block
             q[:], r[:] = orthogonal.T, triangular
-        integers[kernels.WEAR] = 0
+        integers[exchange.WEAR] = 0
         integers[growth.RENEWALS] += 1
 
     @property
     def coverage(self) -> float:
         """Largest residual of a covered sample over its tolerance, what drops added included."""
-        top = self._integers[kernels.TOP]
-        held = (self._members[:top, kernels.ID] != kernels.NONE) & (
-            self._members[:top, kernels.PLACE] == kernels.NONE
+        top = self._integers[exchange.TOP]
+        held = (self._members[:top, exchange.ID] != exchange.NONE) & (
+            self._members[:top, exchange.PLACE] == exchange.NONE
         )
-        tolerance = self._sizes[:top, kernels.TOLERANCE][held]
-        lost = self._sizes[:top, kernels.LOST][held]
+        tolerance = self._sizes[:top, exchange.TOLERANCE][held]
+        lost = self._sizes[:top, exchange.LOST][held]
         ratio = np.divide(lost, tolerance, out=np.zeros(len(lost)), where=lost > 0)
         return float(ratio.max(initial=0.0))
 
@@ -461,23 +461,23 @@ class Window:
         """
         rotated = coordinates @ self._block[0].conj().T
         growth.solve_rows(np.ascontiguousarray(self.factor), self.rank, rotated)
-        exponents = self._members[self._holders, kernels.EXPONENT]
+        exponents = self._members[self._holders, exchange.EXPONENT]
         return shift_entries(rotated, powers[:, None] - exponents)
 
     def to_state(self) -> State:
         """Hand over the arrays as far as they are in use."""
-        k, top = self.rank, int(self._integers[kernels.TOP])
+        k, top = self.rank, int(self._integers[exchange.TOP])
         q, r = self._block
         chain = _chain(self._members[:top])
-        stamped = chain if self._integers[kernels.STAMPED] else chain[:0]
+        stamped = chain if self._integers[exchange.STAMPED] else chain[:0]
         return State(
             "Window",
             arrays={
                 "vectors": owned(self.directions),
                 # these three are for readers of a snapshot; they follow from the others
                 "pivots": self.pivots,
-                "samples": self._members[chain, kernels.ID],
-                "times": self._members[stamped, kernels.TIME],
+                "samples": self._members[chain, exchange.ID],
+                "times": self._members[stamped, exchange.TIME],
                 "orthogonal": owned(q),
                 "triangular": owned(r),
                 "holders": owned(self._holders),
@@ -486,7 +486,7 @@ class Window:
                 "sizes": owned(self._sizes[:top]),
                 "uncovered": owned(self._pool[: len(self._owners)]),
                 "owners": owned(self._owners),
-                "header": owned(self._integers[: kernels.KEPT]),
+                "header": owned(self._integers[: exchange.KEPT]),
                 "reals": owned(self._reals),
             },
         )
@@ -500,37 +500,37 @@ class Window:
             If they do not fit each other.
         """
         dtype, channels = self._directions.dtype, self._directions.shape[1]
-        header = state.take("header", np.int64, (kernels.KEPT,))
-        k, top, uncovered = (int(header[i]) for i in (growth.RANK, kernels.TOP, growth.UNCOVERED))
+        header = state.take("header", np.int64, (exchange.KEPT,))
+        k, top, uncovered = (int(header[i]) for i in (growth.RANK, exchange.TOP, growth.UNCOVERED))
         vectors = state.take("vectors", dtype, (k, channels))
         orthogonal = state.take("orthogonal", dtype, (k, k))
         triangular = state.take("triangular", dtype, (k, k))
         holders = state.take("holders", np.int64, (k,))
         coordinates = state.take("coordinates", dtype, (top, k))
-        members = state.take("members", np.int64, (top, kernels.MEMBER))
+        members = state.take("members", np.int64, (top, exchange.MEMBER))
         sizes = state.take("sizes", np.float64, (top, 3))
         pool = state.take("uncovered", dtype, (uncovered, channels))
         owners = state.take("owners", np.int64, (uncovered,))
         state.take("pivots", np.int64, (k,))
-        live = len(state.take("samples", np.int64, (int(header[kernels.LIVE]),)))
-        state.take("times", np.int64, (live if header[kernels.STAMPED] else 0,))
+        live = len(state.take("samples", np.int64, (int(header[exchange.LIVE]),)))
+        state.take("times", np.int64, (live if header[exchange.STAMPED] else 0,))
         reals = state.take("reals", np.float64, self._reals.shape, finite=True)
-        slots = [header[[kernels.OLDEST, kernels.NEWEST, kernels.FREE]], holders, owners]
-        slots += [members[:, kernels.OLDER], members[:, kernels.NEWER]]
-        places = members[:, kernels.PLACE]
+        slots = [header[[exchange.OLDEST, exchange.NEWEST, exchange.FREE]], holders, owners]
+        slots += [members[:, exchange.OLDER], members[:, exchange.NEWER]]
+        places = members[:, exchange.PLACE]
         if (
-            any(((each < kernels.NONE) | (each >= top)).any() for each in slots)
-            or ((places < kernels.NONE) | (places >= uncovered)).any()
+            any(((each < exchange.NONE) | (each >= top)).any() for each in slots)
+            or ((places < exchange.NONE) | (places >= uncovered)).any()
             or not k <= header[growth.CAPACITY] <= channels
             or not _linked(header, members)
         ):
             raise SnapshotError(
-                f"a window of {header[kernels.LIVE]} samples on {channels} channels, {k} "
+                f"a window of {header[exchange.LIVE]} samples on {channels} channels, {k} "
                 "directions: its parts do not fit each other"
             )
-        self._integers[: kernels.KEPT] = header
+        self._integers[: exchange.KEPT] = header
         self._reals = reals
-        self.timed = self._span is not None or bool(header[kernels.STAMPED])
+        self.timed = self._span is not None or bool(header[exchange.STAMPED])
         # an uncovered sample means that the rows have once reached the capacity
         rows = int(header[growth.CAPACITY]) if uncovered else k
         self._allot_rows(max(rows, len(self._directions)))
@@ -546,24 +546,24 @@ class Window:
 
 def _chain(members: NDArray[np.int64]) -> NDArray[np.intp]:
     """Return the slots in use, oldest sample first."""
-    used = np.flatnonzero(members[:, kernels.ID] != kernels.NONE)
-    return used[np.argsort(members[used, kernels.ID], kind="stable")]
+    used = np.flatnonzero(members[:, exchange.ID] != exchange.NONE)
+    return used[np.argsort(members[used, exchange.ID], kind="stable")]
 
 
 def _linked(header: NDArray[np.int64], members: NDArray[np.int64]) -> bool:
     """Return whether the links lead from the oldest to the newest sample, and over free slots."""
     chain = _chain(members)
-    free = np.flatnonzero(members[:, kernels.ID] == kernels.NONE)
-    around = np.pad(chain, 1, constant_values=kernels.NONE)
+    free = np.flatnonzero(members[:, exchange.ID] == exchange.NONE)
+    around = np.pad(chain, 1, constant_values=exchange.NONE)
     # each free slot is led to by exactly one other or by the header, the last one leads nowhere
-    leads = np.concatenate([header[[kernels.FREE]], members[free, kernels.NEWER]])
+    leads = np.concatenate([header[[exchange.FREE]], members[free, exchange.NEWER]])
     return bool(
-        header[kernels.LIVE] == len(chain)
-        and header[kernels.OLDEST] == around[1]
-        and header[kernels.NEWEST] == around[-2]
-        and (members[chain, kernels.OLDER] == around[:-2]).all()
-        and (members[chain, kernels.NEWER] == around[2:]).all()
-        and (np.sort(leads) == np.concatenate([[kernels.NONE], free])).all()
+        header[exchange.LIVE] == len(chain)
+        and header[exchange.OLDEST] == around[1]
+        and header[exchange.NEWEST] == around[-2]
+        and (members[chain, exchange.OLDER] == around[:-2]).all()
+        and (members[chain, exchange.NEWER] == around[2:]).all()
+        and (np.sort(leads) == np.concatenate([[exchange.NONE], free])).all()
     )
 
 

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from streambasis import StreamBasis
 from streambasis.audit import orthogonality, unit_roundoff
-from streambasis.kernels import growth, window
+from streambasis.kernels import exchange, growth
 
 
 @dataclass
@@ -85,26 +85,26 @@ def laid_open(basis: StreamBasis) -> dict[str, NDArray]:
     arrays = core.arrays
     header, members = arrays["header"], arrays["members"]
     k = len(arrays["vectors"])
-    order, slot, newer = [], int(header[window.NEWEST]), window.NONE
-    while slot != window.NONE:
-        assert members[slot, window.NEWER] == newer
+    order, slot, newer = [], int(header[exchange.NEWEST]), exchange.NONE
+    while slot != exchange.NONE:
+        assert members[slot, exchange.NEWER] == newer
         order.append(slot)
-        newer, slot = slot, int(members[slot, window.OLDER])
-    assert newer == header[window.OLDEST]
+        newer, slot = slot, int(members[slot, exchange.OLDER])
+    assert newer == header[exchange.OLDEST]
     order.reverse()
-    free, slot = [], int(header[window.FREE])
-    while slot != window.NONE:
+    free, slot = [], int(header[exchange.FREE])
+    while slot != exchange.NONE:
         free.append(slot)
-        slot = int(members[slot, window.NEWER])
-    assert sorted(order + free) == list(range(header[window.TOP]))
-    assert len(order) == header[window.LIVE]
-    numbers = members[order, window.ID]
+        slot = int(members[slot, exchange.NEWER])
+    assert sorted(order + free) == list(range(header[exchange.TOP]))
+    assert len(order) == header[exchange.LIVE]
+    numbers = members[order, exchange.ID]
     assert (np.diff(numbers) > 0).all()
     holders = arrays["holders"].astype(int)
-    assert sorted(holders) == sorted(s for s in order if members[s, window.PIVOT] == 1)
+    assert sorted(holders) == sorted(s for s in order if members[s, exchange.PIVOT] == 1)
     assert header[growth.RANK] == len(holders) == k
     owners = arrays["owners"].astype(int)
-    assert [members[s, window.PLACE] for s in owners] == list(range(len(owners)))
+    assert [members[s, exchange.PLACE] for s in owners] == list(range(len(owners)))
     assert not set(owners) & set(holders)
     unit = unit_roundoff(arrays["vectors"].dtype)
     q, r = arrays["orthogonal"].T, arrays["triangular"]
@@ -118,10 +118,10 @@ def laid_open(basis: StreamBasis) -> dict[str, NDArray]:
     return {
         "numbers": numbers,
         "coordinates": arrays["coordinates"][order],
-        "exponents": members[order, window.EXPONENT],
-        "lengths": arrays["sizes"][order, window.LENGTH],
-        "tolerances": arrays["sizes"][order, window.TOLERANCE],
-        "lost": arrays["sizes"][order, window.LOST],
+        "exponents": members[order, exchange.EXPONENT],
+        "lengths": arrays["sizes"][order, exchange.LENGTH],
+        "tolerances": arrays["sizes"][order, exchange.TOLERANCE],
+        "lost": arrays["sizes"][order, exchange.LOST],
         "vectors": arrays["vectors"],
     }
 

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 
 import streambasis
 from streambasis.errors import SnapshotError
-from streambasis.kernels import window as kernels
+from streambasis.kernels import exchange
 from streambasis.snapshot import from_bytes, load, save, state_from_bytes, to_bytes
 from streambasis.state import State
 
@@ -354,16 +354,16 @@ def test_broken_links_between_the_samples_of_a_window_are_refused() -> None:
     assert from_bytes(good).count == 20
     slots, links = state_from_bytes(good).parts["core"].arrays["members"].shape
     for slot in range(slots):
-        for link in (kernels.OLDER, kernels.NEWER):
+        for link in (exchange.OLDER, exchange.NEWER):
             state = state_from_bytes(good)
             members = state.parts["core"].arrays["members"].copy()
-            if members[slot, kernels.ID] == kernels.NONE and link == kernels.OLDER:
+            if members[slot, exchange.ID] == exchange.NONE and link == exchange.OLDER:
                 continue  # a free slot is linked one way only
             members[slot, link] = (members[slot, link] + 1) % slots
             state.parts["core"].arrays["members"] = members
             with pytest.raises(SnapshotError, match="do not fit each other"):
                 from_bytes(to_bytes(state))
-    assert links == kernels.MEMBER
+    assert links == exchange.MEMBER
 
 
 def test_the_samples_of_a_window_are_plain_columns() -> None:
