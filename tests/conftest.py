@@ -4,6 +4,10 @@ from __future__ import annotations
 
 import os
 
+# the products of the tests are small: on a busy machine a second BLAS thread is only waited for;
+# numpy reads this when it loads
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 import pytest
 from hypothesis import settings
 
