@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from functools import partial
+from collections.abc import Callable
+from functools import cache, partial
 from typing import Any
 
 import numpy as np
@@ -26,9 +27,9 @@ slow as reading the directions."""
 MOST_ROWS = 512
 EXACT = 2.0**-42
 """A sample this close, relative to its norm, to what a few of its channels say it should be is in
-the span: the distance bounds its residual, and is reported as such. It is far above rounding, which
-is ``rank`` epsilons times ``MOST_SPREAD`` at the very worst and two epsilons as a rule, and far
-below LEAST_RTOL."""
+the span: the distance bounds its residual, and is reported as such. Rounding is a few epsilons as
+a rule, and ``rank`` epsilons times ``MOST_SPREAD`` at the very worst, which is still far below
+LEAST_RTOL."""
 LEAST_RTOL = 2.0**-30
 MOST_SPREAD = 16.0
 """Largest entry of an interpolation that is used: it multiplies rounding. Partial pivoting leaves
@@ -266,14 +267,14 @@ class Growth:
             assert self.interpolation is not None
             _, picked, rows = self.interpolation
             np.matmul(samples.take(picked, axis=1), rows, out=room)
-            blocks.measure_interpolated(samples, room, measures)
+            measure_interpolated(samples.dtype)(samples, room, measures)
             exactness = EXACT
         elif len(room):
             coefficients = self._projected(samples, room)
-            blocks.measure_block(samples, room, coefficients, measures)
+            measure_block(samples.dtype)(samples, room, coefficients, measures)
         start = 0
         while True:
-            start = blocks.decide_block(
+            start = decide_block(samples.dtype)(
                 *self.arrays, samples, room, measures, exactness, start, floats, whole
             )
             if start == len(samples):
@@ -358,6 +359,36 @@ class Growth:
             self.integers[: kernels.HEADER] = header
         self.reals = reals
         self._bind()
+
+
+# The kernels of a block are taken as compiled for arrays of one kind: a read-only batch or a part
+# of the answer would otherwise be a kind of its own, and compile for seconds amid a feed.
+
+
+@cache
+def measure_block(dtype: np.dtype[Any]) -> Callable[..., Any]:
+    """Return the compiled kernel that measures projected samples of a dtype."""
+    rows = np.zeros((1, 1), dtype)
+    return entry(blocks.measure_block, rows, rows, rows, np.zeros((3, 1)))
+
+
+@cache
+def measure_interpolated(dtype: np.dtype[Any]) -> Callable[..., Any]:
+    """Return the compiled kernel that measures interpolated samples of a dtype."""
+    rows = np.zeros((1, 1), dtype)
+    return entry(blocks.measure_interpolated, rows, rows, np.zeros((3, 1)))
+
+
+@cache
+def decide_block(dtype: np.dtype[Any]) -> Callable[..., Any]:
+    """Return the compiled kernel that decides the samples of a block of a dtype."""
+    rows = np.zeros((1, 1), dtype)
+    part, whole_part = np.zeros((3, 2))[:, :1], np.zeros((3, 2), np.int64)[:, :1]
+    return entry(
+        blocks.decide_block,
+        *(rows, rows, rows[0], np.zeros(1, np.int64), np.zeros(1)),
+        *(rows, rows, np.zeros((3, 1)), 0.0, 0, part, whole_part),
+    )
 
 
 def interpolation(directions: NDArray[Any]) -> tuple[NDArray[np.int64], NDArray[Any]]:

@@ -136,3 +136,18 @@ def test_bytes_of_an_interpolation_are_told() -> None:
     basis.push_many(samples[20:200])
     basis.push_many(samples[200:])
     assert before < basis.nbytes <= before + 2 * 6 * 48 * 8
+
+
+@pytest.mark.parametrize("dtype", ["float32", "float64", "complex128"])
+def test_no_batch_makes_a_feed_wait_for_a_compiler(dtype: str) -> None:
+    """Read-only, short, long and Fortran-ordered batches run the kernels that are there."""
+    samples = exact_feed(dtype, 700)
+    StreamBasis(48, dtype=dtype).push_many(samples)
+    kernels_used = (block.decide_block, block.measure_block, block.measure_interpolated)
+    known = [len(kernel.overloads) for kernel in kernels_used]
+    frozen = samples.copy()
+    frozen.setflags(write=False)
+    basis = StreamBasis(48, dtype=dtype)
+    for batch in (frozen, frozen[:5], samples[:100], np.asfortranarray(samples), samples[::2]):
+        assert len(basis.push_many(batch)) == len(batch)
+    assert [len(kernel.overloads) for kernel in kernels_used] == known
