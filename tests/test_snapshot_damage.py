@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import json
+import os
 import subprocess
 import sys
 from collections.abc import Callable
@@ -363,7 +364,7 @@ def test_mutated_snapshots_neither_crash_nor_hang_nor_load(tmp_path: Path) -> No
         subprocess.Popen(
             [sys.executable, str(TESTS / "mutations.py"), str(tmp_path), str(seed), str(share)],
             cwd=TESTS.parent,
-            env={"PYTHONPATH": str(TESTS.parent), "PATH": "/usr/bin:/bin"},
+            env={**os.environ, "PYTHONPATH": str(TESTS.parent)},
             stdout=subprocess.PIPE,
             stderr=subprocess.PIPE,
             text=True,

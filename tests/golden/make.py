@@ -39,6 +39,14 @@ def stream() -> Any:
     return basis
 
 
+def window() -> Any:
+    """Return a basis over a window with times, more samples than directions, and one taken back."""
+    basis = streambasis.StreamBasis(CHANNELS, window=12, span=60, capacity=3)
+    basis.push_many(samples(40), at=np.arange(40) * 0.5)
+    basis.retract(33)
+    return basis
+
+
 def principal() -> Any:
     """Return a principal basis with samples that wait for their block."""
     basis = streambasis.PrincipalBasis(CHANNELS, rank=2, half_life=500, centre=True, block=16)
@@ -68,6 +76,7 @@ def monitor() -> Any:
 
 MAKERS: dict[str, Callable[[], Any]] = {
     "stream": stream,
+    "window": window,
     "principal": principal,
     "learning": learning,
     "monitor": monitor,
@@ -99,6 +108,8 @@ def facts(obj: Any) -> dict[str, Any]:
         told |= {"energies": basis.energies.tolist(), "noise": basis.noise}
     else:
         told["pivots"] = basis.pivots.tolist()
+        if basis.window is not None:
+            told["members"] = basis.members.tolist()
     return told
 
 
