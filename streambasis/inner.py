@@ -33,7 +33,7 @@ class Inner:
     ------
     SettingError
         If the shape is neither, a weight is not positive and finite, or the matrix is not
-        Hermitian positive definite.
+        Hermitian positive definite, or the range of the dtype does not hold their square roots.
 
     Notes
     -----
@@ -97,9 +97,15 @@ class Inner:
         return self.given.nbytes + self._into.nbytes + self._out.nbytes
 
     def _typed(self, array: NDArray[Any]) -> NDArray[Any]:
-        if array.dtype.kind != "c" and self.kind == "weights":
-            return array.astype(np.finfo(self.dtype).dtype)
-        return array.astype(self.dtype)
+        real = array.dtype.kind != "c" and self.kind == "weights"
+        with np.errstate(over="ignore", under="ignore"):
+            typed = array.astype(np.finfo(self.dtype).dtype if real else self.dtype)
+        if not np.isfinite(typed).all() or (real and not typed.all()):
+            raise SettingError(
+                f"inner: the {self.kind} go beyond the range of {self.dtype}; scale them, "
+                "or take a wider dtype"
+            )
+        return typed
 
     def enter(self, samples: NDArray[Any]) -> NDArray[Any]:
         """Take channel-unit samples, (n,) or (m, n), into Euclidean coordinates."""

@@ -138,7 +138,7 @@ def many_nanoseconds(at: ArrayLike, count: int) -> NDArray[np.int64]:
             f"times of type {array.dtype}: give seconds, datetime or numpy.datetime64"
         )
     row = int(bad.argmax())
-    raise SampleError(f"row {row}: time {array[row]!r} is no number of seconds within 292 years")
+    raise SampleError(f"row {row}: time {array[row]} is no number of seconds within 292 years")
 
 
 def _of_row(row: int, at: Any) -> int:

@@ -70,3 +70,10 @@ def test_what_was_given_is_kept_apart() -> None:
     inner = Inner(weights, 2, np.dtype("float64"))
     weights[:] = 100
     np.testing.assert_array_equal(inner.enter(np.ones(2)), [1, 2])
+
+
+@pytest.mark.parametrize("given", [[1e80, 1.0, 1.0], [1e-100, 1.0, 1.0], np.eye(3) * 1e80])
+def test_what_the_dtype_cannot_hold_is_refused(given: Any) -> None:
+    """Weights whose square roots single precision turns into infinity or zero are refused."""
+    with pytest.raises(SettingError, match="beyond the range of float32"):
+        Inner(np.asarray(given), 3, np.dtype("float32"))
