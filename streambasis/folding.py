@@ -470,6 +470,8 @@ class Subspace:
         state.take("energies", np.float64, singular.shape)
         mean = state.take("mean", dtype, (count,), finite=True)
         sums = state.take("sums", np.float64, (4,), finite=True)
+        if (sums < 0).any() or (singular < 0).any():
+            raise SnapshotError("a weight, a sum of squares or a spread is negative")
         self.exponent, self.renewals = int(state.facts["exponent"]), int(state.facts["renewals"])
         self.held = len(directions)
         self.stack[: self.held] = directions

@@ -250,6 +250,21 @@ def test_a_state_that_does_not_fit_together_is_refused(name: str, dtype: str) ->
     assert spoiled > 10
 
 
+@pytest.mark.parametrize("name", ["sums", "singular"])
+def test_squares_and_spreads_below_zero_are_refused(name: str) -> None:
+    """Weights, sums of squares and spreads along directions are never negative in a real run."""
+    basis = streambasis.PrincipalBasis(4)
+    basis.push_many(np.random.default_rng(6).normal(size=(50, 4)))
+    for position in range(4):
+        state = basis.to_state()
+        (held,) = (part for part, array in arrays_of(state) if array == name)
+        held.arrays[name] = held.arrays[name].copy()
+        held.arrays[name][position] *= -1
+        if held.arrays[name][position] < 0:
+            with pytest.raises(SnapshotError, match="negative"):
+                from_bytes(to_bytes(state))
+
+
 def arrays_of(state: State) -> list[tuple[State, str]]:
     """Return every array with its state, parts included."""
     found = [(state, name) for name in state.arrays]
