@@ -15,6 +15,9 @@ import secrets
 from collections.abc import Callable
 
 OWNER_ONLY = 0o600
+PIECE = 1 << 23
+BEHIND = 1 << 25
+"""Bytes between two words to the kernel; a shorter file stays in the page cache as it is."""
 _CREATE = os.O_RDWR | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC
 _NO_FOLDER_SYNC = {errno.EINVAL, errno.ENOTSUP}
 
@@ -73,6 +76,36 @@ def write_all(descriptor: int, data: bytes | bytearray | memoryview) -> None:
     rest = memoryview(data).cast("B")
     while rest.nbytes:
         rest = rest[os.write(descriptor, rest) :]
+
+
+class Outflow:
+    """Writes a large file through a small part of the page cache.
+
+    Every ``BEHIND`` bytes the kernel is told that what was written is not needed again: it starts
+    to write it to the disk, and gives the pages of what is already there to the bytes to come.
+    Without that the new file takes as many fresh pages as it is long while the old one still
+    holds its own; measured on 512 MiB, that took up to three times as long as writing.
+
+    Parameters
+    ----------
+    descriptor : int
+        A file open for writing, at its beginning.
+    """
+
+    def __init__(self, descriptor: int) -> None:
+        self._descriptor = descriptor
+        self._written = self._told = 0
+
+    def write(self, data: bytes | bytearray | memoryview) -> None:
+        """Write every byte."""
+        rest = memoryview(data).cast("B")
+        while rest.nbytes:
+            piece, rest = rest[:PIECE], rest[PIECE:]
+            write_all(self._descriptor, piece)
+            self._written += piece.nbytes
+            if self._written - self._told >= BEHIND and hasattr(os, "posix_fadvise"):
+                os.posix_fadvise(self._descriptor, 0, self._written, os.POSIX_FADV_DONTNEED)
+                self._told = self._written
 
 
 def sync_folder(folder: str | os.PathLike[str]) -> None:

@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from streambasis.audit import LEAST_DIMENSION, ORTHOGONALITY_LIMIT, orthogonality, unit_roundoff
 from streambasis.errors import SnapshotError, SnapshotFileError, SnapshotMissingError
-from streambasis.files import OWNER_ONLY, remove_leftovers, replace_file, write_all
+from streambasis.files import OWNER_ONLY, Outflow, remove_leftovers, replace_file
 from streambasis.layout import parsed_outline, read_arrow, write_arrow
 from streambasis.seal import (
     FORMAT,
@@ -97,7 +97,7 @@ def save(obj: Stateful | State, path: str | os.PathLike[str], *, mode: int = OWN
 
     def write(descriptor: int) -> None:
         with Digest() as digest:
-            sink = _Sink(digest, lambda data: write_all(descriptor, data))
+            sink = _Sink(digest, Outflow(descriptor).write)
             write_arrow(state, sink)
             head, tail = os.pread(descriptor, 16, 0), os.pread(descriptor, 10, sink.size - 10)
             places = regions(head, tail, sink.size)

@@ -17,7 +17,8 @@ from pathlib import Path
 import pytest
 from faults import Disk, Faults, PowerCut
 
-from streambasis.files import remove_leftovers, replace_file, write_all
+from streambasis import files
+from streambasis.files import Outflow, remove_leftovers, replace_file, write_all
 
 OLD, NEW = b"old content", b"new content, which is longer"
 KILLS = 20
@@ -254,3 +255,22 @@ def test_permissions_are_as_told_whatever_the_umask(tmp_path: Path) -> None:
         assert stat.S_IMODE(path.stat().st_mode) == 0o644
     finally:
         os.umask(before)
+
+
+def test_a_large_file_flows_out_whole(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Whatever the sizes of the writes, every byte arrives, and pages are given back meanwhile."""
+    monkeypatch.setattr(files, "PIECE", 5)
+    monkeypatch.setattr(files, "BEHIND", 16)
+    told: list[int] = []
+    monkeypatch.setattr(os, "posix_fadvise", lambda *call: told.append(call[2]))
+    content = random.Random(3).randbytes(200)
+
+    def write(descriptor: int) -> None:
+        flow = Outflow(descriptor)
+        for start, stop in ((0, 0), (0, 1), (1, 90), (90, 93), (93, 200)):
+            flow.write(content[start:stop])
+
+    replace_file(tmp_path / "file", write)
+    assert (tmp_path / "file").read_bytes() == content
+    assert len(told) >= 200 // (16 + 5)
+    assert all(16 <= b - a <= 16 + 5 for a, b in zip([0, *told], told, strict=False))
