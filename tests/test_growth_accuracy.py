@@ -133,14 +133,14 @@ def test_trefethen_and_bau_eighty_columns(seed: int) -> None:
 
 
 def test_trefethen_and_bau_two_columns() -> None:
-    """Same lecture: MGS loses 2.3e-11 on two nearly parallel columns, Householder 2e-16 (M)."""
+    """Same book: MGS loses 2.3e-11 on two nearly parallel columns, Householder 2e-16 (M)."""
     columns = np.array([[0.70000, 0.70711], [0.70001, 0.70711]])
     assert 1e-11 < loss(factorized(columns, reorthogonalize="never")) < 5e-11
     assert loss(factorized(columns)) < 4e-16
 
 
 def test_discrete_legendre_polynomials() -> None:
-    """Same lecture: orthogonalized powers on 257 points against P2 and P3; 129/255 - 1/2 (V)."""
+    """Same book: orthogonalized powers on 257 points against P2 and P3; 129/255 - 1/2 (V)."""
     x = np.arange(-128, 129) / 128
     basis = factorized(np.vander(x, 4, increasing=True))
     shapes = basis.vectors / basis.vectors[:, -1:]
