@@ -36,7 +36,7 @@ class Terminal:
     as_json : bool
         Closed events go to ``out`` as JSON lines, everything made for reading to ``err``.
     quiet : bool
-        Nothing made for reading is written.
+        Nothing made for reading is written but warnings.
 
     Notes
     -----
@@ -48,6 +48,7 @@ class Terminal:
         self, out: TextIO, err: TextIO, *, total: int | None, as_json: bool, quiet: bool
     ) -> None:
         self._json = out if as_json else None
+        self._err = err
         self._lines = None if quiet else err if as_json else out
         self._progress: Progress | None = None
         if self._lines is not None and self._lines.isatty() and not (as_json and out.isatty()):
@@ -109,6 +110,11 @@ class Terminal:
         """Show that an event counts as known behaviour from now on."""
         self._write(f"event {event['event']} adopted  it lasts: known behaviour from now on")
 
+    def warned(self, warning: str) -> None:
+        """Show what somebody must know, on standard error and as one line, quiet or not."""
+        self._err.write(f"streambasis: {one_line(warning)}\n")
+        self._err.flush()
+
     def summary(self, summary: Summary) -> None:
         """Show what the run came to."""
         for line in summary_lines(summary):
@@ -122,6 +128,11 @@ class Terminal:
         else:
             self._lines.write(line + "\n")
             self._lines.flush()
+
+
+def one_line(text: str) -> str:
+    """Return a text in which nothing breaks the line or moves the cursor."""
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in text)
 
 
 def when(event: Event, side: str) -> str:

@@ -41,6 +41,10 @@ class Vitals:
         Earlier processes of this run.
     unkept : str or None
         Why the disk does not take what the run keeps; None while it does.
+    unsound : str or None
+        What the last audit found wrong and did not repair; None while all is well.
+    busy_since : float or None
+        Monotonic clock when the batch in hand was taken up; None while the loop waits for one.
     """
 
     samples: int = 0
@@ -66,3 +70,5 @@ class Vitals:
     malformed: int = 0
     restarts: int = 0
     unkept: str | None = None
+    unsound: str | None = None
+    busy_since: float | None = None
