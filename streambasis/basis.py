@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 import threading
-from collections.abc import Iterable, Iterator
-from contextlib import contextmanager
+from collections.abc import Iterable
 from operator import index
 from typing import Any, Self
 
@@ -12,28 +11,21 @@ import numpy as np
 from numpy import ndarray
 from numpy.typing import ArrayLike, DTypeLike, NDArray
 
-from streambasis.audit import Audit, orthogonality
+from streambasis.basis_settings import Settings
 from streambasis.decisions import REASONS, Decision, Decisions
-from streambasis.errors import SampleError, SettingError
+from streambasis.errors import SampleError
 from streambasis.growth import Growth
 from streambasis.inner import Inner, inner_of
+from streambasis.inspection import Inspectable
 from streambasis.kernels import growth as kernels
-from streambasis.projecting import powers_taken_out, scaled_rows, two_passes
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
-from streambasis.state import State, lending
-from streambasis.times import span_nanoseconds
+from streambasis.state import Saveable, State
 from streambasis.window import Window
-
-POLICIES = {
-    "criterion": kernels.CRITERION,
-    "never": kernels.NEVER,
-    "always": kernels.ALWAYS,
-}
 
 _new = tuple.__new__
 
 
-class StreamBasis:
+class StreamBasis(Inspectable, Saveable):
     """An orthonormal basis of all samples so far, or of those in a sliding window.
 
     Parameters
@@ -117,21 +109,7 @@ class StreamBasis:
     StreamBasis(3 channels, rank 1 of at most 3, 2 samples, float64)
     """
 
-    __slots__ = (
-        "_acquire",
-        "_channels",
-        "_core",
-        "_dtype",
-        "_inner",
-        "_lock",
-        "_plain",
-        "_release",
-        "_shape",
-        "_span",
-        "_step",
-        "_vectors",
-        "_window",
-    )
+    __slots__ = ("_acquire", "_release", "_shape", "_step")
 
     def __init__(
         self,
@@ -149,28 +127,25 @@ class StreamBasis:
         self._channels = Channels(channels)
         count = self._channels.count
         self._dtype = checked_dtype(dtype)
-        if reorthogonalize not in POLICIES:
-            raise SettingError(f"reorthogonalize={reorthogonalize!r}: one of {', '.join(POLICIES)}")
         self._inner = Inner(inner, count, self._dtype)
-        self._window = None if window is None else _checked_window(window)
-        self._span = None if span is None else span_nanoseconds(span)
-        settings = (
+        settings = Settings.checked(
             count,
-            _checked_capacity(capacity, count, self._window),
-            *_checked_tolerances(rtol, atol, float(np.finfo(self._dtype).eps)),
-            POLICIES[reorthogonalize],
             self._dtype,
+            rtol=rtol,
+            atol=atol,
+            capacity=capacity,
+            window=window,
+            span=span,
+            reorthogonalize=reorthogonalize,
         )
-        self._core: Growth | Window = (
-            Growth(*settings)
-            if window is None and span is None
-            else Window(*settings, self._window, self._span)
-        )
+        self._window, self._span = settings.window, settings.span
+        core = Window if settings.forgets else Growth
+        self._core = core(count, settings, self._dtype)
         self._lock = threading.Lock()
         self._acquire, self._release = self._lock.acquire, self._lock.release
         self._shape = (count,)
         self._plain = self._inner.kind == "euclidean"
-        self._vectors: tuple[Any, NDArray[Any]] | None = None
+        self._vectors = None
         self._bind()
 
     def _bind(self) -> None:
@@ -181,134 +156,6 @@ class StreamBasis:
             f"StreamBasis({len(self._channels)} channels, rank {self.rank} of at most "
             f"{self.capacity}, {self.count} samples, {self._dtype})"
         )
-
-    def __reduce__(self) -> tuple[Any, ...]:
-        return type(self).from_state, (self.to_state(),)
-
-    @property
-    def channels(self) -> tuple[str, ...]:
-        """Names of the channels."""
-        return self._channels.names
-
-    @property
-    def dtype(self) -> np.dtype[Any]:
-        """Type of the samples and directions."""
-        return self._dtype
-
-    @property
-    def rank(self) -> int:
-        """Directions held."""
-        return self._core.rank
-
-    @property
-    def capacity(self) -> int:
-        """Most directions that are kept."""
-        return self._core.capacity
-
-    @property
-    def window(self) -> int | None:
-        """Most samples kept, None where their number is not limited."""
-        return self._window
-
-    @property
-    def span(self) -> np.timedelta64 | None:
-        """Length of time kept, None where it is not limited."""
-        return None if self._span is None else np.timedelta64(self._span, "ns")
-
-    @property
-    def members(self) -> NDArray[np.int64]:
-        """Numbers of the samples in the window, oldest first.
-
-        Raises
-        ------
-        SettingError
-            Without a window, since no single sample is kept.
-        """
-        with self._lock:
-            return self._windowed("members").members
-
-    @property
-    def uncovered(self) -> NDArray[np.int64]:
-        """Numbers of the samples of the window that the capacity leaves outside the span.
-
-        Oldest first, which is the order in which they take their place when a direction is
-        dropped; they are among the pivots, or covered, from then on.
-
-        Raises
-        ------
-        SettingError
-            Without a window, since no single sample is kept; the audit counts them.
-        """
-        with self._lock:
-            return self._windowed("uncovered").waiting
-
-    def _windowed(self, what: str) -> Window:
-        if isinstance(self._core, Window):
-            return self._core
-        raise SettingError(
-            f"{what}: a basis without a window keeps no samples and cannot forget; "
-            "make it with window= or span="
-        )
-
-    @property
-    def count(self) -> int:
-        """Samples seen."""
-        return self._core.count
-
-    @property
-    def nbytes(self) -> int:
-        """Bytes of the arrays held; push_many takes its workspace anew and gives it back."""
-        return self._core.nbytes + self._inner.nbytes
-
-    @property
-    def vectors(self) -> NDArray[Any]:
-        """The directions in channel units, (rank, n), read-only; rows orthonormal in ``inner``.
-
-        Notes
-        -----
-        Without an inner product and a window this is a view, and costs nothing; otherwise one of
-        n·rank entries is computed when the directions have changed, and kept.
-        """
-        with self._lock:
-            version = self._core.version
-            if self._vectors is None or self._vectors[0] != version:
-                held = self._core.directions
-                if not self._plain:
-                    out = self._inner.leave(held)
-                else:
-                    # the directions of a window are rotated where they are
-                    out = held.copy() if isinstance(self._core, Window) else held.view()
-                out.setflags(write=False)
-                self._vectors = version, out
-            return self._vectors[1]
-
-    @property
-    def pivots(self) -> NDArray[np.int64]:
-        """Number of the pivot sample of each direction, (rank,)."""
-        with self._lock:
-            return self._core.pivots.copy()
-
-    @property
-    def triangular(self) -> NDArray[Any]:
-        """The lower triangular factor L, (rank, rank), with ``pivot samples = L @ vectors``.
-
-        Notes
-        -----
-        Its transpose is the R of a QR factorization of the pivot samples as columns; the diagonal
-        is positive. An entry beyond the range of the dtype is infinite or 0.
-
-        Raises
-        ------
-        SettingError
-            With a window, whose directions are not in the order of its pivot samples.
-        """
-        with self._lock:
-            if isinstance(self._core, Window):
-                raise SettingError(
-                    "triangular: the directions of a window are not in the order of its pivot "
-                    "samples; coordinates(pivot samples) is what ties them together"
-                )
-            return self._core.triangular()
 
     def push(self, sample: ArrayLike, at: Any = None) -> Decision:
         """Take one sample and decide whether it adds a direction.
@@ -456,112 +303,6 @@ class StreamBasis:
             finally:
                 self._bind()
 
-    def coordinates(self, x: Any) -> NDArray[Any]:
-        """Return the inner products of the directions with x.
-
-        Parameters
-        ----------
-        x : array_like of shape (n,) or (m, n), or an Arrow table
-            In channel units. Nothing of the basis changes.
-
-        Returns
-        -------
-        ndarray, shape (rank,) or (m, rank)
-            With ``x ≈ coordinates @ vectors`` for an x in the span.
-
-        Notes
-        -----
-        Two passes, 8·n·rank flops for each row; the error is of the order of eps·|x|.
-
-        Examples
-        --------
-        >>> from streambasis import StreamBasis
-        >>> basis = StreamBasis(2)
-        >>> _ = basis.push([0.0, 2.0])
-        >>> basis.coordinates([[3.0, 4.0], [4.0, 0.0]])
-        array([[4.],
-               [0.]])
-        """
-        rows, powers, single = self._rows(x)
-        coordinates, _, _ = self._split(rows)
-        out = scaled_rows(coordinates, powers)
-        return out[0] if single else out
-
-    def project(self, x: Any) -> NDArray[Any]:
-        """Return the part of x inside the span, in channel units; parameters as for coordinates."""
-        rows, powers, single = self._rows(x)
-        coordinates, _, directions = self._split(rows)
-        out = self._inner.leave(scaled_rows(coordinates @ directions, powers))
-        return out[0] if single else out
-
-    def residual(self, x: Any) -> NDArray[Any]:
-        """Return the part of x outside the span, in channel units; parameters as for coordinates.
-
-        Notes
-        -----
-        Its norm agrees with the one that push reports to within rounding of |x|.
-        """
-        rows, powers, single = self._rows(x)
-        out = self._inner.leave(scaled_rows(self._split(rows)[1], powers))
-        return out[0] if single else out
-
-    def explain(self, x: Any) -> tuple[NDArray[np.int64], NDArray[Any], NDArray[Any]]:
-        """Write x as a combination of the pivot samples, and what they cannot explain.
-
-        Parameters
-        ----------
-        x : array_like of shape (n,) or (m, n), or an Arrow table
-            In channel units. Nothing of the basis changes.
-
-        Returns
-        -------
-        sample_ids : ndarray of int64, shape (rank,)
-            Numbers of the pivot samples.
-        weights : ndarray, shape (rank,) or (m, rank)
-            With ``x = weights @ pivot_samples + residual``, in the units of the samples as they
-            were pushed.
-        residual : ndarray, shape of x
-            The part of x outside the span.
-
-        Notes
-        -----
-        The coordinates are divided by the triangular factor, rank² flops for each row. Weights of
-        nearly dependent pivot samples are as uncertain as the condition that audit reports says;
-        the combination itself is not.
-
-        Examples
-        --------
-        >>> from streambasis import StreamBasis
-        >>> basis = StreamBasis(3)
-        >>> for sample in ([2.0, 0.0, 0.0], [4.0, 0.0, 0.0], [1.0, 1.0, 0.0]):
-        ...     _ = basis.push(sample)
-        >>> basis.explain([5.0, 3.0, 7.0])
-        (array([0, 2]), array([1., 3.]), array([0., 0., 7.]))
-        """
-        rows, powers, single = self._rows(x)
-        with self._lock:
-            coordinates, rest = two_passes(rows, self._core.directions)
-            samples, weights = self._core.pivots.copy(), self._core.weights(coordinates, powers)
-        residual = self._inner.leave(scaled_rows(rest, powers))
-        return (samples, weights[0], residual[0]) if single else (samples, weights, residual)
-
-    def _rows(self, x: Any) -> tuple[NDArray[Any], NDArray[np.int64], bool]:
-        """Return x as checked Euclidean rows below 1, the powers of two taken out, and if one."""
-        arrow = hasattr(x, "__arrow_c_stream__") or hasattr(x, "__arrow_c_array__")
-        single = not arrow and np.ndim(x) == 1
-        if single:
-            array = one_sample(x, self._channels, self._dtype)[None, :]
-        else:
-            array = many_samples(x, self._channels, self._dtype)
-        rows, powers = powers_taken_out(array)
-        return self._inner.enter(rows), powers, single
-
-    def _split(self, rows: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any], NDArray[Any]]:
-        """Return the coordinates of rows, their rests, and the directions they refer to."""
-        with self._lock:
-            directions = self._core.directions
-            return *two_passes(rows, directions), directions
-
     def retract(self, sample_id: int) -> int:
         """Take one sample of the window back, whether it is a pivot or not.
 
@@ -641,51 +382,6 @@ class StreamBasis:
             self._core.renew()
             self._bind()
 
-    def audit(self) -> Audit:
-        """Measure the orthonormality, coverage and condition of the basis as it is.
-
-        Notes
-        -----
-        2·n·rank² + O(rank³) flops.
-
-        Examples
-        --------
-        >>> from streambasis import StreamBasis
-        >>> basis = StreamBasis(3)
-        >>> _ = basis.push_many([[1.0, 1.0, 1.0], [1.0, 1.0, 1.001], [5.0, 5.0, 5.0]])
-        >>> audit = basis.audit()
-        >>> audit.orthogonality < 3, audit.coverage < 1, audit.rank
-        (True, True, 2)
-        """
-        with self._lock:
-            core = self._core
-            k = core.rank
-            condition = 1.0
-            if k:
-                factor = core.factor
-                scaled = factor / np.linalg.norm(factor, axis=1)[:, None]
-                condition = float(np.linalg.cond(scaled))
-            return Audit(
-                orthogonality(core.directions),
-                core.coverage,
-                condition,
-                core.renewals,
-                k,
-                core.count,
-                core.uncovered,
-            )
-
-    def to_state(self) -> State:
-        """Hand over everything needed to go on."""
-        with self._lock:
-            return self._state()
-
-    @contextmanager
-    def lent_state(self) -> Iterator[State]:
-        """Lend the state without a copy; no push gets in before it is handed back."""
-        with self._lock, lending():
-            yield self._state()
-
     def _state(self) -> State:
         facts = {
             "channels": list(self._channels.names),
@@ -713,40 +409,3 @@ class StreamBasis:
         basis._core.set_state(state.parts["core"])
         basis._bind()
         return basis
-
-
-def _checked_window(window: Any) -> int:
-    try:
-        number = index(window)
-    except TypeError:
-        number = 0
-    if not 1 <= number < 2**62 or isinstance(window, bool):
-        raise SettingError(f"window={window!r}: a whole number of samples, from 1 to below 2**62")
-    return number
-
-
-def _checked_capacity(capacity: int | None, count: int, window: int | None) -> int:
-    if capacity is None:
-        return count if window is None else min(count, window)
-    try:
-        number = index(capacity)
-    except TypeError:
-        number = 0
-    if not 1 <= number <= count:
-        raise SettingError(
-            f"capacity={capacity!r}: a whole number from 1 to the number of channels ({count})"
-        )
-    return number
-
-
-def _checked_tolerances(rtol: Any, atol: Any, epsilon: float) -> tuple[float, float]:
-    try:
-        relative = epsilon**0.5 if rtol is None else float(rtol)
-        absolute = float(atol)
-    except (TypeError, ValueError):
-        raise SettingError(f"rtol={rtol!r}, atol={atol!r}: tolerances are numbers") from None
-    if not 0.0 <= relative < 1.0:
-        raise SettingError(f"rtol={rtol}: a relative tolerance is at least 0 and below 1")
-    if not 0.0 <= absolute < np.inf:
-        raise SettingError(f"atol={atol}: an absolute tolerance is at least 0 and finite")
-    return relative, absolute

@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.basis_settings import Settings
 from streambasis.decisions import Decisions, reason_names
 from streambasis.errors import SnapshotError
 from streambasis.kernels import block as blocks
@@ -45,6 +46,15 @@ SPARSE = 4
 class Growth:
     """The arrays of a basis without a window, in Euclidean coordinates.
 
+    Parameters
+    ----------
+    count : int
+        Channels.
+    settings : Settings
+        What was asked for.
+    dtype : numpy.dtype
+        One of the four.
+
     Notes
     -----
     A basis of rank k holds V (k, n) row by row and the lower triangular factor L (k, k) with
@@ -68,16 +78,14 @@ class Growth:
         "work",
     )
 
-    def __init__(
-        self, count: int, capacity: int, rtol: float, atol: float, policy: int, dtype: np.dtype[Any]
-    ) -> None:
-        rows = min(FIRST_ROWS, capacity)
+    def __init__(self, count: int, settings: Settings, dtype: np.dtype[Any]) -> None:
+        rows = min(FIRST_ROWS, settings.capacity)
         self.directions_held = aligned_zeros((rows, count), dtype)
         self.factor_held = np.zeros((rows, rows), dtype)
         self.integers = np.zeros(kernels.HEADER + 2 * rows, np.int64)
-        self.integers[kernels.CAPACITY] = capacity
-        self.integers[kernels.POLICY] = policy
-        self.reals = np.array([rtol, atol, 0.0, 0.0])
+        self.integers[kernels.CAPACITY] = settings.capacity
+        self.integers[kernels.POLICY] = settings.policy
+        self.reals = np.array([settings.rtol, settings.atol, 0.0, 0.0])
         self.interpolation: tuple[Any, NDArray[np.int64], NDArray[Any]] | None = None
         self._bind()
 

@@ -7,6 +7,7 @@ built from one; :mod:`streambasis.snapshot` writes one to an Arrow file. Neither
 from __future__ import annotations
 
 import threading
+from abc import ABC, abstractmethod
 from collections.abc import Iterator
 from contextlib import AbstractContextManager, contextmanager
 from dataclasses import dataclass, field
@@ -136,6 +137,40 @@ class Lender(Stateful, Protocol):
     def lent_state(self) -> AbstractContextManager[State]:
         """Lend the state without a copy; no push gets in before it is handed back."""
         ...
+
+
+class Saveable(ABC):
+    """Saving and pickling for an object that guards its arrays with a lock.
+
+    It has ``_state``, which puts the state together, and ``from_state``.
+    """
+
+    __slots__ = ()
+
+    _lock: threading.Lock
+
+    def to_state(self) -> State:
+        """Hand over everything needed to go on."""
+        with self._lock:
+            return self._state()
+
+    @contextmanager
+    def lent_state(self) -> Iterator[State]:
+        """Lend the state without a copy; no push gets in before it is handed back."""
+        with self._lock, lending():
+            yield self._state()
+
+    def __reduce__(self) -> tuple[Any, ...]:
+        return type(self).from_state, (self.to_state(),)
+
+    @abstractmethod
+    def _state(self) -> State:
+        """Return everything needed to go on; the lock is held."""
+
+    @classmethod
+    @abstractmethod
+    def from_state(cls, state: State) -> Self:
+        """Build an object that goes on exactly where ``state`` was taken."""
 
 
 _lending = threading.local()

@@ -15,7 +15,8 @@ PACKAGE = Path(__file__).parent.parent / "streambasis"
 LAYERS = [
     {"kernels"},
     {"_version", "errors", "state", "samples", "times", "inner", "decisions", "audit", "memory",
-     "projecting", "growth", "window", "basis", "ranks", "core_svd", "folding", "gaps",
+     "projecting", "growth", "window_arrays", "window_clock", "window",
+     "basis_settings", "inspection", "basis", "ranks", "core_svd", "folding", "gaps",
      "principal_settings", "intake", "principal", "compare"},
     {"files", "seal", "layout", "snapshot"},
     {"feeds"},
