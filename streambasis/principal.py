@@ -4,8 +4,7 @@ from __future__ import annotations
 
 import math
 import threading
-from collections.abc import Iterable, Iterator
-from contextlib import contextmanager
+from collections.abc import Iterable
 from typing import Any, Final, Self
 
 import numpy as np
@@ -19,10 +18,10 @@ from streambasis.intake import Intake
 from streambasis.kernels import principal as kernels
 from streambasis.principal_settings import Settings
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
-from streambasis.state import State, lending, owned
+from streambasis.state import Saveable, State, owned
 
 
-class PrincipalBasis:
+class PrincipalBasis(Saveable):
     """The leading directions of a noisy feed, their energies, and the noise floor below them.
 
     Parameters
@@ -335,17 +334,6 @@ class PrincipalBasis:
                 self.rank,
                 self.count,
             )
-
-    def to_state(self) -> State:
-        """Hand over everything needed to go on, the unfinished block included."""
-        with self._lock:
-            return self._state()
-
-    @contextmanager
-    def lent_state(self) -> Iterator[State]:
-        """Lend the state without a copy; no push gets in before it is handed back."""
-        with self._lock, lending():
-            yield self._state()
 
     def _state(self) -> State:
         facts, arrays, core = self._core.to_state()

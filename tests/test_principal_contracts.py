@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import concurrent.futures
 import itertools
+import pickle
 import warnings
 
 import numpy as np
@@ -348,3 +349,15 @@ def test_values_too_large_for_a_mean_are_refused_alike() -> None:
 def test_half_life_is_the_age_of_half_the_weight() -> None:
     """half_life in samples is forget = 0.5 ** (1 / half_life)."""
     assert PrincipalBasis(3, half_life=10).forget == pytest.approx(0.5**0.1)
+
+
+def test_a_pickled_basis_goes_on_the_same() -> None:
+    """Pickling, as a process pool does it, keeps all: the copy scores bit for bit alike."""
+    basis = PrincipalBasis(12, half_life=500.0, centre=True)
+    samples, _ = noisy_feed(np.random.default_rng(5), 400, 12, 3, 0.1)
+    basis.push_many(samples[:250])  # a block is left half full
+    again = pickle.loads(pickle.dumps(basis))
+    expected, actual = basis.push_many(samples[250:]), again.push_many(samples[250:])
+    for name in ("norm", "residual", "spe", "t2", "rank"):
+        np.testing.assert_array_equal(getattr(actual, name), getattr(expected, name))
+    np.testing.assert_array_equal(again.vectors, basis.vectors)
