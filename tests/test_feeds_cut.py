@@ -43,7 +43,7 @@ def pieces_of(found: list[list[bool] | None], start: int) -> list[Piece | None]:
 
 def given_by(found: list[list[bool] | None], start: int = 0, sample: int = 0) -> list[Batch]:
     """Return the batches of what is found from a row on."""
-    return list(cut(pieces_of(found, start), COLUMNS, sample, rows=ROWS))
+    return list(cut(pieces_of(found, start), COLUMNS, sample, ROWS))
 
 
 @given(FOUND)

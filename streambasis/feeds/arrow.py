@@ -97,7 +97,7 @@ class _TableFeed(PieceFeed):
             raise FeedError(f"{self.name}, row {first + index + 1}: {reason}")
         before = np.searchsorted(where, [index for index, _ in faults]).tolist()
         malformed = [
-            (place, Malformed(self.name, first + index + 1, reason, ""))
+            (place, Malformed(self.name, first + index + 1, reason, "", "row"))
             for place, (index, reason) in zip(before, faults, strict=True)
         ]
 

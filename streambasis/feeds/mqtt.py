@@ -253,7 +253,7 @@ class MqttFeed(PieceFeed):
         text = "" if message.payload.startswith(b"\xff") else shortened(message.payload)
         # topic and reason may hold what somebody sent
         topic, reason = shortened(message.topic.encode()), shortened(reason.encode())
-        return Malformed(topic, self._serial, reason, text)
+        return Malformed(topic, self._serial, reason, text, "message")
 
     def close(self) -> None:
         """Disconnect; the broker keeps what was not acknowledged."""

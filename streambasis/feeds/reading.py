@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable, Iterable, Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from types import TracebackType
 from typing import Any, Protocol, Self
 
@@ -47,12 +47,15 @@ class Malformed:
         What is wrong with it.
     text : str
         The row itself, cut after MOST_TEXT characters; empty where the file is binary.
+    unit : str
+        What is counted: "line", "row" or "message".
     """
 
     source: str
     number: int
     reason: str
     text: str
+    unit: str = "line"
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,9 +70,9 @@ class Batch:
         One row per sample, one column per channel; NaN where a value is missing, never infinite.
     times : ndarray of int64, shape (m,), or None
         Nanoseconds, since the Unix epoch where the feed has timestamps.
-    position : dict
-        Where to go on after this batch; JSON things only. Whoever keeps it together with what
-        came of the samples can open the feed there again, and no sample is lost or taken twice.
+    place : callable
+        Returns the position behind this batch, the same at any time; it costs something for some
+        feeds, and not every batch is committed.
     malformed : tuple of Malformed
         Rows passed over on the way to that position; always empty from a strict feed. A batch
         may hold malformed rows and no sample.
@@ -78,11 +81,20 @@ class Batch:
     first: int
     values: NDArray[np.float64]
     times: NDArray[np.int64] | None
-    position: Position = field(default_factory=dict)
+    place: Callable[[], Position] = dict
     malformed: tuple[Malformed, ...] = ()
 
     def __len__(self) -> int:
         return len(self.values)
+
+    @property
+    def position(self) -> Position:
+        """Where to go on after this batch; JSON things only.
+
+        Whoever keeps it together with what came of the samples can open the feed there again, and
+        no sample is lost or taken twice.
+        """
+        return self.place()
 
 
 @dataclass(frozen=True, slots=True)
@@ -185,6 +197,10 @@ class Feed(Protocol):
         """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
         ...
 
+    def arrivals(self) -> Iterator[Batch | None]:
+        """Yield the same batches, and None when nothing has come for a while."""
+        ...
+
     def commit(self, position: Position) -> None:
         """Hear that everything up to a position is kept and need not be given again."""
         ...
@@ -259,19 +275,27 @@ class PieceFeed:
 
     def batches(self) -> Iterator[Batch]:
         """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
+        return (batch for batch in self.arrivals() if batch is not None)
+
+    def arrivals(self) -> Iterator[Batch | None]:
+        """Yield the same batches, and None when nothing has come for a while."""
         given = self._first > 0
-        pieces: Iterator[Piece | None] = self.pieces()
-        if self.options.wait is None:
-            pieces = (piece for piece in pieces if piece is not None)
-        for batch in cut(pieces, self.columns, self._first, self._keeps_rest):
-            self._malformed += len(batch.malformed)
-            batch.position.update(kind=self.kind, malformed=self._malformed)
-            given = True
+        found = cut_or_wait(
+            self.pieces(), self.columns, self._first, self._keeps_rest, self.options.wait is None
+        )
+        for batch in found:
+            if batch is not None:
+                self._malformed += len(batch.malformed)
+                batch = replace(batch, place=self._placed(batch.place, self._malformed))
+                given = True
             yield batch
         if not given and not self.options.stop.is_set():
             raise FeedError(
                 f"{self.name}: no samples; the file holds column names and nothing else"
             )
+
+    def _placed(self, place: Callable[[], Position], malformed: int) -> Callable[[], Position]:
+        return lambda: {**place(), "kind": self.kind, "malformed": malformed}
 
     def _keeps_rest(self) -> bool:
         """Return whether what does not fill a batch is given when the pieces end."""
@@ -315,7 +339,6 @@ def cut(
     pieces: Iterable[Piece | None],
     columns: Columns,
     first: int = 0,
-    keeps_rest: Callable[[], bool] = lambda: True,
     rows: int = BATCH_ROWS,
 ) -> Iterator[Batch]:
     """Cut pieces of any size into batches that end where the sample number divides by ``rows``.
@@ -328,8 +351,6 @@ def cut(
         The channels, and whether there is a time.
     first : int
         Number of the first sample.
-    keeps_rest : callable
-        Asked at the end whether a last short batch is given.
     rows : int
         Samples per batch.
 
@@ -338,11 +359,33 @@ def cut(
     Holds less than one batch of samples and OUTNUMBERED times as many malformed rows beside the
     piece in hand, whatever the length of the feed.
     """
+    batches = cut_or_wait(pieces, columns, first, lambda: True, whole=False, rows=rows)
+    return (batch for batch in batches if batch is not None)
+
+
+def cut_or_wait(
+    pieces: Iterable[Piece | None],
+    columns: Columns,
+    first: int,
+    keeps_rest: Callable[[], bool],
+    whole: bool,
+    rows: int = BATCH_ROWS,
+) -> Iterator[Batch | None]:
+    """Cut as :func:`cut`, and yield None where a None among the pieces gives no batch.
+
+    Parameters
+    ----------
+    pieces, columns, first, rows
+        As of :func:`cut`.
+    keeps_rest : callable
+        Asked at the end whether a last short batch is given.
+    whole : bool
+        None among the pieces gives no short batch.
+    """
     held = _Held(first, columns)
     for piece in pieces:
         if piece is None:
-            if held:
-                yield held.give()
+            yield held.give() if held and not whole else None
             continue
         start, length = 0, len(piece.values)
         while True:
@@ -400,8 +443,14 @@ class _Held:
         times = None
         if self._timed:
             times = self._times[0] if len(self._times) == 1 else np.concatenate(self._times)
-        position = {"sample": self.first + self.count, **self._place(self._rows)}
-        batch = Batch(self.first, values, times, position, tuple(self._malformed))
+        place, behind, rows = self._place, self.first + self.count, self._rows
+        batch = Batch(
+            self.first,
+            values,
+            times,
+            lambda: {"sample": behind, **place(rows)},
+            tuple(self._malformed),
+        )
         self.first += self.count
         self._clear()
         return batch
