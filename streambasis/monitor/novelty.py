@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any, Self
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from streambasis.audit import Audit, orthogonality
 from streambasis.basis import StreamBasis
 from streambasis.errors import SampleError, SettingError, SnapshotError
 from streambasis.monitor.events import Event
@@ -220,6 +221,34 @@ class NoveltyMonitor:
             judge = self._judge
             still = [judge.event(which, open=True) for which in range(len(judge.open))]
             return sorted([*judge.history.events.values(), *still], key=lambda e: int(e["event"]))
+
+    def audit(self) -> Audit:
+        """Measure the orthonormality of all directions that samples are judged by.
+
+        Returns
+        -------
+        Audit
+            As of :attr:`basis`, but for ``orthogonality``, the largest of the basis, of adopted
+            behaviour and of the directions in use until the block ends; NaN where a number that
+            samples are judged by is not finite.
+
+        Notes
+        -----
+        8·n·q² flops for q directions.
+        """
+        with self._lock:
+            model = self._need().model
+            found = model.basis.audit()
+            used = model.projection.directions
+            # a direction that adds nothing to those before it is held as zeros
+            ratios = [
+                found.orthogonality,
+                model.known.audit().orthogonality,
+                orthogonality(model.vectors),
+                orthogonality(used[used.any(axis=1)]),
+            ]
+            finite = all(np.isfinite(x).all() for x in (model.mean, model.energies))
+            return found._replace(orthogonality=float(np.max(ratios)) if finite else math.nan)
 
     def push(self, sample: ArrayLike, at: Any = None) -> Verdict:
         """Judge one sample.
