@@ -51,6 +51,10 @@ class Deaf:
     def adopted(self, event: Any) -> None:
         """Hear nothing."""
 
+    def warned(self, warning: str) -> None:
+        """Hear nothing: none of these feeds gives cause for it."""
+        raise AssertionError(warning)
+
     def advance(self, samples: int) -> None:
         """Count the batches."""
         assert samples > 0

@@ -1,9 +1,9 @@
 """The folder that keeps a run, so that it goes on where it stopped: nothing lost, nothing twice.
 
 ``state.arrow`` is the one commit point. It holds the monitor, how far the feed was read, the
-decisions that do not fill a file yet, and how much of ``events.jsonl`` counts; replacing it makes
-all of that true at once. Whatever else was written since the last commit is written again, the
-same, by the run that goes on from there.
+decisions that do not fill a file yet, and how much of ``events.jsonl`` and ``malformed.jsonl``
+counts; replacing it makes all of that true at once. Whatever else was written since the last commit
+is written again, the same, by the run that goes on from there.
 """
 
 from __future__ import annotations
@@ -12,7 +12,9 @@ import fcntl
 import json
 import os
 import re
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
+from dataclasses import asdict, dataclass
 from pathlib import Path
 from types import TracebackType
 from typing import Any, Self
@@ -20,7 +22,7 @@ from typing import Any, Self
 import pyarrow as pa
 
 from streambasis.errors import HomeError, SnapshotError, SnapshotFileError, StreambasisError
-from streambasis.feeds import Position
+from streambasis.feeds import Malformed, Position
 from streambasis.files import remove_leftovers, replace_file, write_all
 from streambasis.monitor import NoveltyMonitor
 from streambasis.snapshot import read_state, save
@@ -31,7 +33,81 @@ READABLE = 0o644
 KIND = "Run"
 """What ``state.arrow`` says it holds."""
 
-_SEGMENT_NAME = re.compile(r"(\d{12})\.arrow")
+FORMATS = ("arrow", "parquet")
+"""Formats of the files of decisions, and the endings of their names."""
+
+MOST_MALFORMED = 1 << 24
+"""Bytes of ``malformed.jsonl``. A feed in which everything is malformed would fill the disk; what
+came first is kept, the rest is counted."""
+
+_SEGMENT_NAME = re.compile(rf"(\d{{12}})\.(?:{'|'.join(FORMATS)})")
+
+
+class _Log:
+    """A file of lines, of which so much counts as the last commit says."""
+
+    def __init__(self, path: Path, counted: int) -> None:
+        self._path = path
+        self._file = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, READABLE)
+        self.back_to(counted)
+
+    def back_to(self, counted: int) -> None:
+        """Forget everything behind what counts."""
+        if os.fstat(self._file).st_size < counted:
+            self.close()
+            raise HomeError(f"{self._path}: shorter than the run that state.arrow belongs to")
+        os.ftruncate(self._file, counted)
+        self._written = counted
+        self._lines = bytearray()
+
+    @property
+    def size(self) -> int:
+        """Bytes with what waits to be written."""
+        return self._written + len(self._lines)
+
+    @property
+    def waiting(self) -> int:
+        """Bytes that wait to be written."""
+        return len(self._lines)
+
+    def add(self, line: bytes) -> None:
+        """Take a line, to be written with the next commit."""
+        self._lines += line
+
+    def write(self, size: int) -> None:
+        """Write and force to the disk everything up to a size, in the thread that writes."""
+        data = bytes(self._lines[: size - self._written])
+        if data:
+            # all of it again after a failure: the kernel may have dropped what it could not write
+            write_at(self._file, data, self._written)
+            os.fsync(self._file)
+
+    def keep(self, size: int) -> None:
+        """Hear that everything up to a size is part of the run."""
+        del self._lines[: size - self._written]
+        self._written = size
+
+    def close(self) -> None:
+        """Close the file."""
+        os.close(self._file)
+
+
+def write_at(descriptor: int, data: bytes, offset: int) -> None:
+    """Write every byte at a place: one call of the system may take only a part."""
+    rest = memoryview(data)
+    while rest:
+        done = os.pwrite(descriptor, rest, offset)
+        rest, offset = rest[done:], offset + done
+
+
+@dataclass(frozen=True, slots=True)
+class _Commit:
+    """What one commit makes part of the run."""
+
+    state: State
+    segments: list[Segment]
+    sizes: tuple[int, ...]
+    progress: pa.Table | None
 
 
 class Home:
@@ -41,29 +117,45 @@ class Home:
     ----------
     path : Path
         The folder; made where it does not exist.
+    decisions : {"arrow", "parquet"}
+        Format of the files of decisions.
 
     Attributes
     ----------
     state : State or None
         What was committed last, by an earlier process; None in a new folder.
+    bytes : int
+        Size of the last snapshot.
+    committed : float or None
+        When it was written, in seconds from the Unix epoch.
 
     Raises
     ------
     HomeError
         If another process uses the folder (the message names it), it cannot be written, or it
-        holds results without the state that they belong to.
+        holds results without the state that they belong to, or files of the other format.
 
     Notes
     -----
     A decisions file appears whole. Its name is the number of its first sample, so that names sort
     like samples; all but the last hold the same number of decisions.
+
+    What is taken stays in memory until a commit has written it, in a thread of its own, so that
+    scoring does not wait for the disk. One commit is under way at a time. One that fails changes
+    nothing: the next writes what this one should have.
     """
 
-    def __init__(self, path: Path) -> None:
+    def __init__(self, path: Path, decisions: str = "arrow") -> None:
+        if decisions not in FORMATS:
+            raise HomeError(f"decisions {decisions!r}: one of {', '.join(FORMATS)}")
         self.path = path
         self.state: State | None = None
+        self.bytes = 0
+        self.committed: float | None = None
+        self._format = decisions
         self._about: dict[str, Any] = {}
         self._segment = Segment(rows=SEGMENT_ROWS)
+        self._full: list[Segment] = []
         self._decisions = path / "decisions"
         try:
             self._decisions.mkdir(parents=True, exist_ok=True)
@@ -75,41 +167,51 @@ class Home:
                 raise
         except OSError as error:
             raise _named(path, error) from None
+        self._thread = ThreadPoolExecutor(1, "streambasis-home")
+        self._under_way: tuple[_Commit, Future[None]] | None = None
 
     def _open(self) -> None:
-        events, state = self.path / "events.jsonl", self.path / "state.arrow"
         for folder in (self.path, self._decisions):
             remove_leftovers(folder)
-        counted = 0
+        names = [self.path / "events.jsonl", self.path / "malformed.jsonl"]
+        state = self.path / "state.arrow"
+        counted = (0, 0)
         if state.exists():
             counted = self._resume(state)
-        elif any(self._decisions.iterdir()) or (events.exists() and events.stat().st_size):
+        elif any(self._decisions.iterdir()) or any(n.exists() and n.stat().st_size for n in names):
             raise HomeError(
                 f"{self.path}: holds an earlier run without its state.arrow; choose an empty "
                 "folder for --home"
             )
-        self._events = os.open(events, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, READABLE)
-        if os.fstat(self._events).st_size < counted:
-            os.close(self._events)
-            raise HomeError(f"{events}: shorter than the run that state.arrow belongs to")
-        os.ftruncate(self._events, counted)
-        os.lseek(self._events, counted, os.SEEK_SET)
-        self._synced = counted
+        self._events = _Log(names[0], counted[0])
+        try:
+            self._malformed = _Log(names[1], counted[1])
+        except BaseException:
+            self._events.close()
+            raise
 
-    def _resume(self, path: Path) -> int:
-        """Take over what was committed last; return how many bytes of the events count."""
+    def _resume(self, path: Path) -> tuple[int, int]:
+        """Take over what was committed last; return how many bytes of events and rows count."""
         try:
             state = read_state(path)
             if state.kind != KIND:
                 raise HomeError(f"{path}: holds a {state.kind}, not a run")
             self._segment = Segment.from_state(state.parts["decisions"])
-            counted = int(state.facts["events_bytes"])
+            counted = int(state.facts["events_bytes"]), int(state.facts.get("malformed_bytes", 0))
         except SnapshotError as error:
             raise HomeError(f"{error}; the run cannot go on from it") from error
+        kept = state.facts.get("decisions", "arrow")
+        if kept != self._format:
+            raise HomeError(
+                f"{self.path}: its decisions are kept as {kept}, not {self._format}; give the same "
+                "again, or choose another folder for --home"
+            )
         for file in self._decisions.iterdir():
             number = _SEGMENT_NAME.fullmatch(file.name)
             if number and int(number[1]) > self._segment.first:
                 file.unlink()
+        status = path.stat()
+        self.bytes, self.committed = status.st_size, status.st_mtime
         self.state = state
         return counted
 
@@ -134,6 +236,20 @@ class Home:
         except StreambasisError as error:
             raise HomeError(f"{self.path / 'state.arrow'}: {error}") from error
 
+    def go_back(self) -> None:
+        """Forget everything since the last commit, which may be one of this process.
+
+        Raises
+        ------
+        HomeError
+            If it cannot be read.
+        """
+        self.settle(wait=True)
+        self._full = []
+        events, malformed = self._resume(self.path / "state.arrow")
+        self._events.back_to(events)
+        self._malformed.back_to(malformed)
+
     def begin(self, about: Mapping[str, Any]) -> None:
         """Say what the run is of.
 
@@ -157,39 +273,48 @@ class Home:
                     )
         self._about = dict(about)
 
-    def take(self, decisions: pa.Table) -> bool:
-        """Keep the decisions of a batch; full files are written at once.
-
-        Returns
-        -------
-        bool
-            Whether a file was written.
-        """
-        written = False
+    def take(self, decisions: pa.Table) -> None:
+        """Take the decisions of a batch, to be kept by the next commit."""
         while len(decisions):
             decisions = decisions.slice(self._segment.take(decisions))
             if self._segment.full:
-                self._write_segment()
-                self._segment.start_next()
-                written = True
-        return written
+                self._full.append(self._segment)
+                self._segment = self._segment.next()
 
     def take_event(self, event: Mapping[str, Any]) -> None:
-        """Append a closed event."""
-        line = json.dumps(event, ensure_ascii=False) + "\n"
-        try:
-            write_all(self._events, line.encode())
-        except OSError as error:
-            raise _named(self.path, error) from None
+        """Take a closed event, to be kept by the next commit."""
+        self._events.add(_line(event))
 
-    def keep_progress(self, readings: pa.Table) -> None:
-        """Replace the readings of the basis over the run by newer ones."""
-        self._write("progress.arrow", readings)
+    def take_malformed(self, rows: Sequence[Malformed]) -> None:
+        """Take malformed rows, to be kept by the next commit as far as there is room."""
+        for row in rows:
+            line = _line(asdict(row))
+            if self._malformed.size + len(line) <= MOST_MALFORMED:
+                self._malformed.add(line)
 
-    def commit(
-        self, monitor: NoveltyMonitor, facts: Mapping[str, Any], parts: Mapping[str, State]
+    @property
+    def waiting(self) -> int:
+        """Files of decisions that are full and wait to be written."""
+        return len(self._full)
+
+    @property
+    def waiting_bytes(self) -> int:
+        """Bytes of events and malformed rows that wait to be written."""
+        return self._events.waiting + self._malformed.waiting
+
+    @property
+    def busy(self) -> bool:
+        """Whether a commit is under way."""
+        return self._under_way is not None
+
+    def start_commit(
+        self,
+        monitor: NoveltyMonitor,
+        facts: Mapping[str, Any],
+        parts: Mapping[str, State],
+        progress: pa.Table | None = None,
     ) -> None:
-        """Make everything taken so far part of the run, in one step.
+        """Begin to make everything taken so far part of the run; only while none is under way.
 
         Parameters
         ----------
@@ -199,22 +324,77 @@ class Home:
             What else the run needs to go on, such as how far the feed was read; JSON things.
         parts : mapping of str to State
             The states of whatever else goes on with it.
+        progress : Table, optional
+            Readings of the basis over the run, which replace those that were kept before.
+        """
+        sizes = self._events.size, self._malformed.size
+        held = {"core": monitor.to_state(), "decisions": self._segment.to_state(), **parts}
+        own: dict[str, Any] = {"about": self._about, "decisions": self._format}
+        own |= {"events_bytes": sizes[0], "malformed_bytes": sizes[1]}
+        state = State(KIND, {**facts, **own}, {}, held)
+        commit = _Commit(state, list(self._full), sizes, progress)
+        self._under_way = commit, self._thread.submit(self._write, commit)
+
+    def settle(self, *, wait: bool = False) -> Mapping[str, Any] | None:
+        """Hear what has become of the commit that is under way.
+
+        Parameters
+        ----------
+        wait : bool
+            Until it is through.
+
+        Returns
+        -------
+        mapping or None
+            Its facts, if it has come through; None if there is none or it is still at work.
+
+        Raises
+        ------
+        HomeError
+            If the disk did not take it; the last commit then still stands.
+        """
+        if self._under_way is None or not (wait or self._under_way[1].done()):
+            return None
+        (commit, future), self._under_way = self._under_way, None
+        try:
+            future.result()
+        except (OSError, SnapshotFileError) as error:
+            raise _named(self.path, error) from None
+        del self._full[: len(commit.segments)]
+        for log, size in zip((self._events, self._malformed), commit.sizes, strict=True):
+            log.keep(size)
+        status = os.stat(self.path / "state.arrow")
+        self.bytes, self.committed = status.st_size, status.st_mtime
+        return commit.state.facts
+
+    def commit(
+        self,
+        monitor: NoveltyMonitor,
+        facts: Mapping[str, Any],
+        parts: Mapping[str, State],
+        progress: pa.Table | None = None,
+    ) -> None:
+        """Make everything taken so far part of the run, in one step, and wait for it.
 
         Raises
         ------
         HomeError
             If the disk does not take it; the last commit then still stands.
         """
-        try:
-            size = os.lseek(self._events, 0, os.SEEK_CUR)
-            if size != self._synced:
-                os.fsync(self._events)
-                self._synced = size
-            held = {"core": monitor.to_state(), "decisions": self._segment.to_state(), **parts}
-            state = State(KIND, {**facts, "about": self._about, "events_bytes": size}, {}, held)
-            save(state, self.path / "state.arrow")
-        except (OSError, SnapshotFileError) as error:
-            raise _named(self.path, error) from None
+        self.start_commit(monitor, facts, parts, progress)
+        self.settle(wait=True)
+
+    def _write(self, commit: _Commit) -> None:
+        """Write what a commit is made of, the state last."""
+        for segment in commit.segments:
+            if not segment.written:
+                self._write_segment(segment)
+                segment.written = True
+        for log, size in zip((self._events, self._malformed), commit.sizes, strict=True):
+            log.write(size)
+        if commit.progress is not None:
+            self._write_table("progress.arrow", commit.progress)
+        save(commit.state, self.path / "state.arrow")
 
     def __enter__(self) -> Self:
         return self
@@ -232,27 +412,35 @@ class Home:
 
         Nothing is committed: a run that goes on writes them again, with those that follow.
         """
+        self._thread.shutdown()
         try:
             if self._segment.count:
-                self._write_segment()
-        finally:
-            os.close(self._events)
-            os.close(self._lock)
-
-    def _write_segment(self) -> None:
-        self._write(f"decisions/{self._segment.first:012d}.arrow", self._segment.table())
-
-    def _write(self, name: str, table: pa.Table) -> None:
-        def fill(descriptor: int) -> None:
-            sink = pa.BufferOutputStream()
-            with pa.ipc.new_file(sink, table.schema) as file:
-                file.write_table(table.combine_chunks())
-            write_all(descriptor, sink.getvalue())
-
-        try:
-            replace_file(self.path / name, fill, mode=READABLE)
+                self._write_segment(self._segment)
         except OSError as error:
             raise _named(self.path, error) from None
+        finally:
+            self._events.close()
+            self._malformed.close()
+            os.close(self._lock)
+
+    def _write_segment(self, segment: Segment) -> None:
+        self._write_table(f"decisions/{segment.first:012d}.{self._format}", segment.table())
+
+    def _write_table(self, name: str, table: pa.Table) -> None:
+        sink = pa.BufferOutputStream()
+        if name.endswith(".parquet"):
+            import pyarrow.parquet as pq
+
+            pq.write_table(table, sink)
+        else:
+            with pa.ipc.new_file(sink, table.schema) as file:
+                file.write_table(table.combine_chunks())
+        content = sink.getvalue()
+        replace_file(self.path / name, lambda file: write_all(file, content), mode=READABLE)
+
+
+def _line(fields: Mapping[str, Any]) -> bytes:
+    return (json.dumps(fields, ensure_ascii=False) + "\n").encode()
 
 
 def _locked(path: Path) -> int:

@@ -9,7 +9,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from streambasis.monitor.verdict import NO_EVENT, NO_TIME, Columns
-from streambasis.state import State, owned
+from streambasis.state import State
 
 SEGMENT_ROWS = 1 << 16
 """Decisions per file, about 4 MB: few files over months, and little held in memory."""
@@ -26,12 +26,20 @@ class Segment:
         Number of the first sample.
     rows : int
         Decisions per file.
+
+    Attributes
+    ----------
+    count : int
+        Decisions so far.
+    written : bool
+        Whether its file has been written; set by whoever writes it.
     """
 
-    __slots__ = ("_columns", "count", "first", "rows")
+    __slots__ = ("_columns", "count", "first", "rows", "written")
 
     def __init__(self, first: int = 0, rows: int = SEGMENT_ROWS) -> None:
         self.first, self.rows, self.count = first, rows, 0
+        self.written = False
         self._columns = Columns(first, None, rows)
 
     @property
@@ -55,15 +63,13 @@ class Segment:
             setattr(columns, name, getattr(self._columns, name)[: self.count])
         return columns.table()
 
-    def start_next(self) -> None:
-        """Begin the next file."""
-        self.first, self.count = self.first + self.count, 0
+    def next(self) -> Self:
+        """Return the next file, empty."""
+        return type(self)(self.first + self.count, self.rows)
 
     def to_state(self) -> State:
-        """Hand over the decisions so far."""
-        arrays = {
-            name: owned(getattr(self._columns, name)[: self.count]) for name in Columns.__slots__
-        }
+        """Hand over the decisions so far, where they lie: they are never changed again."""
+        arrays = {name: getattr(self._columns, name)[: self.count] for name in Columns.__slots__}
         return State("Segment", {"first": self.first, "rows": self.rows}, arrays)
 
     @classmethod
