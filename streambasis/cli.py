@@ -32,6 +32,7 @@ EXIT_CODES = (
 
 SUMMARIES = {
     "watch": "Watch a feed and report what it has not shown before.",
+    "check": "Check a file of settings without running.",
     "report": "Draw what a run has kept, on one page or as pictures.",
     "show": "Show what a snapshot holds.",
     "compare": "Show how far two snapshots are apart, and on which channels.",

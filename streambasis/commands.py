@@ -5,17 +5,16 @@ Each one imports what it needs when it runs: the help needs click alone.
 
 from __future__ import annotations
 
-import csv
 import datetime as dt
-import io
 import os
 import sys
 import traceback
-from collections.abc import Sequence
-from contextlib import ExitStack
+from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import Any, TypeVar
 
 import click
+from click.core import ParameterSource
 
 from streambasis._version import __version__
 from streambasis.cli import (
@@ -39,16 +38,23 @@ from streambasis.errors import (
     SnapshotError,
     StreambasisError,
 )
+from streambasis.watch.config import read_config
+from streambasis.watch.options import FEED as FEED_NAME
+from streambasis.watch.options import OPTIONS, spelled
+from streambasis.watch.settings import Settings, settings_of
 
 _CODES = "\b\nExit codes:\n" + "\n".join(f"  {code:<4} {what}" for code, what in EXIT_CODES)
+_Command = TypeVar("_Command", bound=Callable[..., Any])
 _debug = click.option(
     "--debug", is_flag=True, expose_value=False, help="Show a traceback with an error."
 )
-_SETTINGS = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
+_LIVE = ", ".join(spelled(name) for name, option in OPTIONS.items() if option.live)
+_THREADS = ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+_CONTEXT = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
 
 
 @click.group(
-    context_settings=_SETTINGS,
+    context_settings=_CONTEXT,
     help="Know what a multi-channel feed has shown before, and see at once what is new.",
     epilog=f"{CAUTION}\n\nExample: streambasis watch feed.csv\n\n{_CODES}",
 )
@@ -58,12 +64,34 @@ def streambasis() -> None:
     """Hold the commands together."""
 
 
+def _settings(command: _Command) -> _Command:
+    """Give a command an option for each setting."""
+    defaults = Settings()
+    for name, option in reversed(OPTIONS.items()):
+        if name == FEED_NAME:
+            continue
+        default = getattr(defaults, name)
+        spelling = f"--{spelled(name)}"
+        how: dict[str, Any] = {"metavar": option.metavar, "multiple": option.many}
+        if option.switch:
+            spelling, how = f"{spelling}/--no-{spelled(name)}", {"default": default}
+        elif default is not None:
+            # where several may be given click wants several for a default
+            text = f"{default:g}" if isinstance(default, float) else str(default)
+            how |= {"default": [text] if option.many else text, "show_default": True}
+        command = click.option(spelling, name, help=option.help, **how)(command)
+    return command
+
+
 @streambasis.command(
     "watch",
     short_help=SUMMARIES["watch"],
-    help="""Watch the feed in FILE (CSV, Parquet or Arrow IPC) and report each event: a stretch
-    whose samples are not explained by what the feed has shown before, with its time, its strength
-    relative to the control limit, the channels that carry it, and the earlier event it repeats.
+    help="""Watch FEED and report each event: a stretch whose samples are not explained by what the
+    feed has shown before, with its time, its strength relative to the control limit, the channels
+    that carry it, and the earlier event it repeats.
+
+    FEED is a file (CSV or JSON lines, also packed with gzip; Parquet; Arrow IPC), a folder of such
+    files, - for standard input, or mqtt://HOST:PORT/TOPIC, mqtts://HOST:PORT/TOPIC.
 
     The first samples are the baseline: ordinary running, from which scales, limits and the first
     basis are taken. Every later sample within its limit refines them.""",
@@ -71,6 +99,17 @@ def streambasis() -> None:
 Example:
   streambasis watch examples/pump_station.csv --home run1
   streambasis watch feed.parquet --channels speed,flow --channels temp --json | jq .channels
+  streambasis watch mqtt://broker:1883/plant/press --home /var/lib/press --metrics 9464
+  streambasis watch --config press.toml
+
+\b
+Settings in a file (--config): TOML; a key is an option without its dashes, or feed; the command
+line wins; a relative path is taken from the folder of the file. streambasis check looks at one.
+
+\b
+Signals:
+  SIGTERM, SIGINT  keep what was taken and end; with the same --home the run goes on there
+  SIGHUP           read the file of --config again; {_LIVE} change at once
 
 \b
 In the folder of --home:
@@ -85,102 +124,65 @@ In the folder of --home:
 
 {CAUTION}""",
 )
-@click.argument("file", type=click.Path(path_type=Path))
+@click.argument("feed", required=False)
 @click.option(
-    "--channels",
-    multiple=True,
-    metavar="NAMES",
-    help="Columns to watch, separated by commas; may be given again. Default: all but the time.",
+    "--config", type=click.Path(path_type=Path), metavar="FILE.toml", help="Settings from a file."
 )
-@click.option(
-    "--time",
-    metavar="COLUMN",
-    help="The time column. Default: found by itself where there is one obvious candidate.",
-)
-@click.option(
-    "--baseline",
-    type=click.IntRange(min=1),
-    default=2000,
-    show_default=True,
-    metavar="N",
-    help="Samples of ordinary running at the start.",
-)
-@click.option(
-    "--false-alarm",
-    type=float,
-    default=1e-4,
-    show_default=True,
-    metavar="P",
-    help="Probability that an ordinary sample is beyond its limit.",
-)
-@click.option(
-    "--half-life",
-    type=click.FloatRange(min=0),
-    default=5000,
-    show_default=True,
-    metavar="N",
-    help="Samples after which the basis has forgotten half of what it saw, so that slow drift "
-    "is followed; 0 never forgets.",
-)
-@click.option(
-    "--adopt-after",
-    type=click.IntRange(min=0),
-    default=1000,
-    show_default=True,
-    metavar="N",
-    help="An event still open after N samples is adopted as known behaviour; 0 never adopts.",
-)
-@click.option(
-    "--home",
-    type=click.Path(path_type=Path, file_okay=False),
-    metavar="DIR",
-    help="Keep decisions, events and the run itself in this folder; with the same folder again "
-    "the run goes on where it stopped.",
-)
-@click.option("--json", "as_json", is_flag=True, help="Events as JSON lines on standard output.")
-@click.option("--quiet", is_flag=True, help="Show nothing made for reading, errors excepted.")
+@_settings
 @_debug
-def watch(
-    file: Path,
-    channels: tuple[str, ...],
-    time: str | None,
-    baseline: int,
-    false_alarm: float,
-    half_life: float,
-    adopt_after: int,
-    home: Path | None,
-    as_json: bool,
-    quiet: bool,
-) -> None:
-    """Run a monitor over a file."""
-    from streambasis.feeds import open_feed
-    from streambasis.monitor import NoveltyMonitor
-    from streambasis.watch.home import Home
-    from streambasis.watch.loop import Run
-    from streambasis.watch.stopping import asked_to_stop
-    from streambasis.watch.terminal import Terminal
+def watch(config: Path | None, **given: Any) -> None:
+    """Run a monitor over a feed."""
+    _use_one_thread()
+    context = click.get_current_context()
+    typed = {
+        name: value
+        for name, value in given.items()
+        if context.get_parameter_source(name) is ParameterSource.COMMANDLINE
+    }
 
-    memory = half_life or None
-    with ExitStack() as held:
-        kept = held.enter_context(Home(home)) if home is not None else None
-        position = kept.position if kept is not None else None
-        feed = held.enter_context(
-            open_feed(file, channels=_names(channels), time=time, position=position)
-        )
-        names = feed.columns.channels
-        if kept is not None:
-            about = {"feed": os.path.realpath(file), "channels": list(names), "baseline": baseline}
-            about |= {"false_alarm": false_alarm, "half_life": memory, "adopt_after": adopt_after}
-            kept.begin(about)
-        monitor = kept.monitor() if kept is not None else None
-        if monitor is None:
-            monitor = NoveltyMonitor(
-                names, baseline=baseline, false_alarm=false_alarm, half_life=memory
-            )
-        shown = Terminal(sys.stdout, sys.stderr, total=feed.rows, as_json=as_json, quiet=quiet)
-        with asked_to_stop() as asked, shown as terminal:
-            summary = Run(feed, monitor, terminal, home=kept, adopt_after=adopt_after)(asked)
-    shown.summary(summary)
+    def read() -> Settings:
+        written = {} if config is None else read_config(config)
+        return settings_of(typed, written, config)
+
+    settings = read()
+    from streambasis.watch.service import serve
+
+    serve(settings, sys.stdout, sys.stderr, read if config is not None else None)
+
+
+def _use_one_thread() -> None:
+    """Keep the linear algebra of the daemon to one thread, unless the environment says otherwise.
+
+    The products of one batch are small: further threads would be waited for, and spin meanwhile.
+    """
+    if not any(name in os.environ for name in (*_THREADS, "OMP_NUM_THREADS")):
+        # read by the library when numpy loads it, which is after this
+        os.environ.update(dict.fromkeys(_THREADS, "1"))
+
+
+@streambasis.command(
+    "check",
+    short_help=SUMMARIES["check"],
+    help="""Check the settings in FILE as 'watch --config FILE' would read them, and show what it
+    would run; nothing is run, read to its end, or written. Of a broker only the address and the
+    files that the connection needs are looked at.""",
+    epilog=f"""\b
+Example:
+  streambasis check examples/watch.toml
+
+{_CODES}
+
+{CAUTION}""",
+)
+@click.argument("file", type=click.Path(path_type=Path))
+@_debug
+def check(file: Path) -> None:
+    """Check a file of settings."""
+    written = read_config(file)
+    settings = settings_of({}, written, file)
+    from streambasis.watch.checking import check as write
+
+    write(settings, set(written), sys.stdout)
 
 
 @streambasis.command(
@@ -277,14 +279,6 @@ def report(home: Path, out: Path | None, png: Path | None) -> None:
     made = dt.datetime.now(dt.UTC)
     for line in make_report(home, out=out, png=png, caution=CAUTION, made=made):
         click.echo(line)
-
-
-def _names(given: Sequence[str]) -> list[str] | None:
-    """Return the names in lists separated by commas; a name with a comma stands in quotes."""
-    if not given:
-        return None
-    rows = csv.reader(io.StringIO("\n".join(given)), skipinitialspace=True)
-    return [name.strip() for row in rows for name in row]
 
 
 def run(arguments: Sequence[str]) -> int:

@@ -128,9 +128,9 @@ REFUSED = [
     (["feed.csv", "--time", "when"], "no column 'when'", cli.FEED),
     (["words.csv"], "column 'b' is not numeric (text)", cli.FEED),
     (["feed.csv"], "300 samples, fewer than the baseline of 2000", cli.FEED),
-    (["infinite.csv", "--baseline", "200"], "is not finite", cli.FEED),
-    (["feed.csv", "--false-alarm", "2"], "false_alarm=2", cli.USAGE),
-    (["feed.csv", "--half-life", "0.5"], "half_life=0.5", cli.USAGE),
+    (["infinite.csv", "--baseline", "200", "--strict"], "is not finite", cli.FEED),
+    (["feed.csv", "--false-alarm", "2"], "--false-alarm: 2 is not a probability", cli.USAGE),
+    (["feed.csv", "--half-life", "0.5"], "--half-life: 0.5 is not a number of samples", cli.USAGE),
     (["feed.csv", "--home", "feed.csv/x"], "feed.csv/x: cannot be written", cli.OUTPUT),
     (["feed.csv", "--home", "full"], "holds an earlier run", cli.OUTPUT),
 ]
@@ -179,7 +179,7 @@ def test_an_error_inside_is_told_apart(
     def fail(*_: object, **__: object) -> None:
         raise error
 
-    monkeypatch.setattr("streambasis.feeds.open_feed", fail)
+    monkeypatch.setattr("streambasis.watch.service.open_feed", fail)
     assert cli.main(["watch", str(SHIPPED)]) == cli.BUG
     assert len(capsys.readouterr().err.splitlines()) == 1
 

@@ -3,8 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
-import signal
 import threading
 from pathlib import Path
 from typing import Any
@@ -19,7 +17,6 @@ from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.watch import home as home_module
 from streambasis.watch.home import Home
 from streambasis.watch.loop import Run, Summary
-from streambasis.watch.stopping import asked_to_stop
 from streambasis.watch.terminal import carriers, summary_lines, when
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
@@ -189,29 +186,6 @@ def test_a_run_stopped_within_the_baseline_ends_well(tmp_path: Path) -> None:
     home.close()
     assert (summary.samples, summary.rank, summary.events) == (BATCH_ROWS, 0, 0)
     assert len(read_decisions(tmp_path / "home" / "decisions")) == BATCH_ROWS
-
-
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
-def test_the_first_signal_asks_and_the_second_acts(number: signal.Signals) -> None:
-    """One signal sets the event; afterwards, and at the end, the former handler is back."""
-    heard: list[int] = []
-
-    def outer(got: int, frame: object) -> None:
-        del frame
-        heard.append(got)
-
-    before = signal.signal(number, outer)
-    try:
-        with asked_to_stop() as asked:
-            assert not asked.is_set()
-            os.kill(os.getpid(), number)
-            assert asked.is_set()
-            assert heard == []
-            os.kill(os.getpid(), number)
-            assert heard == [number]
-        assert signal.getsignal(number) is outer
-    finally:
-        signal.signal(number, before)
 
 
 def event_of(**changes: Any) -> Event:
