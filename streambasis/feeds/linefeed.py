@@ -136,4 +136,5 @@ class LineFeed(PieceFeed):
 
     def close(self) -> None:
         """Close the source."""
+        super().close()
         self._reader.source.close()

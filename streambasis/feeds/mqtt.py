@@ -68,6 +68,7 @@ class MqttFeed(PieceFeed):
 
     kind = "messages"
     live = True
+    queues = True
 
     def __init__(
         self,

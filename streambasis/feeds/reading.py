@@ -12,7 +12,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.errors import FeedError
-from streambasis.feeds.broker import Broker
+from streambasis.feeds.ahead import Ahead
+from streambasis.feeds.broker import WHEN_FULL, Broker
 from streambasis.feeds.columns import Columns
 
 BATCH_ROWS = 1024
@@ -135,6 +136,13 @@ class FeedOptions:
         whole batches only, cut at the same sample numbers in every run.
     stop : threading.Event
         Set by whoever wants a waiting feed to end.
+    when_full : str
+        Of a pipe or a file that still grows: "block", so that its writer waits or the file keeps
+        what is not yet read; or "drop-oldest", so that it is read at once and what has waited
+        longest makes room, and is counted. Other files are never dropped from, and a broker has a
+        queue of its own.
+    queue : int
+        Samples that may wait where the oldest are dropped.
     broker : Broker or None
         How to reach a broker; None takes user and password from the environment and the defaults
         for the rest.
@@ -145,6 +153,8 @@ class FeedOptions:
     follow: bool = False
     wait: float | None = 0.005
     stop: threading.Event = field(default_factory=threading.Event)
+    when_full: str = "block"
+    queue: int = 1 << 16
     broker: Broker | None = None
 
     def __post_init__(self) -> None:
@@ -152,6 +162,10 @@ class FeedOptions:
             raise FeedError(f"format {self.format!r} is none of {', '.join(FORMATS)}")
         if self.wait is not None and not self.wait > 0:
             raise FeedError(f"wait {self.wait!r}: a number of seconds above 0, or None")
+        if self.when_full not in WHEN_FULL:
+            raise FeedError(f"when_full {self.when_full!r} is none of {', '.join(WHEN_FULL)}")
+        if self.queue < 1:
+            raise FeedError(f"queue {self.queue}: at least one sample")
 
 
 class Feed(Protocol):
@@ -239,12 +253,15 @@ class PieceFeed:
     rows: int | None = None
     live = False
     repeatable = True
+    queues = False
+    """Whether it has a queue of its own."""
 
     def __init__(self, name: str, options: FeedOptions, position: Position | None) -> None:
         self.name = name
         self.options = options
         self._first = 0
         self._malformed = 0
+        self._ahead: Ahead | None = None
         if position is not None:
             self._first = whole_number(name, position, "sample")
             self._malformed = whole_number(name, position, "malformed")
@@ -261,8 +278,11 @@ class PieceFeed:
 
     @property
     def counts(self) -> dict[str, int]:
-        """Malformed rows up to the last batch given."""
-        return {"malformed": self._malformed}
+        """Malformed rows up to the last batch given; rows dropped, samples in the queue."""
+        if self._ahead is None:
+            return {"malformed": self._malformed}
+        ahead = self._ahead
+        return {"malformed": self._malformed, "dropped": ahead.dropped, "queued": ahead.queued}
 
     @property
     def trouble(self) -> str:
@@ -280,8 +300,11 @@ class PieceFeed:
     def arrivals(self) -> Iterator[Batch | None]:
         """Yield the same batches, and None when nothing has come for a while."""
         given = self._first > 0
+        pieces: Iterable[Piece | None] = self.pieces()
+        if self.live and not self.queues and self.options.when_full == "drop-oldest":
+            pieces = self._ahead = Ahead(self.pieces(), self.options.queue)
         found = cut_or_wait(
-            self.pieces(), self.columns, self._first, self._keeps_rest, self.options.wait is None
+            pieces, self.columns, self._first, self._keeps_rest, self.options.wait is None
         )
         for batch in found:
             if batch is not None:
@@ -308,6 +331,8 @@ class PieceFeed:
 
     def close(self) -> None:
         """Let go of what is open."""
+        if self._ahead is not None:
+            self._ahead.close()
 
     def __enter__(self) -> Self:
         return self
