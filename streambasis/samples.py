@@ -7,12 +7,15 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import DTypeLike, NDArray
 
 from streambasis.errors import SampleError, SampleTypeError, SettingError
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 DTYPES = ("float32", "float64", "complex64", "complex128")
 
@@ -144,8 +147,8 @@ def many_samples(
     SampleTypeError
         If the values are not numbers, or complex ones for a real dtype.
     """
-    if hasattr(samples, "__arrow_c_stream__") or hasattr(samples, "__arrow_c_array__"):
-        array = _from_arrow(samples, channels, dtype, missing)
+    if speaks_arrow(samples):
+        array = from_arrow(arrow_table(samples), channels, dtype, missing=missing)
     else:
         array = _numbers(samples, dtype, "batch")
         if array.size == 0 and array.ndim <= 2 and array.shape[-1] in (0, channels.count):
@@ -181,24 +184,57 @@ def _refuse_non_finite(array: NDArray[Any], channels: Channels, first: int, miss
     flat = array.reshape(-1)
     if math.isfinite(np.vdot(flat, flat).real):
         return
-    fine = ~np.isinf(array) if missing else np.isfinite(array)
-    if not fine.all():
-        row, column = (int(i) for i in np.argwhere(~fine)[0])
+    found = first_refused(array, missing=missing)
+    if found is not None:
+        row, column = found
         raise SampleError(
             f"sample {first + row}, channel {channels.names[column]!r}: value "
             f"{array[row, column]} is not finite; the sample was not taken"
         )
 
 
-def _from_arrow(
-    samples: Any, channels: Channels, dtype: np.dtype[Any], missing: bool
-) -> NDArray[Any]:
+def first_refused(array: NDArray[Any], *, missing: bool) -> tuple[int, int] | None:
+    """Return row and column of the first value that is not finite; NaN is let through if missing.
+
+    Parameters
+    ----------
+    array : ndarray, shape (m, n)
+    missing : bool
+        Whether NaN is fine, as a missing channel.
+    """
+    fine = ~np.isinf(array) if missing else np.isfinite(array)
+    if fine.all():
+        return None
+    row, column = np.argwhere(~fine)[0].tolist()
+    return row, column
+
+
+def speaks_arrow(samples: Any) -> bool:
+    """Return whether an object is a table of the Arrow PyCapsule protocol."""
+    return hasattr(samples, "__arrow_c_stream__") or hasattr(samples, "__arrow_c_array__")
+
+
+def arrow_table(samples: Any) -> pa.Table:
+    """Return an object of the Arrow PyCapsule protocol as a table, without a copy."""
     import pyarrow as pa
 
     if hasattr(samples, "__arrow_c_stream__"):
-        table = pa.table(samples)
-    else:
-        table = pa.table(pa.record_batch(samples))
+        return pa.table(samples)
+    return pa.table(pa.record_batch(samples))
+
+
+def from_arrow(
+    table: pa.Table, channels: Channels, dtype: np.dtype[Any], *, missing: bool = False
+) -> NDArray[Any]:
+    """Return the channels of an Arrow table as an array, (m, n), whose values may be infinite.
+
+    Raises
+    ------
+    SampleError, SampleTypeError
+        As :func:`many_samples`.
+    """
+    import pyarrow as pa
+
     names = table.column_names
     if channels.named:
         for name in channels.names:

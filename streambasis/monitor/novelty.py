@@ -310,15 +310,36 @@ class NoveltyMonitor:
         with self._lock:
             return self._take(checked, times).table()
 
+    def judge_rows(self, samples: NDArray[np.float64], columns: Columns, first: int) -> None:
+        """Judge a batch into columns that hold the decisions of others as well.
+
+        Parameters
+        ----------
+        samples : ndarray of float64, shape (m, n)
+            Checked, in the order of the channels; NaN marks a missing value.
+        columns : Columns
+            Rows ``first`` to ``first + m`` are filled; the times there are read.
+        first : int
+            The first of these rows.
+        """
+        with self._lock:
+            columns.sample[first : first + len(samples)] = np.arange(
+                self._count, self._count + len(samples)
+            )
+            self._fill(samples, columns, first)
+
     def _take(self, samples: NDArray[np.float64], times: NDArray[np.int64] | None) -> Columns:
         columns = Columns(self._count, times, len(samples))
+        self._fill(samples, columns, 0)
+        return columns
+
+    def _fill(self, samples: NDArray[np.float64], columns: Columns, first: int) -> None:
         start = 0
         if self._judge is None:
             start = self._learn_from(samples)
         if self._judge is not None:
-            self._judge.take(samples[start:], columns, start)
+            self._judge.take(samples[start:], columns, first + start)
         self._count += len(samples)
-        return columns
 
     def _learn_from(self, samples: NDArray[np.float64]) -> int:
         """Take samples for the baseline; return how many."""
