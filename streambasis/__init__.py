@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from streambasis.basis import StreamBasis
     from streambasis.compare import merge, principal_angles, subspace_distance
     from streambasis.errors import StreambasisError
+    from streambasis.fleet import Fleet
     from streambasis.kernels._cache import CacheWarning
     from streambasis.monitor import NoveltyMonitor
     from streambasis.principal import PrincipalBasis
@@ -23,6 +24,7 @@ if TYPE_CHECKING:
 
 _HOMES = {
     "CacheWarning": "streambasis.kernels._cache",
+    "Fleet": "streambasis.fleet",
     "NoveltyMonitor": "streambasis.monitor",
     "PrincipalBasis": "streambasis.principal",
     "StreamBasis": "streambasis.basis",
@@ -39,6 +41,7 @@ _HOMES = {
 
 __all__ = [
     "CacheWarning",
+    "Fleet",
     "NoveltyMonitor",
     "PrincipalBasis",
     "StreamBasis",

@@ -71,3 +71,7 @@ class HomeError(StreambasisError, OSError):
 
 class RecordError(StreambasisError, ValueError):
     """A kept run that cannot be read; the message names the folder or file and what is wrong."""
+
+
+class FleetError(StreambasisError, RuntimeError):
+    """A fleet that cannot go on: it is closed, or stopped in the middle of a batch."""

@@ -14,6 +14,8 @@ import re
 import secrets
 from collections.abc import Callable
 
+from streambasis.errors import HomeError
+
 OWNER_ONLY = 0o600
 PIECE = 1 << 23
 BEHIND = 1 << 25
@@ -161,6 +163,39 @@ def remove_leftovers(path: str | os.PathLike[str]) -> int:
         finally:
             os.close(descriptor)
     return removed
+
+
+def lock_folder(folder: str | os.PathLike[str], option: str) -> int:
+    """Return the descriptor of a folder's lock, held until it is closed or the process ends.
+
+    Parameters
+    ----------
+    folder : path
+        The folder; the file ``lock`` in it names the process.
+    option : str
+        What the user chooses the folder with, for the message.
+
+    Raises
+    ------
+    HomeError
+        If another process holds it; the message names that process.
+    OSError
+        If the folder cannot be written.
+    """
+    path = os.path.join(folder, "lock")
+    descriptor = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
+    try:
+        fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        process = os.pread(descriptor, 32, 0).decode("ascii", "replace").strip()
+        os.close(descriptor)
+        raise HomeError(
+            f"{os.fspath(folder)}: in use by another streambasis (process "
+            f"{process or 'unknown'}); stop it, or choose another folder for {option}"
+        ) from None
+    os.ftruncate(descriptor, 0)
+    os.pwrite(descriptor, f"{os.getpid()}\n".encode(), 0)
+    return descriptor
 
 
 def _create(folder: str, name: str) -> tuple[int, str]:

@@ -174,6 +174,11 @@ class NoveltyMonitor:
         return self._judge is not None
 
     @property
+    def baseline_left(self) -> int:
+        """Samples that the baseline still waits for."""
+        return 0 if self._judge else self._baseline - self._waiting
+
+    @property
     def count(self) -> int:
         """Samples seen."""
         return self._count

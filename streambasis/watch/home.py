@@ -8,7 +8,6 @@ is written again, the same, by the run that goes on from there.
 
 from __future__ import annotations
 
-import fcntl
 import json
 import os
 import re
@@ -23,7 +22,7 @@ import pyarrow as pa
 
 from streambasis.errors import HomeError, SnapshotError, SnapshotFileError, StreambasisError
 from streambasis.feeds import Malformed, Position
-from streambasis.files import remove_leftovers, replace_file, write_all
+from streambasis.files import lock_folder, remove_leftovers, replace_file, write_all
 from streambasis.monitor import NoveltyMonitor
 from streambasis.snapshot import read_state, save
 from streambasis.state import State
@@ -159,7 +158,7 @@ class Home:
         self._decisions = path / "decisions"
         try:
             self._decisions.mkdir(parents=True, exist_ok=True)
-            self._lock = _locked(path)
+            self._lock = lock_folder(path, "--home")
             try:
                 self._open()
             except BaseException:
@@ -441,23 +440,6 @@ class Home:
 
 def _line(fields: Mapping[str, Any]) -> bytes:
     return (json.dumps(fields, ensure_ascii=False) + "\n").encode()
-
-
-def _locked(path: Path) -> int:
-    """Return the descriptor of the lock, held until it is closed or the process ends."""
-    descriptor = os.open(path / "lock", os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, READABLE)
-    try:
-        fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
-    except BlockingIOError:
-        process = os.pread(descriptor, 32, 0).decode("ascii", "replace").strip()
-        os.close(descriptor)
-        raise HomeError(
-            f"{path}: in use by another streambasis (process {process or 'unknown'}); stop it, or "
-            "choose another folder for --home"
-        ) from None
-    os.ftruncate(descriptor, 0)
-    os.pwrite(descriptor, f"{os.getpid()}\n".encode(), 0)
-    return descriptor
 
 
 def _named(path: Path, error: OSError) -> HomeError:
