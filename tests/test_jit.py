@@ -36,6 +36,45 @@ assert shift(2.0) == 3.0 and twice(2.0) == 6.0
 print("hits", sum(shift.stats.cache_hits.values()) + sum(twice.stats.cache_hits.values()))
 """
 
+DIGEST = """
+import hashlib
+import numpy as np
+from streambasis import NoveltyMonitor, StreamBasis, to_bytes
+from streambasis.kernels.principal import orthonormal_rows
+
+rng = np.random.default_rng(5)
+samples = rng.standard_normal((3000, 3)) @ rng.standard_normal((3, 12))
+samples += 0.1 * rng.standard_normal(samples.shape)
+monitor = NoveltyMonitor(12, baseline=1000, half_life=1000)
+basis = StreamBasis(12, rtol=0.2)
+monitor.push_many(samples)
+basis.push_many(samples[:500])
+for sample in samples[500:1000]:
+    basis.push(sample)
+digest = hashlib.sha256(to_bytes(monitor) + to_bytes(basis)).hexdigest()
+print("loaded" if orthonormal_rows.stats.cache_hits else "compiled", digest)
+"""
+"""Runs kernels that call others; says whether they were compiled, and a digest of the results."""
+
+CALLS = """
+import re
+import numpy as np
+from streambasis import PrincipalBasis, StreamBasis
+from streambasis.kernels import growth, principal, projection
+
+rng = np.random.default_rng(3)
+PrincipalBasis(12).push_many(rng.standard_normal((500, 12)))
+StreamBasis(12).push(rng.standard_normal(12))
+for kernel in (projection.orthogonalize, principal.orthonormal_rows, growth.push_growing):
+    found = set()
+    for signature in kernel.signatures:
+        own = kernel.overloads[signature].fndesc.mangled_name
+        calls = re.findall(r'call [^\\n]*?@"?([\\w.$]+)', kernel.inspect_llvm(signature))
+        found |= {name for name in calls if "streambasis" in name and own not in name}
+    print(kernel.__name__, *found)
+"""
+"""Names kernels that call others, each with the functions of ours that its code still calls."""
+
 
 def run(
     script: str, cache: Path | str, *, root: Path = ROOT, **environment: str
@@ -85,6 +124,26 @@ def test_a_second_process_finds_what_the_first_compiled(tmp_path: Path) -> None:
         done = run(SHIFT, tmp_path)
         assert (done.stdout, done.stderr) == (expected, "")
     assert len(kernels_in(tmp_path)) == 2
+
+
+def test_a_process_that_compiles_agrees_to_the_last_bit_with_one_that_finds_all_kept(
+    tmp_path: Path, nowhere: tuple[Path, dict[str, str]]
+) -> None:
+    """A run gives the same bits whether its kernels were compiled for it or loaded from disk."""
+    root, environment = nowhere
+    first, second = (run(DIGEST, tmp_path, root=root, **environment) for _ in range(2))
+    assert first.stderr == second.stderr == ""
+    assert (first.stdout.split()[0], second.stdout.split()[0]) == ("compiled", "loaded")
+    assert first.stdout.split()[1] == second.stdout.split()[1]
+
+
+def test_no_kernel_calls_another_in_compiled_code(
+    tmp_path: Path, nowhere: tuple[Path, dict[str, str]]
+) -> None:
+    """What a kernel calls is part of its own code, so that no linker chooses among copies."""
+    root, environment = nowhere
+    done = run(CALLS, tmp_path, root=root, **environment)
+    assert (done.stdout, done.stderr) == ("orthogonalize\northonormal_rows\npush_growing\n", "")
 
 
 def test_other_compiler_settings_are_other_code(tmp_path: Path) -> None:
