@@ -138,3 +138,43 @@ def test_longest_runs_are_counted_per_channel() -> None:
     """Repetitions are counted without a break, and a missing value is a break."""
     values = np.array([[1.0, 2], [1, 2], [1, np.nan], [0, 2], [0, 2], [0, 2], [0, 2]])
     assert longest_runs(values).tolist() == [3, 3]
+
+
+def test_first_movements_are_ordinary_where_the_baseline_shows_many() -> None:
+    """Constant channels are measured like the others once first movements are to be expected."""
+    rng = np.random.default_rng(30)
+    values = rng.normal(size=(400, 12))
+    values[:, 8:] = 0.0
+    rare, _, _ = fit_scaling(values)
+    assert not rare.firsts
+    assert (rare.scale[8:] < 1e-50).all()
+    seldom = np.zeros((400, 24))
+    seldom[rng.integers(400, size=18), np.arange(18)] = rng.uniform(2.0, 8.0, 18)
+    often, _, _ = fit_scaling(np.hstack([values, seldom]))
+    assert often.firsts
+    assert often.constant.sum() == 4 + 6
+    usual = often.scale[~often.constant]
+    assert (often.scale[often.constant] > usual.min()).all()
+    assert (often.scale[often.constant] < usual.max()).all()
+
+
+def test_patience_grows_with_repetition() -> None:
+    """A channel that repeats its value often in the baseline may do so for longer."""
+    rng = np.random.default_rng(31)
+    values = np.column_stack([rng.normal(size=2000), rng.integers(0, 3, 2000)])
+    scaling, _, _ = fit_scaling(values)
+    assert scaling.patience[0] == 32
+    # it repeats one time in three; 5/6 is the chance where it changes a quarter as often
+    assert scaling.patience[1] == pytest.approx(np.log(1e-9) / np.log(5 / 6), rel=0.05)
+
+
+def test_burst_in_few_samples_does_not_make_a_channel_blind() -> None:
+    """A variance that few samples tell is drawn to what the other channels have."""
+    rng = np.random.default_rng(32)
+    values = rng.normal(size=(60, 30))
+    values[:, 0] *= 1e-3
+    values[::20, 0] = 0.3
+    drawn = fit_scaling(values)[0].scale
+    long = fit_scaling(rng.normal(size=(5000, 30)) * np.r_[1e-3, np.ones(29)])[0].scale
+    assert drawn[0] > 0.1
+    assert long[0] == pytest.approx(1e-3, rel=0.05)

@@ -205,7 +205,8 @@ class Model:
         # where nothing moved in the baseline the limit is zero
         floor = MOVED * max(self.limit.value, 1.0)
         self._freeze = self.mean + np.sqrt(floor / own) + 3.0 * np.sqrt(self.energies @ squares)
-        self._reach[self.scaling.constant] = math.sqrt(floor)
+        if not self.scaling.firsts:
+            self._reach[self.scaling.constant] = math.sqrt(floor)
 
     def project(self, standing: list[NDArray[np.float64]]) -> None:
         """Set up the directions that samples are split over, those of standing events last."""
@@ -388,6 +389,7 @@ class Model:
         """Hand over everything needed to go on."""
         facts = {
             "rank": self.scaling.rank,
+            "firsts": self.scaling.firsts,
             "t2_limit": self.t2_limit,
             "t2_count": self._t2_count,
         }
@@ -416,6 +418,8 @@ class Model:
             facts["rank"],
             state.take("constant", np.bool_, (n,)),
             state.take("nearly", np.bool_, (n,)),
+            # older snapshots were made when every first movement was news
+            facts.get("firsts", False),
             state.take("patience", np.int64, (n,)),
         )
         if not (model.scaling.scale > 0).all():

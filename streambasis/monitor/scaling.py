@@ -14,6 +14,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.monitor.moderation import moderated
+
 NORMAL_MAD = 1.482602218505602
 """Standard deviation of a normal variable over its median absolute deviation."""
 
@@ -26,9 +28,22 @@ ROUNDING = 64.0 * float(np.finfo(np.float64).eps)
 
 FREEZE = 4
 LEAST_FREEZE = 32
+CHANCE_OF_FREEZE = 1e-9
 """A channel counts as frozen when it repeats its value four times as often as ever in the baseline,
-and so many times at least: a run of independent repetitions that long has about the fourth power
-of the probability of the longest."""
+and so many times at least that a channel that repeats four times as often as in the baseline, or
+changes a quarter as often, would do so with this probability only: that is a quieter channel."""
+
+GROSS = 8.0
+"""A value is a gross outlier when it lies beyond so many robust standard deviations and beyond so
+many times what 99 % of the channel's values reach: bursts of ordinary running are to be kept."""
+
+ORDINARY_FIRSTS = 0.01
+SELDOM = 4
+"""First movements of constant channels are ordinary where more than this part of the samples is to
+show one, as judged by the channels that moved so many times at most."""
+
+LEAST_LEFT = 0.1
+"""Part of its degrees of freedom that a noise variance keeps however many channels there are."""
 
 FEW_CHANNELS = 20
 """Up to here the rank is chosen by BIC over fitted models: the eigenvalue rules need a tail of
@@ -65,6 +80,9 @@ class Scaling:
     constant, nearly : ndarray of bool, shape (n,)
         Channels that held one value all through the baseline, and those that held one value for
         half of it or more, or varied by no more than rounding.
+    firsts : bool
+        Whether the first movement of a constant channel is ordinary for this feed, so that only
+        its size counts.
     patience : ndarray of int64, shape (n,)
         Repetitions of a value after which the channel counts as frozen.
     """
@@ -74,6 +92,7 @@ class Scaling:
     rank: int
     constant: NDArray[np.bool_]
     nearly: NDArray[np.bool_]
+    firsts: bool
     patience: NDArray[np.int64]
 
 
@@ -97,20 +116,31 @@ def fit_scaling(
         As described there.
     ndarray of float64, shape (m, n)
         The samples about their centre and in units of the noise, with missing values filled in
-        by zero and gross outliers drawn in to twice what the channel's 99th percentile reaches
-        (or 8 robust standard deviations where that is more).
+        by zero and gross outliers drawn in to eight times what the channel's 99th percentile
+        reaches (or 8 robust standard deviations where that is more).
     ndarray of bool, shape (m,)
         Which samples are fit to learn from: those without gross outliers in a tenth of their
         channels, or in two.
 
     Notes
     -----
+    Noise variances are drawn to those of the other channels where the baseline tells little of
+    them: see :func:`~streambasis.monitor.moderation.moderated`.
+
     A constant channel has no noise to measure by. It is given a scale at the rounding of its
-    value, so that any later movement is far beyond every limit.
+    value, so that any later movement is far beyond every limit. Where many channels have moved in
+    a single sample of the baseline each, more such first movements are to come, with about the
+    probability that a sample of the baseline showed one that stayed the only one (Good 1953):
+    where that is not small, constant channels are measured by what is usual for the others.
+
+    References
+    ----------
+    Good (1953), The population frequencies of species and the estimation of population
+    parameters, Biometrika 40:237.
     """
     centre, spread, constant, nearly = robust_start(samples)
     deviations = np.where(np.isnan(samples), centre, samples) - centre
-    reach = np.maximum(8.0 * spread, 2.0 * np.nanquantile(np.abs(deviations), 0.99, axis=0))
+    reach = GROSS * np.maximum(spread, np.nanquantile(np.abs(deviations), 0.99, axis=0))
     gross = np.count_nonzero(np.abs(deviations) > reach, axis=1)
     fit = gross < max(2, samples.shape[1] // 10)
     np.clip(deviations, -reach, reach, out=deviations)
@@ -118,16 +148,59 @@ def fit_scaling(
     scale = np.where(moving, spread, spread + ROUNDING * np.abs(centre))
     scale[scale == 0.0] = np.finfo(np.float64).tiny ** 0.25
     found = 0
+    firsts = _first_movements(samples, centre) > ORDINARY_FIRSTS
     if moving.any():
-        noise, found = noise_variances(deviations[np.ix_(fit, moving)] / spread[moving], rank, most)
+        z = deviations[np.ix_(fit, moving)] / spread[moving]
+        noise, found = noise_variances(z, rank, most)
         scale[moving] = spread[moving] * np.sqrt(noise)
         scale[nearly] = np.maximum(scale[nearly], spread[nearly])
-    patience = np.maximum(LEAST_FREEZE, FREEZE * longest_runs(samples))
+        freedom = np.zeros(len(scale))
+        freedom[moving] = degrees_of_freedom(z)
+        drawn, _ = moderated(2.0 * np.log(scale), freedom)
+        told = moving | firsts
+        scale[told] = np.exp(0.5 * drawn[told])
+    patience = _patience(samples)
     patience[constant | nearly] = np.iinfo(np.int64).max
-    scaling = Scaling(centre, scale, found if rank is None else rank, constant, nearly, patience)
+    shared = found if rank is None else rank
+    scaling = Scaling(centre, scale, shared, constant, nearly, firsts, patience)
     deviations[:, ~moving] = 0.0
     deviations /= scale
     return scaling, deviations, fit
+
+
+def _first_movements(samples: NDArray[np.float64], centre: NDArray[np.float64]) -> float:
+    """Return how probable it is that a sample moves a channel for the first time.
+
+    After Good and Turing, the part of the samples that moved a channel which no other moved;
+    smoothed over channels that moved up to ``SELDOM`` times, of which k as often are one in k when
+    any rate of movement is as likely; and by Laplace's rule of succession.
+    """
+    moved = np.count_nonzero((samples != centre) & ~np.isnan(samples), axis=0)
+    once = float(moved[(moved > 0) & (moved <= SELDOM)].sum()) / SELDOM
+    return (once + 1.0) / (len(samples) + 1.0)
+
+
+def degrees_of_freedom(z: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Return how many independent normal samples would tell each noise variance as well, (n,).
+
+    Parameters
+    ----------
+    z : ndarray of float64, shape (m, n)
+        Samples of channels that move.
+
+    Notes
+    -----
+    The variance of m samples with kurtosis κ has the relative variance (κ - 1)/m, that of d
+    normal ones 2/d. Parting noise from what n channels share takes n of m degrees of freedom.
+    """
+    m, n = z.shape
+    deviations = z - z.mean(axis=0)
+    deviations *= deviations
+    variances = deviations.mean(axis=0)
+    fourth = np.einsum("ij,ij->j", deviations, deviations) / m
+    kurtosis = fourth / np.maximum(variances * variances, np.finfo(np.float64).tiny)
+    left = max(m - n, LEAST_LEFT * m)
+    return np.asarray(left * 2.0 / np.maximum(kurtosis - 1.0, 2.0))
 
 
 def robust_start(
@@ -150,6 +223,16 @@ def robust_start(
         spread[nearly] = np.nanmax(away[:, nearly], axis=0) / SEEN
     spread[spread <= ROUNDING * np.abs(centre)] = 0.0
     return centre, spread, constant, nearly
+
+
+def _patience(samples: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Return after how many repetitions of its value each channel counts as frozen, (n,)."""
+    often = np.mean(samples[1:] == samples[:-1], axis=0)
+    often = np.minimum(FREEZE * often, 1.0 - (1.0 - often) / FREEZE)
+    often = np.clip(often, 1e-300, 1.0 - 1e-6)
+    chance = np.ceil(math.log(CHANCE_OF_FREEZE) / np.log(often)).astype(np.int64)
+    runs = FREEZE * longest_runs(samples)
+    return np.asarray(np.maximum(np.maximum(LEAST_FREEZE, chance), runs))
 
 
 def longest_runs(samples: NDArray[np.float64]) -> NDArray[np.int64]:
