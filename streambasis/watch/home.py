@@ -13,6 +13,7 @@ import os
 import re
 from collections.abc import Mapping, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
+from contextlib import ExitStack
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from types import TracebackType
@@ -272,13 +273,13 @@ class Home:
                     )
         self._about = dict(about)
 
-    def take(self, decisions: pa.Table) -> None:
-        """Take the decisions of a batch, to be kept by the next commit."""
-        while len(decisions):
-            decisions = decisions.slice(self._segment.take(decisions))
-            if self._segment.full:
-                self._full.append(self._segment)
-                self._segment = self._segment.next()
+    @property
+    def segment(self) -> Segment:
+        """The file of decisions under way, with room for one at least."""
+        if self._segment.full:
+            self._full.append(self._segment)
+            self._segment = self._segment.next()
+        return self._segment
 
     def take_event(self, event: Mapping[str, Any]) -> None:
         """Take a closed event, to be kept by the next commit."""
@@ -294,7 +295,7 @@ class Home:
     @property
     def waiting(self) -> int:
         """Files of decisions that are full and wait to be written."""
-        return len(self._full)
+        return len(self._full) + self._segment.full
 
     @property
     def waiting_bytes(self) -> int:
@@ -327,7 +328,7 @@ class Home:
             Readings of the basis over the run, which replace those that were kept before.
         """
         sizes = self._events.size, self._malformed.size
-        held = {"core": monitor.to_state(), "decisions": self._segment.to_state(), **parts}
+        held = {"core": monitor.to_state(), "decisions": self.segment.to_state(), **parts}
         own: dict[str, Any] = {"about": self._about, "decisions": self._format}
         own |= {"events_bytes": sizes[0], "malformed_bytes": sizes[1]}
         state = State(KIND, {**facts, **own}, {}, held)
@@ -413,14 +414,15 @@ class Home:
         """
         self._thread.shutdown()
         try:
-            if self._segment.count:
-                self._write_segment(self._segment)
+            with ExitStack() as held:
+                # whatever fails, the others are let go of, the lock last
+                held.callback(os.close, self._lock)
+                held.callback(self._malformed.close)
+                held.callback(self._events.close)
+                if self._segment.count:
+                    self._write_segment(self._segment)
         except OSError as error:
             raise _named(self.path, error) from None
-        finally:
-            self._events.close()
-            self._malformed.close()
-            os.close(self._lock)
 
     def _write_segment(self, segment: Segment) -> None:
         self._write_table(f"decisions/{segment.first:012d}.{self._format}", segment.table())

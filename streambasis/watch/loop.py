@@ -10,21 +10,22 @@ from typing import Any, Protocol
 
 import numpy as np
 import pyarrow as pa
-import pyarrow.compute as pc
 from numpy.typing import NDArray
 
 from streambasis.audit import ORTHOGONALITY_LIMIT
 from streambasis.errors import FeedError, NumericalError
 from streambasis.feeds import Batch, Feed, Malformed, Position
 from streambasis.monitor import Event, NoveltyMonitor
+from streambasis.monitor.verdict import NO_EVENT
 from streambasis.state import State
 from streambasis.times import NANOSECONDS
 from streambasis.watch.home import Home
 from streambasis.watch.keeping import COMMIT_SAMPLES, COMMIT_SECONDS, Keeping
 from streambasis.watch.progress import Progress
+from streambasis.watch.segment import Segment
 from streambasis.watch.vitals import Vitals
 
-AUDIT_SECONDS = 60.0
+AUDIT_SECONDS = 1.0
 AUDIT_SHARE = 0.02
 """Seconds between two audits, and the largest part of the time that they may take: an audit that
 costs more than that part of the seconds comes less often. One also goes before each commit, which
@@ -184,6 +185,13 @@ class Run:
             self._place = lambda: position
             self._progress.take_state(self._home.state.parts["progress"])
         self._open = {event["event"] for event in self._monitor.events if event.open}
+        self._count_up()
+        self._vitals.rank, self._vitals.malformed = self._monitor.rank, self._malformed
+
+    def _count_up(self) -> None:
+        vitals = self._vitals
+        vitals.samples, vitals.novel = self._monitor.count, self._novel
+        vitals.events, vitals.open_events = self._opened, len(self._open)
 
     def __call__(self, asked: threading.Event) -> Summary:
         """Read the feed to its end, or until asked to stop.
@@ -380,14 +388,15 @@ class Run:
             if due is not None:
                 until = min(max(due - self._monitor.count + done, done), until)
             if until > done:
-                decisions = self._push(batch.values[done:until], batch.times, done)
+                times = batch.times
+                self._push(batch.values[done:until], None if times is None else times[done:until])
                 done = until
             self._adopt()
         self._place = batch.place
         vitals.taken_at = time.time()
         vitals.batches += 1
         if len(batch):
-            self._read_vitals(decisions)
+            self._read_vitals()
             self._progress.take(self._monitor)
             self._reporter.advance(self._monitor.count)
 
@@ -402,27 +411,25 @@ class Run:
         if self._home is not None:
             self._home.take_malformed(rows)
 
-    def _push(
-        self, values: NDArray[np.float64], times: NDArray[np.int64] | None, first: int
-    ) -> pa.Table:
-        at = None if times is None else times[first : first + len(values)].view("datetime64[ns]")
-        decisions = self._monitor.push_many(values, at=at)
-        if self._home is not None:
-            self._home.take(decisions)
-        self._novel += pc.sum(decisions["novel"]).as_py()
-        # the events themselves are dear, and every one that is open marks the samples after it
-        if self._open or decisions["event"].null_count < len(decisions):
-            self._tell()
-        return decisions
+    def _push(self, values: NDArray[np.float64], times: NDArray[np.int64] | None) -> None:
+        """Push samples, cut where a file of decisions is full."""
+        vitals, home = self._vitals, self._home
+        while len(values):
+            segment = Segment(0, len(values)) if home is None else home.segment
+            rows = segment.judge(self._monitor, values, times)
+            columns, taken = segment.columns, rows.stop - rows.start
+            values, times = values[taken:], None if times is None else times[taken:]
+            self._novel += int(np.count_nonzero(columns.novel[rows]))
+            vitals.spe = float(np.nan_to_num(columns.spe[rows.stop - 1]))
+            vitals.limit = float(np.nan_to_num(columns.limit[rows.stop - 1]))
+            # the events themselves are dear, and every one that is open marks the samples after it
+            if self._open or (columns.event[rows] != NO_EVENT).any():
+                self._tell()
 
-    def _read_vitals(self, decisions: pa.Table) -> None:
+    def _read_vitals(self) -> None:
         """Take the readings that cost next to nothing."""
-        vitals, monitor, counts = self._vitals, self._monitor, self._feed.counts
-        vitals.samples, vitals.novel = monitor.count, self._novel
-        vitals.events, vitals.open_events = self._opened, len(self._open)
-        last = len(decisions) - 1
-        vitals.spe = decisions["spe"][last].as_py() or 0.0
-        vitals.limit = decisions["limit"][last].as_py() or 0.0
+        vitals, counts = self._vitals, self._feed.counts
+        self._count_up()
         vitals.queue, vitals.dropped = counts.get("queued", 0), counts.get("dropped", 0)
         vitals.duplicates = counts.get("duplicates", 0)
         if self._last_time is not None and self._feed.columns.unit is None:

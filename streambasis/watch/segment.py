@@ -2,19 +2,18 @@
 
 from __future__ import annotations
 
-from typing import Any, Self
+from typing import Self
 
 import numpy as np
 import pyarrow as pa
 from numpy.typing import NDArray
 
-from streambasis.monitor.verdict import NO_EVENT, NO_TIME, Columns
+from streambasis.monitor import NoveltyMonitor
+from streambasis.monitor.verdict import Columns
 from streambasis.state import State
 
 SEGMENT_ROWS = 1 << 16
 """Decisions per file, about 4 MB: few files over months, and little held in memory."""
-
-_UNKNOWN = {"time": NO_TIME, "event": NO_EVENT}
 
 
 class Segment:
@@ -29,38 +28,61 @@ class Segment:
 
     Attributes
     ----------
+    columns : Columns
+        The decisions so far, and room for those to come.
     count : int
         Decisions so far.
     written : bool
         Whether its file has been written; set by whoever writes it.
     """
 
-    __slots__ = ("_columns", "count", "first", "rows", "written")
+    __slots__ = ("columns", "count", "first", "rows", "written")
 
     def __init__(self, first: int = 0, rows: int = SEGMENT_ROWS) -> None:
         self.first, self.rows, self.count = first, rows, 0
         self.written = False
-        self._columns = Columns(first, None, rows)
+        self.columns = Columns(first, None, rows)
 
     @property
     def full(self) -> bool:
         """Whether the file is full."""
         return self.count == self.rows
 
-    def take(self, decisions: pa.Table) -> int:
-        """Take as many decisions as there is room for and return how many."""
-        taken = min(self.rows - self.count, len(decisions))
+    def judge(
+        self,
+        monitor: NoveltyMonitor,
+        samples: NDArray[np.float64],
+        times: NDArray[np.int64] | None,
+    ) -> slice:
+        """Have a monitor judge as many samples as there is room for.
+
+        Parameters
+        ----------
+        monitor : NoveltyMonitor
+            Which takes them.
+        samples : ndarray of float64, shape (m, n)
+            As a feed gives them.
+        times : ndarray of int64, shape (m,), or None
+            Their times in nanoseconds.
+
+        Returns
+        -------
+        slice
+            Where their decisions lie in ``columns``.
+        """
+        taken = min(self.rows - self.count, len(samples))
         rows = slice(self.count, self.count + taken)
-        for name in Columns.__slots__:
-            getattr(self._columns, name)[rows] = _numbers(name, decisions[name][:taken])
+        if times is not None:
+            self.columns.time[rows] = times[:taken]
+        monitor.judge_rows(samples[:taken], self.columns, self.count)
         self.count += taken
-        return taken
+        return rows
 
     def table(self) -> pa.Table:
         """Return the decisions so far, as the monitor gives them."""
         columns = Columns(self.first, None, self.count)
         for name in Columns.__slots__:
-            setattr(columns, name, getattr(self._columns, name)[: self.count])
+            setattr(columns, name, getattr(self.columns, name)[: self.count])
         return columns.table()
 
     def next(self) -> Self:
@@ -69,7 +91,7 @@ class Segment:
 
     def to_state(self) -> State:
         """Hand over the decisions so far, where they lie: they are never changed again."""
-        arrays = {name: getattr(self._columns, name)[: self.count] for name in Columns.__slots__}
+        arrays = {name: getattr(self.columns, name)[: self.count] for name in Columns.__slots__}
         return State("Segment", {"first": self.first, "rows": self.rows}, arrays)
 
     @classmethod
@@ -78,17 +100,7 @@ class Segment:
         segment = cls(state.facts["first"], state.facts["rows"])
         count = len(state.take("sample", np.int64, (None,)))
         for name in Columns.__slots__:
-            held = getattr(segment._columns, name)
+            held = getattr(segment.columns, name)
             held[:count] = state.take(name, held.dtype, (count,))
         segment.count = count
         return segment
-
-
-def _numbers(name: str, column: pa.ChunkedArray) -> NDArray[Any]:
-    """Return a column as the monitor holds it, with a number for null."""
-    if name == "time":
-        column = column.cast(pa.int64())
-    if column.null_count:
-        column = column.fill_null(_UNKNOWN.get(name, np.nan))
-    numbers: NDArray[Any] = column.to_numpy()
-    return numbers
