@@ -292,6 +292,24 @@ def test_a_compiler_without_our_place_for_the_cache(monkeypatch: pytest.MonkeyPa
         _jit.entry(norm, np.ones(3))
 
 
+def test_a_compiler_without_the_option_for_its_memory_manager(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    """Where numba cannot leave its memory manager out, kernels compile with it and run the same."""
+    assert _jit.without_memory_manager() == {"_nrt": False}, "the option that we count on is gone"
+    monkeypatch.setattr(_jit, "cpu_target", SimpleNamespace(options=SimpleNamespace()))
+    assert _jit.without_memory_manager() == {}
+    rows = np.arange(6.0).reshape(2, 3)
+
+    @_jit.kernel(reassociate=True)
+    def last_sum(rows):
+        row = rows[rows.shape[0] - 1]
+        return row.sum()
+
+    assert "_nrt" not in getattr(last_sum, "targetoptions", {})
+    assert last_sum(rows) == 12.0
+
+
 def test_a_kernel_of_its_own_can_be_flushed(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

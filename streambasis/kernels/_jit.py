@@ -7,6 +7,7 @@ from typing import Any, cast
 
 import numba
 import numpy as np
+from numba.core.registry import cpu_target
 from numba.extending import overload
 
 from streambasis.kernels._cache import KernelCache, warn_once
@@ -20,9 +21,9 @@ check for NaN is compiled away."""
 def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
     """Return a decorator that compiles a kernel at its first call and keeps the result on disk.
 
-    Kernels are compiled without numba's memory manager (its option ``_nrt``): one that allocates
-    does not compile, and taking a row of an array costs no atomic reference count, which was
-    measured at half the time of a push at 64 channels.
+    Kernels are compiled without numba's memory manager where it has the option for that: one that
+    allocates does not compile, and taking a row of an array costs no atomic reference count, which
+    was measured at half the time of a push at 64 channels. Elsewhere they only run more slowly.
 
     A kernel that another one calls is compiled into it. As a function of its own it would stand in
     the object code of each caller, and the linker would give all of them the copy that the process
@@ -39,8 +40,8 @@ def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
         "nogil": True,
         "error_model": "numpy",
         "fastmath": set(REASSOCIATE) if reassociate else False,
-        "_nrt": False,
         "forceinline": True,
+        **without_memory_manager(),
     }
 
     def decorate(function: Callable[..., Any]) -> Any:
@@ -50,6 +51,15 @@ def kernel(*, reassociate: bool = False) -> Callable[[Callable[..., Any]], Any]:
         return compiled
 
     return decorate
+
+
+def without_memory_manager() -> dict[str, Any]:
+    """Return the option that leaves numba's memory manager out, or none where it has no such.
+
+    The option is not public: a version that has given it up refuses every kernel that names it.
+    """
+    known = getattr(cpu_target, "options", None)
+    return {"_nrt": False} if hasattr(known, "_nrt") else {}
 
 
 def install_cache(dispatcher: Any, function: Callable[..., Any]) -> None:
