@@ -77,7 +77,7 @@ class Held(NamedTuple):
     reals: Any
 
 
-@kernel()
+@kernel(internal=True)
 def held(scratch, small, directions, coordinates, members, sizes, pool, integers, reals):
     """Name the parts of the arrays that a caller keeps together to pass fewer of them."""
     rows = directions.shape[0]
@@ -99,7 +99,7 @@ def held(scratch, small, directions, coordinates, members, sizes, pool, integers
     )
 
 
-@kernel()
+@kernel(internal=True)
 def delete_column(a, k, place):
     """Delete one column of the factorized k×k block; the last row of Q is then the vacant u.
 
@@ -125,7 +125,7 @@ def delete_column(a, k, place):
         holders[i] = holders[i + 1]
 
 
-@kernel()
+@kernel(internal=True)
 def append_column(a, k, slot):
     """Make the sample in ``slot`` the pivot of the last, vacant column of the k×k block."""
     c = a.coordinates[slot]
@@ -135,7 +135,7 @@ def append_column(a, k, slot):
     a.members[slot, PIVOT] = 1
 
 
-@kernel()
+@kernel(internal=True)
 def loss_without(a, slot, h):
     """Return how far outside the span a sample may lie once its part ``h`` along u is given up.
 
@@ -149,7 +149,7 @@ def loss_without(a, slot, h):
     return lost + part
 
 
-@kernel()
+@kernel(internal=True)
 def share(a, slot, u, k):
     """Return the share of a sample's norm along u, 0 where the sample does not need u.
 
@@ -164,7 +164,7 @@ def share(a, slot, u, k):
     return math.sqrt(square(h)) / a.sizes[slot, LENGTH]
 
 
-@kernel()
+@kernel(internal=True)
 def successor(a, u, k):
     """Return the slot of the sample that takes over the vacant direction ``u``, or NONE.
 
@@ -186,7 +186,7 @@ def successor(a, u, k):
     return slot
 
 
-@kernel()
+@kernel(internal=True)
 def reflect(vector, w, beta, k):
     """Apply the Householder reflection I - beta·w·wᴴ to a coordinate vector; return wᴴ vector."""
     s = inner(w, vector, k)
@@ -194,13 +194,13 @@ def reflect(vector, w, beta, k):
     return s
 
 
-@kernel()
-def drop(a, known):
+@kernel(internal=True)
+def drop(a):
     """Let the vacant direction go: one reflection moves it to the last row, which is given up.
 
-    With H u = alpha·e_k the coordinates become H c and the directions conj(H) V. ``opened`` holds
-    uᵀV where ``known`` says so. What each sample loses is recorded; pivots have nothing along u but
-    rounding. Returns the factor beta of H = I - beta·w·wᴴ, with w in the workspace.
+    With H u = alpha·e_k the coordinates become H c and the directions conj(H) V; ``opened`` holds
+    uᵀV. What each sample loses is recorded; pivots have nothing along u but rounding. Returns the
+    factor beta of H = I - beta·w·wᴴ, with w in the workspace.
     """
     u, w, opened, header = a.work[U], a.work[W], a.opened, a.header
     k = header[RANK]
@@ -213,10 +213,7 @@ def drop(a, known):
         w[j] = u[j]
     w[last] -= alpha
     beta = 1.0 / (1.0 + size)
-    if known:
-        add_multiple(opened, -alpha, a.directions[last], opened.shape[0])
-    else:
-        combine(a.directions, k, w, opened)
+    add_multiple(opened, -alpha, a.directions[last], opened.shape[0])
     spread(a.directions, last, -beta, w, opened)
     slot = header[NEWEST]
     while slot != NONE:
@@ -236,7 +233,14 @@ def drop(a, known):
     return beta
 
 
-@kernel()
+@kernel(internal=True)
+def let_go(a):
+    """Drop the vacant direction, uᵀV being unknown as yet."""
+    combine(a.directions, a.header[RANK], a.work[U], a.opened)
+    drop(a)
+
+
+@kernel(internal=True)
 def unlink(a, slot):
     """Take one sample out of the window; a direction that it held up is vacant from now on."""
     members, header = a.members, a.header
@@ -262,7 +266,7 @@ def unlink(a, slot):
     header[LIVE] -= 1
 
 
-@kernel()
+@kernel(internal=True)
 def leave_pool(a, slot):
     """Give up the full copy of an uncovered sample; the last copy moves into its place."""
     place = a.members[slot, PLACE]
@@ -276,7 +280,7 @@ def leave_pool(a, slot):
     a.header[UNCOVERED] = last
 
 
-@kernel()
+@kernel(internal=True)
 def expire(a, horizon, room):
     """Take out what is stamped at or before ``horizon``, and the oldest until ``room`` are free."""
     header = a.header
@@ -289,12 +293,12 @@ def expire(a, horizon, room):
         header[EXPIRED] += 1
 
 
-@kernel()
-def settle(a, may_stay_open):
+@kernel(internal=True)
+def settle(a):
     """Find a new pivot for every vacant direction, or drop it.
 
     Returns whether the last one was left open: no sample needs it, ``work[U]`` holds it, and the
-    caller either drops it or puts a new direction in its place.
+    caller either lets it go or puts a new direction in its place.
     """
     header = a.header
     place = header[RANK] - 1
@@ -314,15 +318,15 @@ def settle(a, may_stay_open):
         slot = successor(a, u, k)
         if slot != NONE:
             append_column(a, k, slot)
-        elif may_stay_open and header[VACANT] == 0:
+        elif header[VACANT] == 0:
             return True
         else:
-            drop(a, False)
+            let_go(a)
         place -= 1
     return False
 
 
-@kernel()
+@kernel(internal=True)
 def replace(a, left):
     """Put the normalized residual in the place of the open direction.
 
@@ -347,7 +351,7 @@ def replace(a, left):
     a.header[WEAR] += 1
 
 
-@kernel()
+@kernel(internal=True)
 def grow(a, left):
     """Append the normalized residual as a direction; the block gains a row and a column."""
     k = a.header[RANK]

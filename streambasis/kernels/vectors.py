@@ -14,7 +14,7 @@ SHORT = 512
 longer ones the processor holds loads back behind stores to other rows at equal page offsets."""
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def combine(directions, rank, u, out):
     """Set ``out`` to the combination of the first ``rank`` directions with the weights ``u``."""
     n = out.shape[0]
@@ -34,7 +34,7 @@ def combine(directions, rank, u, out):
         j += 1
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def take_out_and_combine(directions, rank, residual, coefficients, u, out):
     """Take the directions out of a residual and combine them, in one reading."""
     n = residual.shape[0]
@@ -71,7 +71,7 @@ def take_out_and_combine(directions, rank, residual, coefficients, u, out):
         j += 1
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def inner(a, b, count):
     """Return aᴴb over the first ``count`` entries."""
     total = a[0] * 0
@@ -80,14 +80,14 @@ def inner(a, b, count):
     return total
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def add_multiple(out, factor, vector, count):
     """Add ``factor`` times ``vector`` to ``out`` over the first ``count`` entries."""
     for i in range(count):
         out[i] += factor * vector[i]
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def spread(directions, count, factor, u, vector):
     """Add ``factor``·conj(u_j)·vector to each of the first ``count`` directions j."""
     n = vector.shape[0]
@@ -108,7 +108,7 @@ def spread(directions, count, factor, u, vector):
         j += 1
 
 
-@kernel(reassociate=True)
+@kernel(reassociate=True, internal=True)
 def rotate(a, b, c, s, start, count, shift):
     """Replace a and b by c·a + s·b and c̄·b - s̄·a, b being read ``shift`` entries further on."""
     for j in range(start, count):
@@ -117,7 +117,7 @@ def rotate(a, b, c, s, start, count, shift):
         b[j] = c.conjugate() * y - s.conjugate() * x
 
 
-@kernel()
+@kernel(internal=True)
 def square(h):
     """Return |h|²."""
     return h.real * h.real + h.imag * h.imag

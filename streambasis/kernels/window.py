@@ -50,6 +50,7 @@ from streambasis.kernels.exchange import (
     grow,
     held,
     leave_pool,
+    let_go,
     reflect,
     replace,
     settle,
@@ -81,7 +82,7 @@ WORN = 16
 channel: Q drifts by a few epsilons in that time, far below what V is allowed."""
 
 
-@kernel()
+@kernel(internal=True)
 def enough(left, before, doubt, tolerance, passes, policy):
     """Say whether a Gram-Schmidt pass that left ``left`` of ``before`` may be the last.
 
@@ -99,7 +100,7 @@ def enough(left, before, doubt, tolerance, passes, policy):
     return left - doubt > tolerance and 2.0 * left * left >= before * before
 
 
-@kernel()
+@kernel(internal=True)
 def project(a, length, tolerance):
     """Make ``residual`` orthogonal to the directions; return its norm and the passes taken."""
     k, policy = a.header[RANK], a.header[POLICY]
@@ -116,7 +117,7 @@ def project(a, length, tolerance):
         before = left
 
 
-@kernel()
+@kernel(internal=True)
 def project_open(a, length, tolerance):
     """Do :func:`project` against the directions without uᵀV, which is put into ``opened``.
 
@@ -145,7 +146,7 @@ def project_open(a, length, tolerance):
         along = whole
 
 
-@kernel()
+@kernel(internal=True)
 def tolerance_of(a, length, exponent):
     """Return the tolerance of a sample of norm ``length`` in its own scale."""
     floor = rounding_floor(a.header[RANK]) * epsilon_of(a.residual)
@@ -153,7 +154,7 @@ def tolerance_of(a, length, exponent):
     return max(rtol * length, math.ldexp(a.reals[ATOL], -int(exponent)))
 
 
-@kernel()
+@kernel(internal=True)
 def refill(a):
     """Let uncovered samples take their place, oldest first, while there are directions to spare."""
     header = a.header
@@ -163,35 +164,41 @@ def refill(a):
             if a.members[a.owners[other], ID] < a.members[a.owners[place], ID]:
                 place = other
         slot = a.owners[place]
-        if reproject(a, slot, True):
-            append_column(a, header[RANK], slot)
-            # backwards, since a sample found covered gives its place to the last one
-            for other in range(header[UNCOVERED] - 1, -1, -1):
-                reproject(a, a.owners[other], False)
+        left = reproject(a, slot)
+        if left <= a.sizes[slot, TOLERANCE]:
+            keep_projected(a, slot, left)
+            continue
+        grow(a, left)
+        keep_projected(a, slot, 0.0)
+        append_column(a, header[RANK], slot)
+        # backwards, since a sample found covered gives its place to the last one
+        for other in range(header[UNCOVERED] - 1, -1, -1):
+            slot = a.owners[other]
+            keep_projected(a, slot, reproject(a, slot))
 
 
-@kernel()
-def reproject(a, slot, may_grow):
-    """Project an uncovered sample again; say whether it grew the basis, where it may."""
-    length, tolerance = a.sizes[slot, LENGTH], a.sizes[slot, TOLERANCE]
+@kernel(internal=True)
+def reproject(a, slot):
+    """Project an uncovered sample again; return the norm of its residual."""
     place = a.members[slot, PLACE]
     for i in range(a.residual.shape[0]):
         a.residual[i] = a.pool[place, i]
-    left, _ = project(a, length, tolerance)
-    grew = may_grow and left > tolerance
-    if grew:
-        grow(a, left)
-        left = 0.0
+    left, _ = project(a, a.sizes[slot, LENGTH], a.sizes[slot, TOLERANCE])
+    return left
+
+
+@kernel(internal=True)
+def keep_projected(a, slot, lost):
+    """Keep what projecting an uncovered sample found; once covered it needs no full copy."""
     for j in range(a.header[RANK]):
         a.coordinates[slot, j] = a.work[COEFFICIENTS, j]
-    a.sizes[slot, LOST] = left
+    a.sizes[slot, LOST] = lost
     a.members[slot, SINCE] = a.header[GROWTHS]
-    if left <= tolerance:
+    if lost <= a.sizes[slot, TOLERANCE]:
         leave_pool(a, slot)
-    return grew
 
 
-@kernel()
+@kernel(internal=True)
 def enter(a, coefficients, length, tolerance, lost, exponent):
     """Give the newest sample a slot and return it."""
     header, members, sizes = a.header, a.members, a.sizes
@@ -231,7 +238,7 @@ def enter(a, coefficients, length, tolerance, lost, exponent):
     return slot
 
 
-@kernel()
+@kernel(internal=True)
 def is_worn(a):
     """Say whether the directions must be renewed before anything else is done to them.
 
@@ -247,7 +254,7 @@ def is_worn(a):
     return a.header[WEAR] >= min(WORN * wide, 4 * n * wide * wide // (k * k))
 
 
-@kernel()
+@kernel(internal=True)
 def waiting(header):
     """Return the record that says that nothing was taken yet; ``header[WANTED]`` says why."""
     return header[COUNT], 0.0, 0.0, 0.0, False, NEEDS_ROOM, header[RANK], 0, 0, 0
@@ -275,7 +282,10 @@ def push_window(
     if header[FREE] == NONE and header[TOP] == members.shape[0]:
         header[WANTED] = SLOTS
         return waiting(header)
-    is_open = settle(a, header[UNCOVERED] == 0)
+    is_open = settle(a)
+    if is_open and header[UNCOVERED] > 0:
+        let_go(a)  # its place belongs to a sample that waits
+        is_open = False
     if header[UNCOVERED] > 0 and header[RANK] < header[CAPACITY]:
         refill(a)
         scaled_copy(sample, residual)
@@ -302,7 +312,7 @@ def push_window(
         else:
             grow(a, left)
     elif is_open:
-        beta = drop(a, True)
+        beta = drop(a)
         reflect(a.work[COEFFICIENTS], a.work[W], beta, header[RANK] + 1)
     elif header[RANK] == residual.shape[0]:
         left = min(left, tolerance)  # nothing is outside: what is left is rounding
@@ -330,7 +340,7 @@ def push_window(
     )
 
 
-@kernel()
+@kernel(internal=True)
 def keep_whole(a, sample, slot):
     """Keep a full copy of a sample that the capacity leaves uncovered."""
     place = a.header[UNCOVERED]
@@ -375,7 +385,8 @@ def push_covered(
         if header[FREE] == NONE and header[TOP] == members.shape[0]:
             return i
         rank = header[RANK]
-        settle(a, False)
+        if settle(a):
+            let_go(a)
         if header[RANK] != rank:
             return i
         header[NOW] = clocks[i, 0]
@@ -409,7 +420,8 @@ def forget(
         expire(a, horizon, 0)
     else:
         unlink(a, slot)
-    settle(a, False)
+    if settle(a):
+        let_go(a)
     refill(a)
     gone = header[DROPPED] - dropped
     # what an interrupted push has done is still for its decision to say
