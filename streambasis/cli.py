@@ -20,11 +20,11 @@ CAUTION = (
 
 OK, BUG, USAGE, FEED, OUTPUT, EXTRA, SNAPSHOT, PIPE = 0, 1, 2, 3, 4, 5, 6, 141
 EXIT_CODES = (
-    (OK, "done, or stopped by Ctrl-C with everything so far kept"),
+    (OK, "done, or stopped by Ctrl-C or SIGTERM with everything so far kept"),
     (BUG, "an error inside streambasis; --debug shows where"),
     (USAGE, "an argument or a setting that cannot be used"),
     (FEED, "the feed or kept run cannot be read, does not fit, or is shorter than the baseline"),
-    (OUTPUT, "a file cannot be written"),
+    (OUTPUT, "a file cannot be written, or --metrics cannot be served"),
     (EXTRA, "a package that the command needs is not installed"),
     (SNAPSHOT, "a snapshot is missing or damaged, or does not fit the one it is compared with"),
     (PIPE, "whoever read the output went away"),

@@ -32,6 +32,7 @@ from streambasis.cli import (
 from streambasis.errors import (
     FeedError,
     HomeError,
+    MetricsError,
     RecordError,
     SampleError,
     SettingError,
@@ -305,7 +306,7 @@ def run(arguments: Sequence[str]) -> int:
         return _failed(error, str(error), USAGE, arguments)
     except SnapshotError as error:
         return _failed(error, str(error), SNAPSHOT, arguments)
-    except HomeError as error:
+    except (HomeError, MetricsError) as error:
         return _failed(error, str(error), OUTPUT, arguments)
     except StreambasisError as error:
         return _failed(error, str(error), BUG, arguments)

@@ -69,6 +69,10 @@ class HomeError(StreambasisError, OSError):
     """The folder that keeps a run cannot be used; the message names it and the way out."""
 
 
+class MetricsError(StreambasisError, OSError):
+    """The address for metrics cannot be used; the message names it and the way out."""
+
+
 class RecordError(StreambasisError, ValueError):
     """A kept run that cannot be read; the message names the folder or file and what is wrong."""
 

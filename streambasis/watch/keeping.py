@@ -52,12 +52,17 @@ class Keeping:
         Told at most once per minute that the disk takes nothing, and that it does again.
     every : (int, float)
         Samples, and seconds, between two commits.
+
+    Attributes
+    ----------
+    every : (int, float)
+        May change at any time.
     """
 
     def __init__(
         self, home: Home, vitals: Vitals, reporter: Warned, every: tuple[int, float]
     ) -> None:
-        self._home, self._vitals, self._reporter, self._every = home, vitals, reporter, every
+        self._home, self._vitals, self._reporter, self.every = home, vitals, reporter, every
         self._count = 0 if home.state is None else home.state.parts["core"].facts["count"]
         self._started = time.monotonic()
         self._said = -REPEAT_SECONDS
@@ -89,7 +94,7 @@ class Keeping:
         """
         if self._home.busy:
             return False
-        samples, seconds = self._every
+        samples, seconds = self.every
         since = time.monotonic() - self._started
         if self._vitals.unkept is not None:
             return since >= RETRY_SECONDS

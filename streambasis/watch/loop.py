@@ -193,6 +193,11 @@ class Run:
         vitals.samples, vitals.novel = self._monitor.count, self._novel
         vitals.events, vitals.open_events = self._opened, len(self._open)
 
+    def commit_every(self, every: tuple[int, float]) -> None:
+        """Change after how many samples and seconds a commit is due; from any thread."""
+        if self._keeping is not None:
+            self._keeping.every = every
+
     def __call__(self, asked: threading.Event) -> Summary:
         """Read the feed to its end, or until asked to stop.
 

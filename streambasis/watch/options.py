@@ -124,9 +124,16 @@ OPTIONS = {
     ),
     "on_overload": Option(
         values.one_of("block", "drop"),
-        "When a broker sends faster than this machine takes: block leaves messages with the "
-        "broker, drop drops the oldest and counts them.",
+        "When a live feed is faster than this machine: block leaves messages with the broker, "
+        "rows in the file and the writer of a pipe waiting; drop drops the oldest and counts them.",
         "block|drop",
+    ),
+    "queue": Option(
+        values.whole(1, 65535),
+        "Messages of a broker, or samples of another live feed from which may be dropped, that "
+        "wait in memory at most. Default: 2048 messages, 65536 samples.",
+        "N",
+        typed=values.number,
     ),
     "credentials": Option(
         values.path,
@@ -141,9 +148,6 @@ OPTIONS = {
         "NAME",
     ),
     "mqtt_version": Option(values.one_of("5", "3.1.1"), "5 or 3.1.1.", "VERSION"),
-    "mqtt_queue": Option(
-        values.whole(1, 65535), "Messages held in memory at most.", "N", typed=values.number
-    ),
     "ca_file": Option(
         values.path,
         "Whom to trust with mqtts://, as a PEM file. Default: the certificates of the system.",

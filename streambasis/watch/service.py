@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import functools
 import hashlib
 import os
 import platform
+import threading
 from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import replace
@@ -14,13 +16,22 @@ from streambasis.errors import FeedError, SettingError
 from streambasis.feeds import Broker, Feed, FeedOptions, Position, open_feed
 from streambasis.feeds.broker import CREDENTIALS, credentials_of
 from streambasis.monitor import NoveltyMonitor
+from streambasis.warming import warm_up
+from streambasis.watch.health import Health
 from streambasis.watch.home import Home
-from streambasis.watch.loop import Run
-from streambasis.watch.settings import STANDARD_INPUT, Settings
+from streambasis.watch.loop import Run, Summary
+from streambasis.watch.options import spelled
+from streambasis.watch.readiness import Readiness
+from streambasis.watch.settings import STANDARD_INPUT, Settings, changed
 from streambasis.watch.stopping import Signals
 from streambasis.watch.terminal import Terminal
+from streambasis.watch.values import Endpoint
+from streambasis.watch.vitals import Vitals
 
 _WHEN_FULL = {"block": "block", "drop": "drop-oldest"}
+_PATIENCE = 0.05
+"""Seconds between two looks at whether somebody asked to stop."""
+
 _ADDRESSES = ("mqtt://", "mqtts://")
 
 
@@ -50,12 +61,15 @@ def feed_options(settings: Settings) -> FeedOptions:
     FeedError
         If the user and the password of a broker cannot be read.
     """
-    broker = None
-    if is_address(named_feed(settings)):
-        broker = broker_of(settings)
-    return FeedOptions(
-        format=settings.format, strict=settings.strict, follow=settings.follow, broker=broker
+    options = FeedOptions(
+        format=settings.format,
+        strict=settings.strict,
+        follow=settings.follow,
+        when_full=_WHEN_FULL[settings.on_overload],
     )
+    if is_address(named_feed(settings)):
+        return replace(options, broker=broker_of(settings))
+    return options if settings.queue is None else replace(options, queue=settings.queue)
 
 
 def broker_of(settings: Settings) -> Broker:
@@ -76,17 +90,17 @@ def broker_of(settings: Settings) -> Broker:
         told = f"{platform.node()} {feed} {os.path.realpath(settings.home)}"
         made = hashlib.blake2b(told.encode(), digest_size=8).hexdigest()
         client = f"streambasis-{made}"
-    return Broker(
+    broker = Broker(
         user=user,
         password=password,
         client=client,
         version=settings.mqtt_version,
-        queue=settings.mqtt_queue,
         when_full=_WHEN_FULL[settings.on_overload],
         ca_file=settings.ca_file,
         certificate_file=settings.certificate_file,
         key_file=settings.key_file,
     )
+    return broker if settings.queue is None else replace(broker, queue=settings.queue)
 
 
 def opened(settings: Settings, options: FeedOptions, position: Position | None) -> Feed:
@@ -136,35 +150,155 @@ def serve(
     out, err : text file
         Standard output and standard error.
     again : callable, optional
-        Reads the settings again, for SIGHUP.
+        Reads the settings again, for SIGHUP. Without it SIGHUP asks a run on a terminal to stop,
+        which is what closing a terminal means, and is passed over by any other.
     """
-    del again
-    with ExitStack() as held:
-        signals = held.enter_context(Signals())
-        options = replace(feed_options(settings), stop=signals.asked)
-        home = held.enter_context(Home(settings.home)) if settings.home is not None else None
-        try:
-            feed = opened(settings, options, home.position if home is not None else None)
-        except FeedError:
-            if signals.asked.is_set():
-                # it waited for the first sample, and nothing was taken yet
-                return
-            raise
-        held.enter_context(feed)
+    service = _Service(settings, out, err)
+    reload = functools.partial(service.reload, again)
+    on_hang_up = None if again is None and err.isatty() else reload
+    with Signals(service.readiness.stopping, on_hang_up) as signals:
+        summary = service.run(signals.asked)
+    if summary is not None:
+        service.terminal.summary(summary)
+
+
+class _Service:
+    """One run and those who look at it."""
+
+    def __init__(self, settings: Settings, out: TextIO, err: TextIO) -> None:
+        self._settings = settings
+        self._vitals = Vitals()
+        self._health = Health(self._vitals, settings.silent_after)
+        self._run: Run | None = None
+        self.terminal = Terminal(out, err, as_json=settings.json, quiet=settings.quiet)
+        self.readiness = Readiness(self._vitals, self.terminal.warned)
+
+    def run(self, asked: threading.Event) -> Summary | None:
+        """Run until the feed ends or somebody asks to stop; None if that was before it began."""
+        settings, name = self._settings, named_feed(self._settings)
+        with ExitStack() as held:
+            held.enter_context(self.readiness)
+            options = replace(feed_options(settings), stop=asked)
+            home = None
+            if settings.home is not None:
+                format = "parquet" if settings.parquet else "arrow"
+                home = held.enter_context(Home(settings.home, format))
+            if settings.metrics is not None:
+                self._serve_metrics(settings.metrics, held)
+            if not warmed_up(asked):
+                return None
+            self._health.opened()
+            if is_address(name) or name == STANDARD_INPUT:
+                # these wait for the first sample, which may be hours away
+                self.readiness.ready()
+
+            def reopen(position: Position | None) -> Feed:
+                feed = opened(settings, options, position)
+                self._health.trouble = lambda: feed.trouble
+                return feed
+
+            try:
+                feed = held.enter_context(reopen(home.position if home is not None else None))
+            except FeedError:
+                if asked.is_set():
+                    # it was waiting for the first sample, and nothing was taken yet
+                    return None
+                raise
+            self.readiness.ready()
+            return self._watch(feed, home, reopen, asked)
+
+    def _watch(
+        self,
+        feed: Feed,
+        home: Home | None,
+        reopen: Callable[[Position | None], Feed],
+        asked: threading.Event,
+    ) -> Summary:
+        settings = self._settings
+        monitor = None
         if home is not None:
             home.begin(about(settings, feed))
-        monitor = home.monitor() if home is not None else None
+            monitor = home.monitor()
         if monitor is None:
             monitor = new_monitor(settings, feed.columns.channels)
-        terminal = Terminal(out, err, total=feed.rows, as_json=settings.json, quiet=settings.quiet)
-        run = Run(
+        self.terminal.expect(feed.rows)
+        self._run = Run(
             feed,
             monitor,
-            terminal,
+            self.terminal,
             home=home,
             every=settings.snapshot_every,
             adopt_after=settings.adopt_after,
+            vitals=self._vitals,
+            reopen=reopen,
         )
-        with terminal:
-            summary = run(signals.asked)
-    terminal.summary(summary)
+        with self.terminal:
+            return self._run(asked)
+
+    def _serve_metrics(self, endpoint: Endpoint, held: ExitStack) -> None:
+        # the packages that it needs are not loaded by a run without it
+        from streambasis.watch.metrics import registry_of
+        from streambasis.watch.serving import MetricsServer
+
+        registry = registry_of(self._vitals, self._health)
+        warned = self.terminal.warned
+        server = held.enter_context(MetricsServer(endpoint, registry, self._health, warned))
+        self.terminal.noted(f"metrics at {server.url}")
+        if not server.loopback:
+            warned(
+                f"warning: {server.url} can be read by whoever reaches this machine: it asks for "
+                "no password and is not encrypted"
+            )
+
+    def reload(self, again: Callable[[], Settings] | None) -> None:
+        """Read the settings again and take over what may change while the daemon runs."""
+        if again is None:
+            self.terminal.warned("SIGHUP: there is no --config to read again")
+            return
+        self.readiness.reloading()
+        try:
+            after = again()
+        except SettingError as error:
+            self.terminal.warned(f"{error}; everything stays as it was")
+        else:
+            self._take_over(after)
+        self.readiness.reloaded()
+
+    def _take_over(self, after: Settings) -> None:
+        live, others = changed(self._settings, after)
+        self._settings = replace(self._settings, **{name: getattr(after, name) for name in live})
+        self._health.silent_after = after.silent_after
+        self.terminal.quiet = after.quiet
+        if self._run is not None:
+            self._run.commit_every(after.snapshot_every)
+        taken = ", ".join(map(spelled, live)) or "nothing new"
+        note = f"read the settings again: {taken}"
+        if others:
+            note += f"; only another start changes {', '.join(map(spelled, others))}"
+        self.terminal.warned(note)
+
+
+def warmed_up(asked: threading.Event) -> bool:
+    """Compile what a run needs; return whether that was done before somebody asked to stop.
+
+    Notes
+    -----
+    A tenth of a second where kernels have been compiled before, many seconds otherwise. They
+    cannot be cut short, so they run in a thread that a process which is asked to stop leaves
+    behind; nothing is lost with it.
+    """
+    failures: list[BaseException] = []
+
+    def work() -> None:
+        try:
+            warm_up(NoveltyMonitor)
+        except BaseException as error:
+            failures.append(error)
+
+    thread = threading.Thread(target=work, name="warm-up", daemon=True)
+    thread.start()
+    while thread.is_alive() and not asked.is_set():
+        thread.join(_PATIENCE)
+    if failures:
+        raise failures[0]
+    return not asked.is_set()

@@ -40,10 +40,10 @@ class Settings:
     metrics: Endpoint | None = None
     silent_after: float = 0.0
     on_overload: str = "block"
+    queue: int | None = None
     credentials: Path | None = None
     client: str | None = None
     mqtt_version: str = "5"
-    mqtt_queue: int = 2048
     ca_file: Path | None = None
     certificate_file: Path | None = None
     key_file: Path | None = None

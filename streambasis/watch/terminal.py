@@ -31,12 +31,15 @@ class Terminal:
     ----------
     out, err : text file
         Standard output and standard error.
-    total : int or None
-        Samples to expect.
     as_json : bool
         Closed events go to ``out`` as JSON lines, everything made for reading to ``err``.
     quiet : bool
         Nothing made for reading is written but warnings.
+
+    Attributes
+    ----------
+    quiet : bool
+        May change at any time.
 
     Notes
     -----
@@ -44,14 +47,13 @@ class Terminal:
     terminal, and none where JSON lines would run through it.
     """
 
-    def __init__(
-        self, out: TextIO, err: TextIO, *, total: int | None, as_json: bool, quiet: bool
-    ) -> None:
+    def __init__(self, out: TextIO, err: TextIO, *, as_json: bool, quiet: bool) -> None:
+        self.quiet = quiet
         self._json = out if as_json else None
         self._err = err
-        self._lines = None if quiet else err if as_json else out
+        self._lines = err if as_json else out
         self._progress: Progress | None = None
-        if self._lines is not None and self._lines.isatty() and not (as_json and out.isatty()):
+        if not quiet and self._lines.isatty() and not (as_json and out.isatty()):
             self._progress = Progress(
                 SpinnerColumn(),
                 BarColumn(bar_width=None),
@@ -61,7 +63,7 @@ class Terminal:
                 console=Console(file=self._lines, highlight=False),
                 transient=True,
             )
-            self._task = self._progress.add_task("", total=total)
+            self._task = self._progress.add_task("", total=None)
 
     def __enter__(self) -> Self:
         if self._progress is not None:
@@ -76,6 +78,11 @@ class Terminal:
     ) -> None:
         if self._progress is not None:
             self._progress.stop()
+
+    def expect(self, samples: int | None) -> None:
+        """Hear how many samples are to come, where that is known."""
+        if self._progress is not None:
+            self._progress.update(self._task, total=samples)
 
     def advance(self, samples: int) -> None:
         """Move the progress bar."""
@@ -112,8 +119,17 @@ class Terminal:
 
     def warned(self, warning: str) -> None:
         """Show what somebody must know, on standard error and as one line, quiet or not."""
-        self._err.write(f"streambasis: {one_line(warning)}\n")
-        self._err.flush()
+        line = f"streambasis: {one_line(warning)}"
+        if self._progress is not None and self._err.isatty():
+            self._progress.console.print(line, markup=False, soft_wrap=True)
+        else:
+            self._err.write(line + "\n")
+            self._err.flush()
+
+    def noted(self, note: str) -> None:
+        """Show what is good to know, on standard error and as one line, unless quiet."""
+        if not self.quiet:
+            self.warned(note)
 
     def summary(self, summary: Summary) -> None:
         """Show what the run came to."""
@@ -121,7 +137,7 @@ class Terminal:
             self._write(line)
 
     def _write(self, line: str) -> None:
-        if self._lines is None:
+        if self.quiet:
             return
         if self._progress is not None:
             self._progress.console.print(line, markup=False, soft_wrap=True)
