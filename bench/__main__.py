@@ -1,4 +1,4 @@
-"""``python -m bench [QUESTION ...] [--quick] [--out FOLDER]``: print tables, write them as JSON.
+"""``python -m bench [QUESTION ...] [--quick] [--out FOLDER]``: print tables, write one report.
 
 Each question is a module of this package with ``run(quick: bool) -> list[Table]``.
 """
@@ -9,13 +9,14 @@ import argparse
 import importlib
 import os
 import sys
+import time
 from pathlib import Path
 
 # OpenBLAS kernels chosen for old processors would slow every side of a comparison
 for name in ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"):
     os.environ.pop(name, None)
 
-from bench import harness  # noqa: E402 - numpy reads those variables when it loads
+from bench import harness, report  # noqa: E402 - numpy reads those variables when it loads
 
 QUESTIONS = ("grow", "window", "principal", "snapshot", "detect", "feeds")
 ON_REQUEST = ("window_soak", "principal_soak")
@@ -31,15 +32,27 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("question", nargs="*", choices=choices, help=named)
     parser.add_argument("--quick", action="store_true", help="smaller sizes, rougher figures")
     parser.add_argument("--out", type=Path, default=Path("bench-results"), metavar="FOLDER")
+    parser.add_argument(
+        "--readme", type=Path, metavar="FILE", help="put the headline tables between its marks"
+    )
     options = parser.parse_args(arguments)
-    machine = ", ".join(f"{key} {value}" for key, value in harness.machine().items())
-    print(f"streambasis bench on {machine}\n")
+    machine = harness.machine()
+    print(f"{report.measured_on(machine)}\n")
+    results: dict[str, list[harness.Table]] = {}
     for question in options.question or present:
+        start = time.perf_counter()
         with harness.one_blas_thread():
-            tables = importlib.import_module(f"bench.{question}").run(quick=options.quick)
-        for table in tables:
+            results[question] = importlib.import_module(f"bench.{question}").run(
+                quick=options.quick
+            )
+        for table in results[question]:
             print(table.markdown(), flush=True)
-        print(f"written to {harness.write(tables, options.out, question)}\n", flush=True)
+        print(f"({question}: {time.perf_counter() - start:.0f} s)\n", flush=True)
+        # after each question, so that what was measured outlives a run that is cut off
+        written = report.write_report(machine, results, options.out)
+    print(f"written to {' and '.join(map(str, written))}")
+    if options.readme:
+        report.write_headlines(machine, results, options.readme)
     return 0
 
 

@@ -53,6 +53,7 @@ def single(repetitions: int, seconds: float) -> Table:
         "One push of a sample that is in the span, float64",
         ["channels", "rank", "push us", "NumPy us", "qr_insert us", "NumPy : push",
          "qr_insert : push", "to reach"],
+        headline=True,
         notes=["NumPy: two projection passes and the norm. SciPy: qr_insert of one more column, "
                "taken beside the span, within which it is refused.",
                "Medians of interleaved repetitions, one BLAS thread; only the ratios count."],
@@ -91,6 +92,7 @@ def batches(repetitions: int, seconds: float, quick: bool) -> Table:
     table = Table(
         "push_many of samples in the span beside one push after another, float64",
         ["channels", "rank", "samples", "push us", "push_many us", "push : push_many", "to reach"],
+        headline=True,
         notes=["Time of one sample. Each side takes the same array."],
     )
     sizes = [(64, 16, 1000, 10), (256, 64, 1000, None), (1024, 128, 1000, 2), (*LARGE, 128, 3)]

@@ -7,13 +7,12 @@ machine hits them alike, and all run on one BLAS thread.
 from __future__ import annotations
 
 import gc
-import json
 import os
 import platform
 import statistics
 import sys
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -21,12 +20,16 @@ from typing import Any
 
 @dataclass
 class Table:
-    """One question with its answer, row by row."""
+    """One question with its answer, row by row.
+
+    A headline stands in the README too.
+    """
 
     title: str
     columns: list[str]
     rows: list[list[Any]] = field(default_factory=list)
     notes: list[str] = field(default_factory=list)
+    headline: bool = False
 
     def add(self, *values: Any) -> None:
         """Append a row; one value per column."""
@@ -135,16 +138,8 @@ def one_blas_thread() -> Any:
     return threadpool_limits(limits=1, user_api="blas")
 
 
-def write(tables: list[Table], folder: Path, name: str) -> Path:
-    """Write tables as JSON beside the machine they were measured on; return the file."""
-    folder.mkdir(parents=True, exist_ok=True)
-    path = folder / f"{name}.json"
-    content = {
-        "machine": machine(),
-        "tables": [
-            {"title": t.title, "columns": t.columns, "rows": t.rows, "notes": t.notes}
-            for t in tables
-        ],
-    }
-    path.write_text(json.dumps(content, indent=1) + "\n")
-    return path
+def as_json(tables: Sequence[Table]) -> list[dict[str, Any]]:
+    """Return tables as JSON things."""
+    return [
+        {"title": t.title, "columns": t.columns, "rows": t.rows, "notes": t.notes} for t in tables
+    ]

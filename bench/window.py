@@ -66,6 +66,7 @@ def independent(sizes: tuple[tuple[int, int], ...], seconds: float) -> Table:
     table = Table(
         "One slide of a window of independent samples (one leaves, one enters)",
         ["n", "window", "ours us", "scipy us", "scratch us", "scipy/ours", "scratch/ours", "loss"],
+        headline=True,
         notes=[
             "scipy: qr_delete of the first column and qr_insert of the new one, economic, no "
             "finiteness checks; scratch: numpy.linalg.qr of the window; ours: StreamBasis.push.",
