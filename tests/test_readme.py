@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ast
 import json
 import re
 import shlex
@@ -83,3 +84,22 @@ def test_extras_and_event_keys_are_documented() -> None:
     for key in ("start", "end", "start_time", "end_time", "peak", "channels", "contributions",
                 "repeats", "cosine", "label"):  # fmt: skip
         assert f"`{key}`" in README, key
+
+
+def test_every_guarantee_names_tests_that_exist() -> None:
+    """Each line of the table of guarantees is proved by at least one test, found by its name."""
+    table = README.split("## What it guarantees")[1].split("## ")[0]
+    lines = [line for line in table.splitlines() if line.startswith("| ")][1:]
+    assert len(lines) >= 15
+    for line in lines:
+        named = re.findall(r"`(tests/\w+\.py)::(test_\w+)`", line)
+        assert named, line
+        for file, test in named:
+            functions = ast.parse((ROOT / file).read_text()).body
+            assert test in {getattr(node, "name", None) for node in functions}, f"{file}::{test}"
+
+
+def test_every_example_is_listed() -> None:
+    """README names each script of examples/."""
+    for script in (ROOT / "examples").glob("*.py"):
+        assert f"examples/{script.name}" in README, script.name
