@@ -435,6 +435,7 @@ class Run:
         """Take the readings that cost next to nothing."""
         vitals, counts = self._vitals, self._feed.counts
         self._count_up()
+        vitals.rank, vitals.noise = self._monitor.rank, self._monitor.noise
         vitals.queue, vitals.dropped = counts.get("queued", 0), counts.get("dropped", 0)
         vitals.duplicates = counts.get("duplicates", 0)
         if self._last_time is not None and self._feed.columns.unit is None:
