@@ -388,7 +388,11 @@ class Run:
             self._last_time = int(batch.times[-1])
         done = 0
         while done < len(batch):
-            until = len(batch) if self._piece is None else min(done + self._piece, len(batch))
+            until = len(batch)
+            if self._piece is not None:
+                # in equal parts, as few as possible
+                parts = -(-(until - done) // self._piece)
+                until = done - (done - until) // parts
             due = self._adoption_due()
             if due is not None:
                 until = min(max(due - self._monitor.count + done, done), until)
@@ -425,8 +429,9 @@ class Run:
             columns, taken = segment.columns, rows.stop - rows.start
             values, times = values[taken:], None if times is None else times[taken:]
             self._novel += int(np.count_nonzero(columns.novel[rows]))
-            vitals.spe = float(np.nan_to_num(columns.spe[rows.stop - 1]))
-            vitals.limit = float(np.nan_to_num(columns.limit[rows.stop - 1]))
+            spe, limit = columns.spe[rows.stop - 1], columns.limit[rows.stop - 1]
+            if not np.isnan(spe):
+                vitals.spe, vitals.limit = float(spe), float(limit)
             # the events themselves are dear, and every one that is open marks the samples after it
             if self._open or (columns.event[rows] != NO_EVENT).any():
                 self._tell()

@@ -1,0 +1,23 @@
+"""The daemon: nothing lost or doubled by kills, throughput, latency, and a soak that stays flat."""
+
+from __future__ import annotations
+
+import os
+
+from bench.daemon_kills import killed
+from bench.daemon_latency import latency
+from bench.daemon_throughput import throughput
+from bench.harness import Table
+
+SOAK_MINUTES = "STREAMBASIS_SOAK_MINUTES"
+"""Environment variable: how long the soak takes; 3 minutes where it is not set."""
+
+
+def run(quick: bool) -> list[Table]:
+    """Answer all of it; the soak only in full."""
+    tables = [
+        killed(10 if quick else 200),
+        throughput(50_000 if quick else 400_000),
+        latency(6.0 if quick else 30.0),
+    ]
+    return tables
