@@ -114,12 +114,13 @@ Signals:
 
 \b
 In the folder of --home:
-  decisions/      Arrow IPC files, one row per sample: sample, time, spe, t2, limit, t2_limit,
-                  novel, extreme, rank, event
-  events.jsonl    one JSON object per event: event, start, end, start_time, end_time, peak,
-                  channels, contributions, repeats, cosine, label
-  progress.arrow  noise floor, drift and energies over the run, for the report
-  state.arrow     a snapshot of the monitor at the end
+  decisions/       Arrow IPC files (--parquet: Parquet), one row per sample: sample, time, spe, t2,
+                   limit, t2_limit, novel, extreme, rank, event
+  events.jsonl     one JSON object per event: event, start, end, start_time, end_time, peak,
+                   channels, contributions, repeats, cosine, label
+  malformed.jsonl  rows that hold no sample
+  progress.arrow   noise floor, drift and energies over the run, for the report
+  state.arrow      a snapshot of the run, from which it goes on
 
 {_CODES}
 

@@ -5,11 +5,13 @@ from __future__ import annotations
 import contextlib
 import http.client
 import json
+import re
 import socket
 import threading
 import time
 from collections.abc import Iterator
 from dataclasses import fields
+from pathlib import Path
 
 import pytest
 from hypothesis import HealthCheck, given, settings
@@ -94,6 +96,21 @@ def test_every_reading_is_shown_under_its_name() -> None:
     assert {one.field for one in (*COUNTERS, *GAUGES, *TIMES)} | OTHERWISE == {
         field.name for field in fields(Vitals)
     }
+
+
+def test_readme_lists_what_is_shown() -> None:
+    """The table of README has every metric of ours, and no other."""
+    with served(filled()) as server:
+        body = get(server, "/metrics")[2]
+    shown = {s.name for family in text_string_to_metric_families(body) for s in family.samples}
+    readme = (Path(__file__).parent.parent / "README.md").read_text()
+    table = readme.split("| `streambasis_...` | meaning |\n|---|---|\n")[1].split("\n\n")[0]
+    names = [
+        name for row in table.splitlines() for name in re.findall("`(.*?)`", row.split("|")[1])
+    ]
+    assert sorted(f"streambasis_{name}" for name in names) == sorted(
+        name for name in shown if name.startswith("streambasis_")
+    )
 
 
 def test_there_is_one_series_per_name() -> None:
