@@ -243,6 +243,11 @@ class PrincipalBasis(Saveable):
             else:
                 self._core.take_unscored(self._entered(checked))
 
+    def take_entered(self, rows: NDArray[Any]) -> None:
+        """Take finite samples, (m, n), that are in the inner product's Euclidean coordinates."""
+        with self._lock:
+            self._core.take_unscored(rows)
+
     def flush(self) -> None:
         """Fold the samples that wait for their block to fill."""
         with self._lock:

@@ -36,6 +36,15 @@ def score_rows(
     return coordinates, np.sum(outside**2, axis=1), np.sum(left**2, axis=1), t2
 
 
+def note_rows(
+    judged: NDArray[np.bool_], beyond: NDArray[np.bool_], extreme: NDArray[np.bool_], forming: bool
+) -> tuple[NDArray[np.bool_], tuple[int, int]]:
+    """Return rows for the basis, loose rows and rows for the limit, and the counts."""
+    fold = judged & ~beyond
+    out = np.array([fold, beyond & (not forming), fold & (not forming)])
+    return out, (int(out[1].sum()), int((fold & extreme).sum()))
+
+
 def take_off(
     rows: NDArray[Any], coordinates: NDArray[Any], directions: NDArray[Any], start: int, stop: int
 ) -> NDArray[Any]:

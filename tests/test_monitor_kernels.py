@@ -2,18 +2,31 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from numpy.typing import NDArray
 
 from streambasis.kernels import monitor as kernels
 from tests import reference_monitor as reference
 
 pytestmark = pytest.mark.kernels
-
-pytestmark = pytest.mark.kernels
 ROUNDING = 1e-12
+
+
+def scored(
+    z: NDArray[Any], mean: NDArray[Any], directions: NDArray[Any], first: int,
+    whitening: NDArray[Any], limits: tuple[float, float] = (np.inf, np.inf),
+) -> list[NDArray[Any]]:  # fmt: skip
+    """Return what the kernel fills: coordinates, five columns of numbers, four of flags."""
+    m = len(z)
+    out = [np.empty((m, len(directions))), *np.empty((5, m)), *np.empty((4, m), np.bool_)]
+    work = np.array(limits), np.empty(z.shape[1])
+    kernels.score_rows(z, mean, directions, first, whitening, *work, *out)
+    return out
 
 
 @pytest.mark.parametrize("q", [0, 1, 3, 4, 5, 9])
@@ -26,11 +39,42 @@ def test_scores_agree_with_matrix_products(q: int) -> None:
     mean = rng.normal(size=n)
     directions = np.ascontiguousarray(np.linalg.qr(rng.normal(size=(n, max(q, 1))))[0].T[:q])
     whitening = rng.normal(size=(2, first))
-    out = np.empty((m, q)), *(np.empty(m) for _ in range(3))
-    kernels.score_rows(z, mean, directions, first, whitening, np.empty(n), *out)
+    out = scored(z, mean, directions, first, whitening)
     expected = reference.score_rows(z, mean, directions, first, whitening)
-    for actual, wanted in zip(out, expected, strict=True):
+    for actual, wanted in zip(out[:4], expected, strict=True):
         np.testing.assert_allclose(actual, wanted, rtol=ROUNDING, atol=ROUNDING)
+
+
+def test_scores_are_compared_with_their_limits() -> None:
+    """SPE and what standing events leave have one limit, T² the other; no limit, no verdict."""
+    rng = np.random.default_rng(5)
+    z, mean = rng.normal(size=(40, 8)), np.zeros(8)
+    directions = np.ascontiguousarray(np.linalg.qr(rng.normal(size=(8, 4)))[0].T)
+    fixed = z, mean, directions, 2, np.eye(2)
+    _, spe, rest, t2, limit, t2_limit, judged, beyond, novel, extreme = scored(*fixed, (4.0, 2.0))
+    assert judged.all()
+    assert (limit.tolist(), t2_limit.tolist()) == ([4.0] * 40, [2.0] * 40)
+    assert beyond.tolist() == (rest > 4.0).tolist()
+    assert novel.tolist() == (spe > 4.0).tolist()
+    assert extreme.tolist() == (t2 > 2.0).tolist()
+    assert 0 < beyond.sum() < novel.sum() < 40
+    blind = scored(*fixed, (np.nan, 2.0))
+    assert np.isnan(blind[1:6]).all()
+    assert not np.any(blind[6:])
+
+
+@given(flags=st.lists(st.tuples(*[st.booleans()] * 3), max_size=20), forming=st.booleans())
+def test_rows_are_sorted_for_the_end_of_the_block(
+    flags: list[tuple[bool, bool, bool]], forming: bool
+) -> None:
+    """The basis takes what is judged and within the limit, the limit only outside a young event."""
+    judged, beyond, extreme = np.array(flags, np.bool_).reshape(-1, 3).T.copy()
+    beyond &= judged
+    out = np.empty((3, len(flags)), np.bool_)
+    counts = kernels.note_rows(judged, beyond, extreme, forming, *out)
+    expected = reference.note_rows(judged, beyond, extreme, forming)
+    assert out.tolist() == expected[0].tolist()
+    assert counts == expected[1]
 
 
 def test_a_row_scores_the_same_in_any_batch() -> None:
@@ -40,16 +84,11 @@ def test_a_row_scores_the_same_in_any_batch() -> None:
     z, mean = rng.normal(size=(m, n)), rng.normal(size=n)
     directions = np.ascontiguousarray(np.linalg.qr(rng.normal(size=(n, q)))[0].T)
     whitening = np.diag(rng.uniform(1, 2, q))
-
-    def scored(rows: np.ndarray) -> list[np.ndarray]:
-        out = np.empty((len(rows), q)), *(np.empty(len(rows)) for _ in range(3))
-        kernels.score_rows(rows, mean, directions, q, whitening, np.empty(n), *out)
-        return list(out)
-
-    whole = scored(z)
+    whole = scored(z, mean, directions, q, whitening)
     for start, stop in ((0, 1), (1, 4), (4, 50)):
-        for part, field in zip(scored(z[start:stop]), whole, strict=True):
-            assert np.array_equal(part, field[start:stop])
+        parts = scored(z[start:stop], mean, directions, q, whitening)
+        for part, column in zip(parts, whole, strict=True):
+            assert np.array_equal(part, column[start:stop])
 
 
 def test_standardize_clips_and_tells_repetitions() -> None:

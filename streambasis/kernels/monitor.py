@@ -48,8 +48,11 @@ def standardize(samples, centre, inverse, reach, freeze, patience, held, runs, o
 
 
 @kernel(reassociate=True)
-def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe, rest, t2):
-    """Split rows over orthonormal directions, one row after the other.
+def score_rows(
+    z, mean, directions, first, whitening, limits, residual,
+    coordinates, spe, rest, t2, limit, t2_limit, judged, beyond, novel, extreme,
+):  # fmt: skip
+    """Split rows over orthonormal directions and compare what comes out with the limits.
 
     A row is never combined with another, so that its results do not depend on how the rows were
     cut into batches. Reordered sums change a result by a few roundings only, as the error bound of
@@ -65,13 +68,20 @@ def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe
         those of open events. A direction no longer visible is a row of zeros.
     whitening : (r, first)
         Maps coordinates to whitened coordinates, of which T² is the sum of squares.
+    limits : (2,)
+        Limits of the squared prediction error and of T²; the first is NaN where the rows cannot be
+        judged.
     residual : (n,)
         Workspace.
     coordinates : (m, q)
         Filled.
-    spe, rest, t2 : (m,)
-        Filled: squared norm of what the first directions leave, of what all leave, Hotelling's T².
+    spe, rest, t2, limit, t2_limit : (m,)
+        Filled: squared norm of what the first directions leave, of what all leave, Hotelling's T²
+        and both limits; NaN where the rows cannot be judged.
+    judged, beyond, novel, extreme : (m,) bool
+        Filled: whether the rows can be judged, and whether rest, SPE and T² are beyond their limit.
     """
+    fine = not math.isnan(limits[0])
     count = directions.shape[0]
     n = z.shape[1]
     for i in range(z.shape[0]):
@@ -119,6 +129,14 @@ def score_rows(z, mean, directions, first, whitening, residual, coordinates, spe
                 c += whitening[k, j] * coordinates[i, j]
             total += c * c
         t2[i] = total
+        if not fine:
+            rest[i] = spe[i] = t2[i] = math.nan
+        limit[i] = limits[0]
+        t2_limit[i] = limits[1] if fine else math.nan
+        judged[i] = fine
+        beyond[i] = rest[i] > limits[0]
+        novel[i] = spe[i] > limits[0]
+        extreme[i] = t2[i] > limits[1]
 
 
 @kernel()
@@ -129,6 +147,35 @@ def take_off(rows, coordinates, directions, start, stop):
             c = coordinates[i, k]
             for j in range(rows.shape[1]):
                 rows[i, j] -= c * directions[k, j]
+
+
+@kernel()
+def note_rows(judged, beyond, extreme, forming, fold, loose, pool):
+    """Say what the end of a block is to do with rows.
+
+    Parameters
+    ----------
+    judged, beyond, extreme : (m,) bool
+        As :func:`score_rows` gives them.
+    forming : bool
+        Whether an event's directions are being learnt, to which every row beyond the limit counts.
+    fold, loose, pool : (m,) bool
+        Filled: whether a row is for the basis, is beyond the limit and no event's, and is for the
+        limit.
+
+    Returns
+    -------
+    (loose rows, extreme rows for the basis)
+        How many.
+    """
+    count = far = 0
+    for i in range(judged.shape[0]):
+        fold[i] = judged[i] and not beyond[i]
+        loose[i] = beyond[i] and not forming
+        pool[i] = fold[i] and not forming
+        count += loose[i]
+        far += fold[i] and extreme[i]
+    return count, far
 
 
 @kernel()

@@ -94,6 +94,7 @@ class OpenEvent:
         "peak",
         "repeats",
         "rows",
+        "shares",
         "start",
         "start_time",
     )
@@ -111,6 +112,8 @@ class OpenEvent:
         self.repeats: int | None = None
         self.cosine: float | None = None
         self.label: str | None = None
+        # what was last asked for: after how many samples, with which directions, and the answer
+        self.shares: tuple[int, object, NDArray[np.float64]] | None = None
 
     @property
     def nbytes(self) -> int:
@@ -134,6 +137,7 @@ class OpenEvent:
 
     def fold(self) -> None:
         """Turn what was collected into weighted directions."""
+        self.shares = None
         _, weights, axes = np.linalg.svd(self.rows[: self.filled], full_matrices=False)
         held = min(HELD, len(weights))
         self.rows[:held] = weights[:held, None] * axes[:held]

@@ -8,12 +8,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.errors import SettingError, SnapshotError
-from streambasis.kernels.monitor import CLOSED, COLLECTED, NOTHING, OPENED, walk
+from streambasis.kernels.monitor import CLOSED, COLLECTED, NOTHING, OPENED, note_rows, walk
 from streambasis.monitor.contributions import leading, shares
 from streambasis.monitor.events import COLLECT, Event, History, OpenEvent
-from streambasis.monitor.model import Model, Scored, Settings
+from streambasis.monitor.model import Model, Settings
 from streambasis.monitor.precursors import Precursors
-from streambasis.monitor.projection import NO_EVENT
+from streambasis.monitor.projection import NO_EVENT, Scored
 from streambasis.monitor.verdict import NO_TIME, Columns
 from streambasis.state import State, owned
 
@@ -119,15 +119,17 @@ class Judge:
 
     def _stretch(self, rows: slice, gaps: bool, columns: Columns, at: int) -> int:
         """Judge rows of the buffer up to the next transition of an event; return how many."""
-        scored = self.model.score(self._z[rows], gaps=gaps)
+        scored = self._score(rows, gaps, columns, at)
         row, what, which = walk(
             self.count, scored.judged, scored.beyond, scored.shows, self._ring, self._counters,
             self._last, self._quiet, self._taken, self._walk,
         )  # fmt: skip
         size = len(scored.z) if what == NOTHING else row + 1
         rows = slice(rows.start, rows.start + size)
-        self._write(scored, columns, slice(at, at + size))
-        self._gather(scored, rows)
+        columns.rank[at : at + size] = self.model.rank
+        if self.open:
+            columns.event[at : at + size] = self.open[-1].number
+            self._gather(scored, rows)
         self._note(scored, rows)
         self.count += size
         if what == OPENED:
@@ -139,17 +141,18 @@ class Judge:
             self._close(which)
         return size
 
-    def _write(self, scored: Scored, columns: Columns, out: slice) -> None:
-        """Write the columns of the first rows, as many as ``out`` holds."""
-        size = out.stop - out.start
-        columns.spe[out], columns.t2[out] = scored.spe[:size], scored.t2[:size]
-        columns.limit[out] = scored.limit[:size]
-        columns.t2_limit[out] = np.where(scored.judged[:size], self.model.t2_limit, np.nan)
-        columns.novel[out] = scored.spe[:size] > scored.limit[:size]
-        columns.extreme[out] = scored.t2[:size] > self.model.t2_limit
-        columns.rank[out] = self.model.rank
-        if self.open:
-            columns.event[out] = self.open[-1].number
+    def _score(self, rows: slice, gaps: bool, columns: Columns, at: int) -> Scored:
+        """Score rows of the buffer straight into the columns, from row ``at`` on."""
+        z = self._z[rows]
+        out = slice(at, at + len(z))
+        directions = len(self.model.projection.directions)
+        judged, beyond = np.empty((2, len(z)), np.bool_)
+        scored = Scored(
+            z, np.empty((len(z), directions)), columns.spe[out], self._spe[rows], columns.t2[out],
+            columns.limit[out], columns.t2_limit[out], judged, beyond,
+            columns.novel[out], columns.extreme[out], np.zeros((len(z), 0), np.bool_),
+        )  # fmt: skip
+        return self.model.score(scored, gaps=gaps)
 
     def _gather(self, scored: Scored, rows: slice) -> None:
         """Give open events the rows that show them."""
@@ -174,28 +177,28 @@ class Judge:
     def _note(self, scored: Scored, rows: slice) -> None:
         """Keep what the end of the block needs of rows, and make them fit to be folded."""
         size = rows.stop - rows.start
-        beyond, judged = scored.beyond[:size], scored.judged[:size]
-        fold = np.greater(judged, beyond, out=self._fold[rows])
-        self._loose[rows] = not self._forming
-        self._loose[rows] &= beyond
-        self._pool[rows] = not self._forming
-        self._pool[rows] &= judged
-        self._spe[rows] = scored.rest[:size]
+        fold, loose, pool = self._fold[rows], self._loose[rows], self._pool[rows]
+        chance, extreme = note_rows(
+            scored.judged[:size], scored.beyond[:size], scored.extreme[:size], self._forming,
+            fold, loose, pool,
+        )  # fmt: skip
         if self.open:
             # with open events taken off, fewer dimensions are left for noise than the limit is for
             whole = self.model.free
             left = whole - sum(len(directions) for directions in self._standing)
             self._spe[rows] *= whole / max(left, 1)
+        held = loose.copy() if chance else loose
         for i in scored.special:
-            if i < size and judged[i]:
+            if i < size and scored.judged[i]:
                 part = float(scored.limit[i]) / self.model.limit.value
                 self._spe[rows.start + i] /= part
-                self._pool[rows.start + i] &= part >= NEARLY_WHOLE
-        early = self._pool[rows] & beyond
-        if early.any():
-            self.precursors.hold(self._number[rows][early], self._spe[rows][early])
-            self._pool[rows] &= ~early
-        self.model.clean(scored, fold)
+                if part < NEARLY_WHOLE:
+                    pool[i] = False
+                    if chance:
+                        held[i] = False
+        if chance and held.any():
+            self.precursors.hold(self._number[rows][held], self._spe[rows][held])
+        self.model.clean(scored, fold, extreme=extreme > 0)
 
     def _begin(self, stop: int) -> None:
         """Open an event on the last rows before ``stop`` of the buffer."""
@@ -206,7 +209,9 @@ class Judge:
             self.history.next, int(self._number[first]), int(self._time[first]), self._z.shape[1]
         )
         self.history.next += 1
-        scored = self.model.score(self._z[rows], gaps=True)
+        z = self._z[rows]
+        room = Scored.room(z, len(self.model.projection.directions))
+        scored = self.model.score(room, gaps=True)
         self._give(event, scored, np.arange(len(rows)), NO_EVENT, last)
         self._loose[rows] = False
         self._pool[first:stop] = False
@@ -258,8 +263,7 @@ class Judge:
     def event(self, which: int, *, open: bool) -> Event:
         """Return an open event as it stands."""
         event, model = self.open[which], self.model
-        inside = model.projection.directions[: model.projection.first]
-        parts = shares(event.rows[: event.filled], inside, event.count, model.basis.noise)
+        parts = self._shares(event)
         names, label = model.names, event.label
         if label is None and event.repeats is not None:
             label = self.history.events[event.repeats]["label"]
@@ -277,6 +281,27 @@ class Judge:
             "label": label,
         }
         return Event(fields, event.directions, open=open)
+
+    def _shares(self, event: OpenEvent) -> NDArray[np.float64]:
+        """Return each channel's share in an open event, found again only where something moved."""
+        projection = self.model.projection
+        asked = event.count, projection
+        if event.shares is None or event.shares[:2] != asked:
+            inside = projection.directions[: projection.first]
+            rows = event.rows[: event.filled]
+            event.shares = *asked, shares(rows, inside, event.count, self.model.basis.noise)
+        found: NDArray[np.float64] = event.shares[2]
+        return found
+
+    @property
+    def events(self) -> list[Event]:
+        """The events so far, by number, open ones included."""
+        closed = list(self.history.events.values())
+        if not self.open:
+            return closed
+        still = [self.event(which, open=True) for which in range(len(self.open))]
+        # of events that overlap, the later one may have closed first
+        return sorted([*closed, *still], key=lambda event: int(event["event"]))
 
     def find(self, number: int) -> Event | OpenEvent:
         """Return an event, closed or open, by its number.

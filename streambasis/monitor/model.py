@@ -14,7 +14,7 @@ from streambasis.kernels.monitor import standardize, take_off
 from streambasis.monitor.contributions import shares
 from streambasis.monitor.learning import Learnt
 from streambasis.monitor.limits import SpeLimit, t2_limit
-from streambasis.monitor.projection import UNSEEN, Projection
+from streambasis.monitor.projection import UNSEEN, Projection, Scored
 from streambasis.monitor.quantiles import chi2_quantile
 from streambasis.monitor.scaling import Scaling
 from streambasis.principal import PrincipalBasis
@@ -64,39 +64,6 @@ class Settings:
         return math.inf if self.half_life is None else max(20_000.0, 20.0 * self.half_life)
 
 
-@dataclass(slots=True)
-class Scored:
-    """Samples in noise units, split over the directions and compared with the limit.
-
-    Attributes
-    ----------
-    z : ndarray of float64, shape (m, n)
-        The samples.
-    coordinates : ndarray of float64, shape (m, q)
-        Along the directions of the projection.
-    spe, rest, t2, limit : ndarray of float64, shape (m,)
-        Squared prediction error, what of it standing events leave, T², and the limit; NaN for a
-        sample that cannot be judged.
-    judged, beyond : ndarray of bool, shape (m,)
-        Whether it can be, and whether standing events leave something beyond the limit.
-    shows : ndarray of bool, shape (m, events)
-        Whether each standing event shows in the sample.
-    special : dict of int to Projection
-        The projection of each sample with gaps, by row.
-    """
-
-    z: NDArray[np.float64]
-    coordinates: NDArray[np.float64]
-    spe: NDArray[np.float64]
-    rest: NDArray[np.float64]
-    t2: NDArray[np.float64]
-    limit: NDArray[np.float64]
-    judged: NDArray[np.bool_]
-    beyond: NDArray[np.bool_]
-    shows: NDArray[np.bool_]
-    special: dict[int, Projection]
-
-
 class Model:
     """What is ordinary, as learnt from the baseline and from explained samples since.
 
@@ -136,6 +103,7 @@ class Model:
         self.names = names
         self.settings = settings
         self.inverse = 1.0 / self.scaling.scale
+        self._entered_centre = self.scaling.centre * self.inverse
         weights = self.inverse**2
         self.basis = PrincipalBasis(
             names,
@@ -235,32 +203,20 @@ class Model:
         )  # fmt: skip
         return gaps > 0
 
-    def score(self, z: NDArray[np.float64], *, gaps: bool) -> Scored:
-        """Split samples over the directions and compare what is left with the limit."""
-        m = len(z)
-        projection, parts = self.projection, self.parts
-        coordinates = np.empty((m, len(projection.directions)))
-        spe, rest, t2 = np.empty(m), np.empty(m), np.empty(m)
-        projection.score(z, coordinates, spe, rest, t2)
-        limit = np.full(m, self.limit.value)
-        judged = np.ones(m, np.bool_)
-        special: dict[int, Projection] = {}
-        for i in np.flatnonzero(np.isnan(z).any(axis=1)).tolist() if gaps else ():
-            special[i], limit[i] = self.pattern(~np.isnan(z[i]))
-            one = slice(i, i + 1)
-            special[i].score(z[one], coordinates[one], spe[one], rest[one], t2[one])
-            if np.isnan(limit[i]):
-                judged[i] = False
-                spe[i] = rest[i] = t2[i] = np.nan
-        beyond = rest > limit
-        shows = np.zeros((m, len(parts)), np.bool_)
+    def score(self, out: Scored, *, gaps: bool) -> Scored:
+        """Split samples over the directions and compare what is left with the limits."""
+        projection, parts, t2_limit = self.projection, self.parts, self.t2_limit
+        projection.score(out, (self.limit.value, t2_limit))
+        for i in np.flatnonzero(np.isnan(out.z).any(axis=1)).tolist() if gaps else ():
+            out.special[i], limit = self.pattern(~np.isnan(out.z[i]))
+            out.special[i].score(out.row(i), (limit, t2_limit))
         if parts:
-            along = coordinates[:, projection.first :] ** 2
-            beyond &= rest > NEARLY * along.sum(axis=1)
-            floor = np.minimum(rest, self.limit.mean)
-            for j, part in enumerate(parts):
-                shows[:, j] = floor + along[:, part].sum(axis=1) > limit
-        return Scored(z, coordinates, spe, rest, t2, limit, judged, beyond, shows, special)
+            along = out.coordinates[:, projection.first :] ** 2
+            out.beyond &= out.rest > NEARLY * along.sum(axis=1)
+            floor = np.minimum(out.rest, self.limit.mean)
+            shows = [floor + along[:, part].sum(axis=1) > out.limit for part in parts]
+            out.shows = np.array(shows).T.copy()
+        return out
 
     def pattern(self, observed: NDArray[np.bool_]) -> tuple[Projection, float]:
         """Return the directions as the observed channels show them, and the limit for those.
@@ -298,15 +254,18 @@ class Model:
                 )[0]
         return out
 
-    def clean(self, scored: Scored, which: NDArray[np.bool_]) -> None:
+    def clean(self, scored: Scored, which: NDArray[np.bool_], *, extreme: bool) -> None:
         """Make the first rows of ``scored.z`` fit to be folded into the basis, in place.
 
         Adopted behaviour and standing events are taken off, missing values filled in with what the
-        basis expects, and coordinates beyond the T² limit drawn in to it.
+        basis expects, and coordinates beyond the T² limit drawn in to it. ``extreme`` says whether
+        there are such.
         """
         projection = self.projection
         count = len(projection.directions)
-        odd = which & (scored.t2[: len(which)] > self.t2_limit)
+        if not (extreme or scored.special or projection.known or count > projection.first):
+            return
+        odd = which & scored.extreme[: len(which)]
         for i in scored.special:
             if i < len(which):
                 odd[i] = which[i]
@@ -324,10 +283,8 @@ class Model:
     def fold(self, z: NDArray[np.float64]) -> None:
         """Take samples in noise units, fit to be folded, into the basis."""
         if len(z):
-            rows = self._rows[: len(z)]
-            np.multiply(z, self.scaling.scale, out=rows)
-            rows += self.scaling.centre
-            self.basis.take_many(rows)
+            rows = np.add(z, self._entered_centre, out=self._rows[: len(z)])
+            self.basis.take_entered(rows)
             self.basis.flush()
 
     def adopt(self, number: int, directions: NDArray[np.float64]) -> None:

@@ -221,11 +221,7 @@ class NoveltyMonitor:
     def events(self) -> list[Event]:
         """The events so far, by number, open ones included."""
         with self._lock:
-            if self._judge is None:
-                return []
-            judge = self._judge
-            still = [judge.event(which, open=True) for which in range(len(judge.open))]
-            return sorted([*judge.history.events.values(), *still], key=lambda e: int(e["event"]))
+            return [] if self._judge is None else self._judge.events
 
     def audit(self) -> Audit:
         """Measure the orthonormality of all directions that samples are judged by.

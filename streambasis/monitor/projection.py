@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import Any
+from dataclasses import dataclass, field
+from typing import Any, Self
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,63 @@ UNSEEN = 1e-6
 """A direction of which the observed channels show less than this part has no coordinate there."""
 
 NO_EVENT = slice(0, 0)
+
+
+@dataclass(slots=True)
+class Scored:
+    """Samples in noise units, split over the directions and compared with the limits.
+
+    Attributes
+    ----------
+    z : ndarray of float64, shape (m, n)
+        The samples.
+    coordinates : ndarray of float64, shape (m, q)
+        Along the directions of the projection.
+    spe, rest, t2, limit, t2_limit : ndarray of float64, shape (m,)
+        Squared prediction error, what of it standing events leave, T², and the limits; NaN for a
+        sample that cannot be judged.
+    judged, beyond, novel, extreme : ndarray of bool, shape (m,)
+        Whether it can be, whether standing events leave something beyond the limit, whether the
+        squared prediction error is beyond it, and T² beyond its own.
+    shows : ndarray of bool, shape (m, events)
+        Whether each standing event shows in the sample.
+    special : dict of int to Projection
+        The projection of each sample with gaps, by row.
+    """
+
+    z: NDArray[np.float64]
+    coordinates: NDArray[np.float64]
+    spe: NDArray[np.float64]
+    rest: NDArray[np.float64]
+    t2: NDArray[np.float64]
+    limit: NDArray[np.float64]
+    t2_limit: NDArray[np.float64]
+    judged: NDArray[np.bool_]
+    beyond: NDArray[np.bool_]
+    novel: NDArray[np.bool_]
+    extreme: NDArray[np.bool_]
+    shows: NDArray[np.bool_]
+    special: dict[int, Projection] = field(default_factory=dict)
+
+    @classmethod
+    def room(cls, z: NDArray[np.float64], directions: int) -> Self:
+        """Return room for what becomes of samples, (m, n)."""
+        m = len(z)
+        spe, rest, t2, limit, t2_limit = np.empty((5, m))
+        judged, beyond, novel, extreme = np.empty((4, m), np.bool_)
+        return cls(
+            z, np.empty((m, directions)), spe, rest, t2, limit, t2_limit,
+            judged, beyond, novel, extreme, np.zeros((m, 0), np.bool_),
+        )  # fmt: skip
+
+    def row(self, i: int) -> Scored:
+        """Return a view of one row."""
+        one = slice(i, i + 1)
+        return Scored(
+            self.z[one], self.coordinates[one], self.spe[one], self.rest[one], self.t2[one],
+            self.limit[one], self.t2_limit[one], self.judged[one], self.beyond[one],
+            self.novel[one], self.extreme[one], self.shows[one],
+        )  # fmt: skip
 
 
 class Projection:
@@ -37,6 +95,7 @@ class Projection:
     """
 
     __slots__ = (
+        "_limits",
         "_work",
         "basis",
         "directions",
@@ -74,20 +133,15 @@ class Projection:
             self.directions, upper = orthonormal(rows)
             self.whitening = _whitening(upper, self.known, self.first, self.spreads)
             self.seen = int(np.count_nonzero(np.diag(upper)))
-        self._work = np.zeros(mean.size)
+        self._work, self._limits = np.zeros(mean.size), np.zeros(2)
 
-    def score(
-        self,
-        z: NDArray[np.float64],
-        coordinates: NDArray[np.float64],
-        spe: NDArray[np.float64],
-        rest: NDArray[np.float64],
-        t2: NDArray[np.float64],
-    ) -> None:
-        """Split rows in noise units, (m, n), over the directions; the rest is filled."""
+    def score(self, out: Scored, limits: tuple[float, float]) -> None:
+        """Split samples over the directions and compare with the limits of SPE and T²."""
+        self._limits[:] = limits
         score_rows(
-            z, self.mean, self.directions, self.first, self.whitening, self._work,
-            coordinates, spe, rest, t2,
+            out.z, self.mean, self.directions, self.first, self.whitening, self._limits, self._work,
+            out.coordinates, out.spe, out.rest, out.t2, out.limit, out.t2_limit,
+            out.judged, out.beyond, out.novel, out.extreme,
         )  # fmt: skip
 
     def residuals(

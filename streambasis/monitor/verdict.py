@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, Any, NamedTuple
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -71,8 +71,8 @@ class Columns:
     def __init__(self, first: int, times: NDArray[np.int64] | None, count: int) -> None:
         self.sample = np.arange(first, first + count)
         self.time = np.full(count, NO_TIME) if times is None else times
-        self.spe, self.t2, self.limit, self.t2_limit = (np.full(count, np.nan) for _ in range(4))
-        self.novel, self.extreme = np.zeros(count, np.bool_), np.zeros(count, np.bool_)
+        self.spe, self.t2, self.limit, self.t2_limit = np.full((4, count), np.nan)
+        self.novel, self.extreme = np.zeros((2, count), np.bool_)
         self.rank = np.zeros(count, np.int32)
         self.event = np.full(count, NO_EVENT)
 
@@ -98,22 +98,33 @@ class Columns:
         """Return the decision columns as an Arrow table; what is unknown is null."""
         import pyarrow as pa
 
-        def column(values: NDArray[Any], unknown: NDArray[np.bool_]) -> pa.Array:
-            if unknown.all():
-                return pa.nulls(len(values), pa.from_numpy_dtype(values.dtype))
-            return pa.array(values, mask=unknown) if unknown.any() else pa.array(values)
-
         unjudged = np.isnan(self.spe)
+        judged = not unjudged.any()
+
+        def score(values: NDArray[np.float64]) -> pa.Array:
+            return pa.array(values) if judged else pa.array(values, mask=unjudged)
+
         columns = {
             "sample": pa.array(self.sample),
-            "time": column(self.time.view("datetime64[ns]"), self.time == NO_TIME),
-            "spe": column(self.spe, unjudged),
-            "t2": column(self.t2, unjudged),
-            "limit": column(self.limit, unjudged),
-            "t2_limit": column(self.t2_limit, unjudged),
+            "time": _known(self.time, NO_TIME, pa.timestamp("ns")),
+            "spe": score(self.spe),
+            "t2": score(self.t2),
+            "limit": score(self.limit),
+            "t2_limit": score(self.t2_limit),
             "novel": pa.array(self.novel),
             "extreme": pa.array(self.extreme),
             "rank": pa.array(self.rank),
-            "event": column(self.event, self.event == NO_EVENT),
+            "event": _known(self.event, NO_EVENT, pa.int64()),
         }
         return pa.Table.from_arrays(list(columns.values()), list(columns))
+
+
+def _known(values: NDArray[np.int64], unknown: int, kind: pa.DataType) -> pa.Array:
+    """Return whole numbers as an Arrow array of a kind; the least of all, ``unknown``, is null."""
+    import pyarrow as pa
+
+    if values.max(initial=unknown) == unknown:
+        return pa.nulls(len(values), kind)
+    if values.min() == unknown:
+        return pa.array(values, mask=values == unknown).cast(kind)
+    return pa.array(values).cast(kind)
