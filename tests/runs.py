@@ -12,7 +12,7 @@ import pyarrow as pa
 import pyarrow.csv
 import pytest
 
-from streambasis.feeds import FeedOptions, Position, open_feed
+from streambasis.feeds import Broker, FeedOptions, Position, open_feed
 from streambasis.monitor import NoveltyMonitor
 from streambasis.watch import home as home_module
 from streambasis.watch.home import Home
@@ -77,10 +77,10 @@ class Watched:
     Parameters
     ----------
     feed, folder : Path
-        What it reads, and its home; None for none.
+        What it reads (or an address), and its home; None for none.
     after : callable
         Called with the number of samples after each batch.
-    strict, reopens, decisions
+    strict, reopens, decisions, broker
         As of the feed, the run and the home.
     given
         Further arguments of the run.
@@ -88,13 +88,14 @@ class Watched:
 
     def __init__(
         self,
-        feed: Path,
+        feed: Path | str,
         folder: Path | None,
         after: Callable[[int], None] = lambda _: None,
         *,
         strict: bool = False,
         reopens: bool = False,
         decisions: str = "arrow",
+        broker: Broker | None = None,
         **given: Any,
     ) -> None:
         self.feed, self.folder = feed, folder
@@ -103,12 +104,16 @@ class Watched:
         self.ear = Ear(after)
         self.monitor: NoveltyMonitor
         self._strict, self._reopens, self._decisions = strict, reopens, decisions
+        self._broker = broker
         self._given = {"every": (1024, 1e9), "adopt_after": 1000, **given}
 
     def open(self, position: Position | None) -> Any:
         """Open the feed at a position."""
-        options = FeedOptions(strict=self._strict, stop=self.asked, wait=None)
-        return open_feed(self.feed, position=position, options=options)
+        # what comes as it is sent is taken as it comes, everything else in whole batches
+        wait = 0.005 if self._broker else None
+        options = FeedOptions(strict=self._strict, stop=self.asked, wait=wait, broker=self._broker)
+        channels = None if position is None else self.monitor.channels
+        return open_feed(self.feed, position=position, options=options, channels=channels)
 
     def __call__(self) -> Watched:
         """Run to the end of the feed, or until asked to stop."""
@@ -123,11 +128,13 @@ class Watched:
         return self
 
     def _run(self, home: Home | None) -> None:
+        kept = None if home is None else home.monitor()
+        if kept is not None:
+            self.monitor = kept
         with self.open(None if home is None else home.position) as feed:
-            kept = None if home is None else home.monitor()
-            self.monitor = kept or NoveltyMonitor(
-                feed.columns.channels, baseline=1000, false_alarm=1e-3
-            )
+            if kept is None:
+                channels = feed.columns.channels
+                self.monitor = NoveltyMonitor(channels, baseline=1000, false_alarm=1e-3)
             self.run = Run(
                 feed,
                 self.monitor,

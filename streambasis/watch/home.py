@@ -221,6 +221,11 @@ class Home:
         position: Position | None = None if self.state is None else self.state.facts["position"]
         return position
 
+    @property
+    def channels(self) -> tuple[str, ...] | None:
+        """Channels of the run at the last commit, None in a new folder."""
+        return None if self.state is None else tuple(self.state.parts["core"].facts["channels"])
+
     def monitor(self) -> NoveltyMonitor | None:
         """Return the monitor of the last commit, None in a new folder.
 

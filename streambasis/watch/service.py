@@ -193,7 +193,11 @@ class _Service:
                 self.readiness.ready()
 
             def reopen(position: Position | None) -> Feed:
-                feed = opened(settings, options, position)
+                channels = settings.channels
+                if home is not None and position is not None:
+                    # a run that goes on knows them, and waits for no message that shows them
+                    channels = channels or home.channels
+                feed = opened(replace(settings, channels=channels), options, position)
                 self._health.trouble = lambda: feed.trouble
                 return feed
 
