@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 
-from streambasis.watch.health import Health
+from streambasis.watch.health import REPEAT_SECONDS, Health, Listener
 from streambasis.watch.vitals import Vitals
 
 
@@ -43,3 +43,45 @@ def test_disk_and_audit_are_reasons_of_their_own() -> None:
     ]
     vitals.unkept = vitals.unsound = None
     assert health.reasons() == []
+
+
+def test_what_changes_is_said_once_and_when_it_is_over() -> None:
+    """A lost connection is one line, its return another; nothing while nothing changes."""
+    said: list[str] = []
+    trouble = [""]
+    listener = Listener(Health(Vitals(), trouble=lambda: trouble[0]), said.append)
+    now = 1000.0
+    for trouble[0] in ("", "the connection is lost", "the connection is lost", "", ""):
+        listener.look(now)
+        now += REPEAT_SECONDS
+    assert said == ["feed: the connection is lost", "feed: connected again"]
+
+
+def test_a_connection_that_comes_and_goes_is_said_once_a_minute() -> None:
+    """However often it changes; what is said last is true."""
+    said: list[str] = []
+    trouble = [""]
+    listener = Listener(Health(Vitals(), trouble=lambda: trouble[0]), said.append)
+    for second in range(600):
+        trouble[0] = "lost" if second % 2 else ""
+        listener.look(1000.0 + second)
+    assert 5 <= len(said) <= 600 // REPEAT_SECONDS + 1
+    trouble[0] = ""
+    listener.look(5000.0)
+    listener.look(6000.0)
+    assert said[-1] == "feed: connected again"
+
+
+def test_silence_is_said_without_anybody_asking_for_health() -> None:
+    """The thread looks by itself, and ends with the block."""
+    said: list[str] = []
+    vitals = Vitals(taken_at=time.time() - 90)
+    with Listener(Health(vitals, silent_after=60), said.append) as listener:
+        deadline = time.monotonic() + 30
+        while not said and time.monotonic() < deadline:
+            time.sleep(0.05)
+    (line,) = said
+    assert line.startswith("feed: nothing has come for 9")
+    vitals.taken_at = time.time()
+    listener.look(time.monotonic() + REPEAT_SECONDS)
+    assert said[1:] == ["feed: samples come again"]

@@ -2,10 +2,17 @@
 
 from __future__ import annotations
 
+import threading
 import time
 from collections.abc import Callable
+from types import TracebackType
+from typing import Self
 
 from streambasis.watch.vitals import Vitals
+
+LOOK_SECONDS = 1.0
+REPEAT_SECONDS = 60.0
+"""Seconds between two looks at the feed, and from one line about it to the next of its kind."""
 
 
 class Health:
@@ -41,16 +48,72 @@ class Health:
     def reasons(self) -> list[str]:
         """Return what is wrong, one sentence each; nothing while all is well."""
         vitals = self._vitals
-        found = []
-        silent = time.time() - (vitals.taken_at or self._opened)
-        if self.silent_after and silent > self.silent_after:
-            trouble = self.trouble()
-            found.append(
-                f"feed: nothing has come for {silent:.3g} s, allowed are {self.silent_after:g} s"
-                + (f" ({trouble})" if trouble else "")
-            )
+        silence = self.silence()
+        found = [silence] if silence else []
         if vitals.unkept is not None:
             found.append(f"disk: {vitals.unkept}")
         if vitals.unsound is not None:
             found.append(f"audit: {vitals.unsound}")
         return found
+
+    def silence(self) -> str:
+        """Return a sentence if the feed has been silent for too long, else nothing."""
+        silent = time.time() - (self._vitals.taken_at or self._opened)
+        if not self.silent_after or silent <= self.silent_after:
+            return ""
+        trouble = self.trouble()
+        reason = f" ({trouble})" if trouble else ""
+        allowed = f"allowed are {self.silent_after:g} s"
+        return f"feed: nothing has come for {silent:.3g} s, {allowed}{reason}"
+
+
+class Listener:
+    """Says when a feed falls silent or loses its connection, and when that is over.
+
+    Parameters
+    ----------
+    health : Health
+        Knows it.
+    warned : callable
+        Told in one line.
+
+    Notes
+    -----
+    Looks once a second, from a thread of its own since the loop waits for the feed. A connection
+    that comes and goes gives no more than a line per minute, and the last one is true.
+    """
+
+    def __init__(self, health: Health, warned: Callable[[str], None]) -> None:
+        self._health = health
+        self._warned = warned
+        self._over = threading.Event()
+        self._said = {"samples come again": False, "connected again": False}
+        self._next = dict.fromkeys(self._said, 0.0)
+        self._thread = threading.Thread(target=self._listen, name="health", daemon=True)
+
+    def look(self, now: float) -> None:
+        """Say what has changed; ``now`` is a monotonic clock."""
+        trouble = self._health.trouble()
+        found = (self._health.silence(), f"feed: {trouble}" if trouble else "")
+        for (over, said), text in zip(list(self._said.items()), found, strict=True):
+            if bool(text) != said and now >= self._next[over]:
+                self._said[over] = bool(text)
+                self._next[over] = now + REPEAT_SECONDS
+                self._warned(text or f"feed: {over}")
+
+    def _listen(self) -> None:
+        while not self._over.wait(LOOK_SECONDS):
+            self.look(time.monotonic())
+
+    def __enter__(self) -> Self:
+        self._thread.start()
+        return self
+
+    def __exit__(
+        self,
+        kind: type[BaseException] | None,
+        error: BaseException | None,
+        trace: TracebackType | None,
+    ) -> None:
+        self._over.set()
+        self._thread.join()

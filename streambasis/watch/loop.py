@@ -296,6 +296,8 @@ class Run:
                 self._acknowledged = True
             if not keeping.full(live=feed.live) or asked.is_set():
                 return
+            # a watchdog is to end a loop that hangs, not one that waits for the disk
+            self._vitals.busy_since = None
             asked.wait(PAUSE)
 
     def _commit(self) -> None:

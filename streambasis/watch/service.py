@@ -17,7 +17,7 @@ from streambasis.feeds import Broker, Feed, FeedOptions, Position, open_feed
 from streambasis.feeds.broker import CREDENTIALS, credentials_of
 from streambasis.monitor import NoveltyMonitor
 from streambasis.warming import warm_up
-from streambasis.watch.health import Health
+from streambasis.watch.health import Health, Listener
 from streambasis.watch.home import Home
 from streambasis.watch.loop import Run, Summary
 from streambasis.watch.options import spelled
@@ -188,6 +188,8 @@ class _Service:
             if not warmed_up(asked):
                 return None
             self._health.opened()
+            if is_address(name) or name == STANDARD_INPUT or settings.follow:
+                held.enter_context(Listener(self._health, self.terminal.warned))
             if is_address(name) or name == STANDARD_INPUT:
                 # these wait for the first sample, which may be hours away
                 self.readiness.ready()
