@@ -43,6 +43,7 @@ from streambasis.watch.config import read_config
 from streambasis.watch.options import FEED as FEED_NAME
 from streambasis.watch.options import OPTIONS, spelled
 from streambasis.watch.settings import Settings, settings_of
+from streambasis.watch.stopping import Signals
 
 _CODES = "\b\nExit codes:\n" + "\n".join(f"  {code:<4} {what}" for code, what in EXIT_CODES)
 _Command = TypeVar("_Command", bound=Callable[..., Any])
@@ -147,9 +148,11 @@ def watch(config: Path | None, **given: Any) -> None:
         return settings_of(typed, written, config)
 
     settings = read()
-    from streambasis.watch.service import serve
+    # heard while the rest is still being loaded
+    with Signals(hang_up_stops=config is None and sys.stderr.isatty()) as signals:
+        from streambasis.watch.service import serve
 
-    serve(settings, sys.stdout, sys.stderr, read if config is not None else None)
+        serve(settings, sys.stdout, sys.stderr, signals, None if config is None else read)
 
 
 def _use_one_thread() -> None:

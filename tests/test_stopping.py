@@ -26,7 +26,8 @@ def test_the_first_signal_asks_and_the_second_acts(number: signal.Signals) -> No
     before = signal.signal(number, outer)
     told: list[bool] = []
     try:
-        with Signals(on_stop=lambda: told.append(True)) as signals:
+        with Signals() as signals:
+            signals.on_stop = lambda: told.append(True)
             assert not signals.asked.is_set()
             os.kill(os.getpid(), number)
             assert signals.asked.wait(HEARD_WITHIN)
@@ -50,29 +51,38 @@ def test_a_wish_to_stop_is_heard_while_its_own_lock_is_held() -> None:
 def test_each_hang_up_is_told_and_stops_nothing() -> None:
     """SIGHUP calls back each time it comes, and is no wish to stop."""
     told = threading.Semaphore(0)
-    with Signals(on_hang_up=told.release) as signals:
+    with Signals() as signals:
+        signals.on_hang_up = told.release
         for _ in range(3):
             os.kill(os.getpid(), signal.SIGHUP)
             assert told.acquire(timeout=HEARD_WITHIN)
         assert not signals.asked.is_set()
 
 
-def test_a_hang_up_that_nobody_wants_is_a_wish_to_stop() -> None:
-    """A run on a terminal that is closed keeps what it has and ends."""
+def test_a_terminal_that_is_closed_is_a_wish_to_stop() -> None:
+    """A run on it keeps what it has and ends."""
     before = signal.signal(signal.SIGHUP, signal.SIG_DFL)
     try:
-        with Signals() as signals:
+        with Signals(hang_up_stops=True) as signals:
             os.kill(os.getpid(), signal.SIGHUP)
             assert signals.asked.wait(HEARD_WITHIN)
     finally:
         signal.signal(signal.SIGHUP, before)
 
 
+def test_a_hang_up_that_nobody_waits_for_is_passed_over() -> None:
+    """Before the daemon has set itself up there is nothing to read again."""
+    with Signals() as signals:
+        os.kill(os.getpid(), signal.SIGHUP)
+        os.kill(os.getpid(), signal.SIGTERM)
+        assert signals.asked.wait(HEARD_WITHIN)
+
+
 def test_a_hang_up_that_is_ignored_stays_ignored() -> None:
     """A run that was started to outlive its terminal does."""
     before = signal.signal(signal.SIGHUP, signal.SIG_IGN)
     try:
-        with Signals() as signals:
+        with Signals(hang_up_stops=True) as signals:
             os.kill(os.getpid(), signal.SIGHUP)
             os.kill(os.getpid(), signal.SIGTERM)
             assert signals.asked.wait(HEARD_WITHIN)

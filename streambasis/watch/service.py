@@ -139,7 +139,11 @@ def new_monitor(settings: Settings, channels: tuple[str, ...]) -> NoveltyMonitor
 
 
 def serve(
-    settings: Settings, out: TextIO, err: TextIO, again: Callable[[], Settings] | None = None
+    settings: Settings,
+    out: TextIO,
+    err: TextIO,
+    signals: Signals,
+    again: Callable[[], Settings] | None = None,
 ) -> None:
     """Run a monitor over a feed until the feed ends, or somebody asks to stop.
 
@@ -149,17 +153,26 @@ def serve(
         What to do.
     out, err : text file
         Standard output and standard error.
+    signals : Signals
+        Where wishes are heard.
     again : callable, optional
-        Reads the settings again, for SIGHUP. Without it SIGHUP asks a run on a terminal to stop,
-        which is what closing a terminal means, and is passed over by any other.
+        Reads the settings again, for SIGHUP.
+
+    Notes
+    -----
+    Asked to stop while kernels are compiled, the process ends at once when everything is closed:
+    the thread that compiles cannot be ended, and an interpreter that is torn down under it crashes.
     """
     service = _Service(settings, out, err)
-    reload = functools.partial(service.reload, again)
-    on_hang_up = None if again is None and err.isatty() else reload
-    with Signals(service.readiness.stopping, on_hang_up) as signals:
-        summary = service.run(signals.asked)
+    signals.on_stop = service.readiness.stopping
+    signals.on_hang_up = functools.partial(service.reload, again)
+    summary = service.run(signals.asked)
     if summary is not None:
         service.terminal.summary(summary)
+    elif service.compiles:
+        out.flush()
+        err.flush()
+        os._exit(0)
 
 
 class _Service:
@@ -170,6 +183,7 @@ class _Service:
         self._vitals = Vitals()
         self._health = Health(self._vitals, settings.silent_after)
         self._run: Run | None = None
+        self._warming: threading.Thread | None = None
         self.terminal = Terminal(out, err, as_json=settings.json, quiet=settings.quiet)
         self.readiness = Readiness(self._vitals, self.terminal.warned)
 
@@ -185,7 +199,7 @@ class _Service:
                 home = held.enter_context(Home(settings.home, format))
             if settings.metrics is not None:
                 self._serve_metrics(settings.metrics, held)
-            if not warmed_up(asked):
+            if not self._warmed_up(asked):
                 return None
             self._health.opened()
             if is_address(name) or name == STANDARD_INPUT or settings.follow:
@@ -241,6 +255,37 @@ class _Service:
         with self.terminal:
             return self._run(asked)
 
+    @property
+    def compiles(self) -> bool:
+        """Whether kernels are still being compiled."""
+        return self._warming is not None and self._warming.is_alive()
+
+    def _warmed_up(self, asked: threading.Event) -> bool:
+        """Compile what a run needs; return whether that was done before somebody asked to stop.
+
+        Notes
+        -----
+        A tenth of a second where kernels have been compiled before, many seconds otherwise. A
+        thread does it, which a process that is asked to stop leaves behind.
+        """
+        failures: list[BaseException] = []
+
+        def work() -> None:
+            try:
+                warm_up(NoveltyMonitor)
+            except BaseException as error:
+                failures.append(error)
+
+        if asked.is_set():
+            return False
+        self._warming = threading.Thread(target=work, name="warm-up", daemon=True)
+        self._warming.start()
+        while self._warming.is_alive() and not asked.is_set():
+            self._warming.join(_PATIENCE)
+        if failures:
+            raise failures[0]
+        return not asked.is_set()
+
     def _serve_metrics(self, endpoint: Endpoint, held: ExitStack) -> None:
         # the packages that it needs are not loaded by a run without it
         from streambasis.watch.metrics import registry_of
@@ -282,29 +327,3 @@ class _Service:
         if others:
             note += f"; only another start changes {', '.join(map(spelled, others))}"
         self.terminal.warned(note)
-
-
-def warmed_up(asked: threading.Event) -> bool:
-    """Compile what a run needs; return whether that was done before somebody asked to stop.
-
-    Notes
-    -----
-    A tenth of a second where kernels have been compiled before, many seconds otherwise. They
-    cannot be cut short, so they run in a thread that a process which is asked to stop leaves
-    behind; nothing is lost with it.
-    """
-    failures: list[BaseException] = []
-
-    def work() -> None:
-        try:
-            warm_up(NoveltyMonitor)
-        except BaseException as error:
-            failures.append(error)
-
-    thread = threading.Thread(target=work, name="warm-up", daemon=True)
-    thread.start()
-    while thread.is_alive() and not asked.is_set():
-        thread.join(_PATIENCE)
-    if failures:
-        raise failures[0]
-    return not asked.is_set()

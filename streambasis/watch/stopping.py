@@ -19,15 +19,17 @@ class Signals:
 
     Parameters
     ----------
-    on_stop : callable, optional
-        Called once, when the first SIGINT or SIGTERM comes.
-    on_hang_up : callable, optional
-        Called at each SIGHUP; without it SIGHUP is a wish to stop as well.
+    hang_up_stops : bool
+        SIGHUP is a wish to stop as well: what closing a terminal means to what runs on it.
 
     Attributes
     ----------
     asked : threading.Event
         Set by the first wish to stop.
+    on_stop : callable or None
+        Called once, when it comes.
+    on_hang_up : callable or None
+        Called at each SIGHUP that is no wish to stop.
 
     Notes
     -----
@@ -39,14 +41,11 @@ class Signals:
     In a thread other than the main one, which gets no signals, nothing is heard.
     """
 
-    def __init__(
-        self,
-        on_stop: Callable[[], None] | None = None,
-        on_hang_up: Callable[[], None] | None = None,
-    ) -> None:
+    def __init__(self, *, hang_up_stops: bool = False) -> None:
         self.asked = threading.Event()
-        self._on_stop = on_stop
-        self._on_hang_up = on_hang_up
+        self.on_stop: Callable[[], None] | None = None
+        self.on_hang_up: Callable[[], None] | None = None
+        self._stopping = (*STOPPING, _HANG_UP) if hang_up_stops else STOPPING
         self._earlier: dict[int, signal._HANDLER] = {}
 
     def __enter__(self) -> Self:
@@ -57,28 +56,28 @@ class Signals:
         self._thread = threading.Thread(target=self._listen, name="signals", daemon=True)
         self._thread.start()
         self._wakeup = signal.set_wakeup_fd(self._write, warn_on_full_buffer=False)
-        heard = [*STOPPING]
-        # a command that was started to outlive its terminal ignores SIGHUP, and goes on doing so
-        if self._on_hang_up is not None or signal.getsignal(_HANG_UP) != signal.SIG_IGN:
-            heard.append(_HANG_UP)
-        self._earlier = {number: signal.getsignal(number) for number in heard}
-        for number in heard:
+        self._earlier = {number: signal.getsignal(number) for number in (*STOPPING, _HANG_UP)}
+        if _HANG_UP in self._stopping and self._earlier[_HANG_UP] == signal.SIG_IGN:
+            # it was started to outlive its terminal, and goes on doing so
+            del self._earlier[_HANG_UP]
+        for number in self._earlier:
             signal.signal(number, self._hear)
         return self
 
     def _hear(self, number: int, frame: FrameType | None) -> None:
         del frame
-        if number in STOPPING or self._on_hang_up is None:
+        if number in self._stopping:
             signal.signal(number, self._earlier[number])
 
     def _listen(self) -> None:
         while (came := os.read(self._read, 1)) != _END:
-            if came[0] == _HANG_UP and self._on_hang_up is not None:
-                self._on_hang_up()
+            if came[0] not in self._stopping:
+                if self.on_hang_up is not None:
+                    self.on_hang_up()
             elif not self.asked.is_set():
                 self.asked.set()
-                if self._on_stop is not None:
-                    self._on_stop()
+                if self.on_stop is not None:
+                    self.on_stop()
 
     def __exit__(
         self,
