@@ -77,7 +77,7 @@ def throughput(rows: int) -> Table:
 
         def daemon(path: Path) -> Callable[[], object]:
             def run() -> object:
-                options = FeedOptions(strict=False)
+                options = FeedOptions(strict=False, ahead=True)
                 with (
                     Home(folder / f"home{next(numbers)}") as home,
                     open_feed(path, options=options) as feed,

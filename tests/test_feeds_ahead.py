@@ -9,12 +9,14 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
 import pytest
 
 from streambasis.errors import FeedError
 from streambasis.feeds import FeedOptions, open_feed
 from streambasis.feeds.ahead import Ahead
-from streambasis.feeds.reading import Piece
+from streambasis.feeds.reading import AHEAD_ROWS, Piece
 
 ROWS = 200_000
 QUEUE = 30_000
@@ -110,6 +112,49 @@ def test_a_followed_file_can_drop_as_well_and_goes_on_from_its_position(tmp_path
         assert batch.values[:, 0].tolist() == list(range(ROWS, ROWS + 10))
 
 
+def file_of(folder: Path, ending: str) -> Path:
+    """Return a file of some samples, with gaps where a row is torn."""
+    numbers = np.arange(60_000.0)
+    table = pa.table({"a": numbers, "b": -numbers})
+    path = folder / f"feed.{ending}"
+    if ending == "csv":
+        lines = [b"%d,%d\n" % (n, -n) if n % 777 else b"torn\n" for n in range(60_000)]
+        path.write_bytes(HEADER + b"".join(lines))
+    elif ending == "parquet":
+        pq.write_table(table, path, row_group_size=3000)
+    else:
+        with pa.ipc.new_file(path, table.schema) as file:
+            file.write_table(table, max_chunksize=3000)
+    return path
+
+
+@pytest.mark.parametrize("ending", ["csv", "parquet", "arrow"])
+def test_a_file_read_ahead_gives_the_same_and_ends_with_its_reader(
+    tmp_path: Path, ending: str
+) -> None:
+    """Batches, positions and malformed rows are the same, and no thread outlives the feed."""
+    path = file_of(tmp_path, ending)
+    plain, ahead = FeedOptions(strict=False), FeedOptions(strict=False, ahead=True)
+    with open_feed(path, options=plain) as feed:
+        expected = list(feed.batches())
+    with open_feed(path, options=ahead) as feed:
+        found = list(feed.batches())
+    for one, other in zip(expected, found, strict=True):
+        assert (one.first, one.position, one.malformed) == (
+            other.first,
+            other.position,
+            other.malformed,
+        )
+        np.testing.assert_array_equal(one.values, other.values)
+    with open_feed(path, options=ahead) as feed:
+        next(feed.batches())
+        wait_for(lambda: feed.counts["queued"] > AHEAD_ROWS // 2)
+        assert feed.counts["queued"] <= AHEAD_ROWS or ending == "csv"
+    assert not [t for t in threading.enumerate() if t.name == "streambasis-feed"]
+    with open_feed(path, options=ahead, position=expected[4].position) as feed:
+        assert next(feed.batches()).position == expected[5].position
+
+
 def test_an_error_of_the_feed_reaches_the_reader_behind_what_came_before() -> None:
     """The thread keeps what ended it for whoever reads."""
 
@@ -118,7 +163,7 @@ def test_an_error_of_the_feed_reaches_the_reader_behind_what_came_before() -> No
         yield None
         raise FeedError("torn")
 
-    ahead = Ahead(pieces(), 10)
+    ahead = Ahead(pieces(), 10, drops=True)
     given = iter(ahead)
     assert len(next(given).values) == 3
     with pytest.raises(FeedError, match="torn"):

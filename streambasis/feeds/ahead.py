@@ -1,4 +1,4 @@
-"""A thread that reads a live feed ahead, so that what comes too fast is dropped, not held up."""
+"""A thread that reads a feed ahead of whoever takes its samples."""
 
 from __future__ import annotations
 
@@ -17,14 +17,16 @@ MOST_BYTES = 1 << 26
 
 
 class Ahead:
-    """Pieces of a feed in a queue of bounded length, whose oldest make room for the newest.
+    """Pieces of a feed in a queue of bounded length.
 
     Parameters
     ----------
     pieces : iterator of Piece or None
         What the feed finds; run through in a thread of its own.
     most : int
-        Samples in the queue; the newest piece always has room.
+        Samples in the queue; one piece always has room.
+    drops : bool
+        Where there is no room the oldest piece makes some, instead of the newest waiting for it.
 
     Attributes
     ----------
@@ -34,8 +36,8 @@ class Ahead:
         Samples that wait.
     """
 
-    def __init__(self, pieces: Iterator[Piece | None], most: int) -> None:
-        self._pieces, self._most = pieces, most
+    def __init__(self, pieces: Iterator[Piece | None], most: int, *, drops: bool) -> None:
+        self._pieces, self._most, self._drops = pieces, most, drops
         self._change = threading.Condition()
         self._queue: deque[Piece] = deque()
         self._silent = self._ended = self._closed = False
@@ -62,17 +64,24 @@ class Ahead:
             self._change.notify()
 
     def _put(self, piece: Piece) -> None:
+        rows, size = len(piece.values), piece.values.nbytes
+        while self._queue and (self.queued + rows > self._most or self._bytes + size > MOST_BYTES):
+            if self._drops:
+                oldest = self._take()
+                self.dropped += len(oldest.values) + len(oldest.malformed)
+            else:
+                self._change.wait()
+                if self._closed:
+                    return
         self._queue.append(piece)
-        self.queued += len(piece.values)
-        self._bytes += piece.values.nbytes
-        while len(self._queue) > 1 and (self.queued > self._most or self._bytes > MOST_BYTES):
-            oldest = self._take()
-            self.dropped += len(oldest.values) + len(oldest.malformed)
+        self.queued += rows
+        self._bytes += size
 
     def _take(self) -> Piece:
         piece = self._queue.popleft()
         self.queued -= len(piece.values)
         self._bytes -= piece.values.nbytes
+        self._change.notify()
         return piece
 
     def __iter__(self) -> Iterator[Piece | None]:
@@ -94,5 +103,6 @@ class Ahead:
         """End the thread, before what it reads from is closed."""
         with self._change:
             self._closed = True
+            self._change.notify()
         # it looks at least every PATIENCE, unless a pipe stands still in the middle of a batch
         self._thread.join(5 * PATIENCE)

@@ -152,6 +152,7 @@ class ParquetFeed(_TableFeed):
 
     def close(self) -> None:
         """Close the file."""
+        super().close()
         self._file.close()
 
 
@@ -200,6 +201,7 @@ class ArrowFeed(_TableFeed):
 
     def close(self) -> None:
         """Close the file."""
+        super().close()
         self._source.close()
 
 

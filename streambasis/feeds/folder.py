@@ -88,6 +88,7 @@ class FolderFeed(PieceFeed):
 
     def close(self) -> None:
         """Close the file that is open."""
+        super().close()
         self._open.close()
 
 

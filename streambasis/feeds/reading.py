@@ -20,6 +20,9 @@ BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
 blocks, so that the same samples give bit-identical results from every file."""
 
+AHEAD_ROWS = 8 * BATCH_ROWS
+"""Samples of a file that are read ahead."""
+
 FORMATS = ("csv", "json")
 """Formats of text; what is binary is told by its first bytes."""
 
@@ -143,6 +146,8 @@ class FeedOptions:
         queue of its own.
     queue : int
         Samples that may wait where the oldest are dropped.
+    ahead : bool
+        Read files in a thread of its own, a little ahead of whoever takes the samples.
     broker : Broker or None
         How to reach a broker; None takes user and password from the environment and the defaults
         for the rest.
@@ -155,6 +160,7 @@ class FeedOptions:
     stop: threading.Event = field(default_factory=threading.Event)
     when_full: str = "block"
     queue: int = 1 << 16
+    ahead: bool = False
     broker: Broker | None = None
 
     def __post_init__(self) -> None:
@@ -301,8 +307,11 @@ class PieceFeed:
         """Yield the same batches, and None when nothing has come for a while."""
         given = self._first > 0
         pieces: Iterable[Piece | None] = self.pieces()
-        if self.live and not self.queues and self.options.when_full == "drop-oldest":
-            pieces = self._ahead = Ahead(self.pieces(), self.options.queue)
+        options = self.options
+        if self.live and not self.queues and options.when_full == "drop-oldest":
+            pieces = self._ahead = Ahead(self.pieces(), options.queue, drops=True)
+        elif options.ahead and not self.live:
+            pieces = self._ahead = Ahead(self.pieces(), AHEAD_ROWS, drops=False)
         found = cut_or_wait(
             pieces, self.columns, self._first, self._keeps_rest, self.options.wait is None
         )

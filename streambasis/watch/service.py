@@ -66,6 +66,7 @@ def feed_options(settings: Settings) -> FeedOptions:
         strict=settings.strict,
         follow=settings.follow,
         when_full=_WHEN_FULL[settings.on_overload],
+        ahead=True,
     )
     if is_address(named_feed(settings)):
         return replace(options, broker=broker_of(settings))
