@@ -88,8 +88,8 @@ class Ahead:
         """Yield what waits, oldest first; None when nothing has come for a while."""
         while True:
             with self._change:
-                if not (self._queue or self._silent or self._ended):
-                    self._change.wait(PATIENCE)
+                # only what the feed itself calls silence may cut a batch short
+                self._change.wait_for(lambda: self._queue or self._silent or self._ended)
                 piece = self._take() if self._queue else None
                 if piece is None:
                     self._silent = False
