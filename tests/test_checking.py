@@ -94,6 +94,25 @@ def test_what_would_not_run_is_one_line_and_an_exit_code(
     assert SECRET not in line
 
 
+def test_a_home_with_another_run_is_refused_before_it_is_opened(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """The same settings go on there; others would not, and the line says which; damage is told."""
+    rows = "\n".join(f"{i % 7},{i % 5},{i % 3}" for i in range(300))
+    (tmp_path / "feed.csv").write_text(f"a,b,c\n{rows}\n")
+    content = 'feed = "feed.csv"\nhome = "run"\nbaseline = 100\nquiet = true\n'
+    assert checked(tmp_path, content, capsys)[0] == cli.OK
+    assert cli.main(["watch", "--config", str(tmp_path / "watch.toml")]) == cli.OK
+    assert checked(tmp_path, content, capsys)[0] == cli.OK
+    code, _, (line,) = checked(tmp_path, content.replace("100", "120"), capsys)
+    assert code == cli.OUTPUT
+    assert f"{tmp_path}/run: holds a run with baseline = 100, not 120" in line
+    (tmp_path / "run" / "state.arrow").write_bytes(b"damaged")
+    code, _, (line,) = checked(tmp_path, content, capsys)
+    assert code == cli.OUTPUT
+    assert "the run cannot go on from it" in line
+
+
 def test_the_example_can_be_run_as_it_is(capsys: pytest.CaptureFixture[str]) -> None:
     """It passes its check, and what it spells out beside feed and outputs are the defaults."""
     file = EXAMPLES / "watch.toml"

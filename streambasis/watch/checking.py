@@ -4,15 +4,25 @@ from __future__ import annotations
 
 import os
 import ssl
+from collections.abc import Sequence
 from dataclasses import fields
 from pathlib import Path
 from typing import TextIO
 
-from streambasis.errors import FeedError, HomeError
+from streambasis.errors import FeedError, HomeError, SnapshotError
 from streambasis.feeds import Broker
 from streambasis.feeds.broker import address_of
+from streambasis.snapshot import read_state
+from streambasis.watch.home import refuse_another
 from streambasis.watch.options import FEED, spelled
-from streambasis.watch.service import broker_of, feed_options, is_address, new_monitor, opened
+from streambasis.watch.service import (
+    about,
+    broker_of,
+    feed_options,
+    is_address,
+    new_monitor,
+    opened,
+)
 from streambasis.watch.settings import STANDARD_INPUT, Settings
 
 _WIDTH = 18
@@ -36,11 +46,13 @@ def check(settings: Settings, written: set[str], out: TextIO) -> None:
         If the feed cannot be opened. Of a broker only the address and the files that the
         connection needs are looked at: to connect would take the session from a running daemon.
     HomeError
-        If the home cannot be written.
+        If the home cannot be written, or holds a run of something else.
     """
-    rows = [(FEED, _feed(settings))]
+    feed, channels = _feed(settings)
+    rows = [(FEED, feed)]
     if settings.home is not None:
         _check_home(settings.home)
+        _check_run(settings, settings.home, channels)
     for field in fields(settings):
         value = getattr(settings, field.name)
         if field.name != FEED and value is not None:
@@ -50,23 +62,25 @@ def check(settings: Settings, written: set[str], out: TextIO) -> None:
         out.write(f"{name:<{_WIDTH}} {text}\n")
 
 
-def _feed(settings: Settings) -> str:
+def _feed(settings: Settings) -> tuple[str, Sequence[str] | None]:
+    """Return what the feed is, and its channels where they are known."""
     feed = settings.feed
     if feed is None:
-        return "none: name it behind 'watch'"
+        return "none: name it behind 'watch'", settings.channels
     if is_address(feed):
         address = address_of(feed)
         broker = broker_of(settings)
         if address.tls:
             _check_tls(feed, broker)
-        return f"{feed}  (topic {address.topic} of {address.host}, port {address.port})"
+        where = f"(topic {address.topic} of {address.host}, port {address.port})"
+        return f"{feed}  {where}", settings.channels
     if feed == STANDARD_INPUT:
-        return "standard input"
+        return "standard input", settings.channels
     with opened(settings, feed_options(settings), None) as found:
         columns = found.columns
         new_monitor(settings, columns.channels)
     time = "no time column" if columns.time is None else f"time in {columns.time!r}"
-    return f"{feed}  ({len(columns.channels)} channels, {time})"
+    return f"{feed}  ({len(columns.channels)} channels, {time})", columns.channels
 
 
 def _check_tls(feed: str, broker: Broker) -> None:
@@ -87,6 +101,18 @@ def _check_home(home: Path) -> None:
         raise HomeError(f"{home}: cannot be written ({there} is no folder)")
     if not os.access(there, os.W_OK | os.X_OK):
         raise HomeError(f"{home}: cannot be written ({there} belongs to somebody else)")
+
+
+def _check_run(settings: Settings, home: Path, channels: Sequence[str] | None) -> None:
+    """Look whether the run in a home, which a daemon may be writing, is the one to go on with."""
+    file = home / "state.arrow"
+    if settings.feed is None or not file.exists():
+        return
+    try:
+        state = read_state(file)
+    except SnapshotError as error:
+        raise HomeError(f"{error}; the run cannot go on from it") from None
+    refuse_another(home, state.facts.get("about", {}), about(settings, channels))
 
 
 def _shown(value: object) -> str:

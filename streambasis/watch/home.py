@@ -269,13 +269,7 @@ class Home:
             If the folder holds a run of something else.
         """
         if self.state is not None:
-            before = self.state.facts["about"]
-            for name, value in about.items():
-                if before.get(name) != value:
-                    raise HomeError(
-                        f"{self.path}: holds a run with {name} = {before.get(name)!r}, not "
-                        f"{value!r}; give the same again, or choose another folder for --home"
-                    )
+            refuse_another(self.path, self.state.facts["about"], about)
         self._about = dict(about)
 
     @property
@@ -443,6 +437,16 @@ class Home:
                 file.write_table(table.combine_chunks())
         content = sink.getvalue()
         replace_file(self.path / name, lambda file: write_all(file, content), mode=READABLE)
+
+
+def refuse_another(path: Path, before: Mapping[str, Any], about: Mapping[str, Any]) -> None:
+    """Raise HomeError if a folder holds a run of something else."""
+    for name, value in about.items():
+        if before.get(name) != value:
+            raise HomeError(
+                f"{path}: holds a run with {name} = {before.get(name)!r}, not {value!r}; give the "
+                "same again, or choose another folder for --home"
+            )
 
 
 def _line(fields: Mapping[str, Any]) -> bytes:

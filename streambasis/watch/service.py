@@ -7,7 +7,7 @@ import hashlib
 import os
 import platform
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from contextlib import ExitStack
 from dataclasses import replace
 from typing import TextIO
@@ -115,13 +115,14 @@ def opened(settings: Settings, options: FeedOptions, position: Position | None) 
     )
 
 
-def about(settings: Settings, feed: Feed) -> dict[str, object]:
-    """Return what a home must hold for the run to go on there."""
+def about(settings: Settings, channels: Sequence[str] | None) -> dict[str, object]:
+    """Return what a home must hold for the run to go on there, as far as it is known."""
     name = named_feed(settings)
     file = not is_address(name) and name != STANDARD_INPUT
+    known = {} if channels is None else {"channels": list(channels)}
     return {
         "feed": os.path.realpath(name) if file else name,
-        "channels": list(feed.columns.channels),
+        **known,
         "baseline": settings.baseline,
         "false_alarm": settings.false_alarm,
         "half_life": settings.half_life or None,
@@ -238,7 +239,7 @@ class _Service:
         settings = self._settings
         monitor = None
         if home is not None:
-            home.begin(about(settings, feed))
+            home.begin(about(settings, feed.columns.channels))
             monitor = home.monitor()
         if monitor is None:
             monitor = new_monitor(settings, feed.columns.channels)
