@@ -2,8 +2,9 @@
 
 The subspace stands for a matrix diag(s)·U whose scatter is that of all samples so far, weighted
 and, where a mean is kept, taken about it. Folding stacks the weighted samples of a block below
-it and takes the singular value decomposition again, through a core matrix that is as small as
-the directions held and the block together (Levy & Lindenbaum 2000; Brand 2006).
+it and takes the leading singular vectors again: exactly, through a core matrix that is as small
+as the directions held and the block together (:mod:`streambasis.turning`), or in one pass over
+the block where that is as good (:mod:`streambasis.one_pass`).
 """
 
 from __future__ import annotations
@@ -14,24 +15,27 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from streambasis.audit import LEAST_DIMENSION, unit_roundoff
-from streambasis.core_svd import core_spectrum
 from streambasis.errors import SnapshotError
 from streambasis.kernels import principal as kernels
+from streambasis.measuring import Block, measure, times_power
+from streambasis.one_pass import NEWCOMERS, one_pass_turn
 from streambasis.ranks import Spectrum
 from streambasis.state import State, owned
+from streambasis.turning import Stack, Turn, exact_turn, renew
+from streambasis.weighing import Weights
 
 ROUNDING_FLOOR = 16.0
 """A residual below this many machine epsilons of its sample is rounding: projecting by matrix
 products leaves a dependent sample with one or a few epsilons."""
-MOST_RENEWALS = 3
-RENEWAL_LIMIT = 1.5
-"""Loss of orthonormality, in units of the contract (which allows 3), at which the directions are
-made orthonormal again."""
-LEVEL_RANGE = 64
-"""Powers of two from 1 within which a core is left as it is."""
+REACH = 400
+"""Powers of two that squares may be away from 1 before the unit is moved: LAPACK then never scales
+a matrix by factors of its own, which are no powers of two."""
+LEAST_PIECE, LARGEST_PIECE = 16, 96
+"""Samples folded at a time where the fold is exact: near the directions held they cost least."""
 SUSPECT = 1e-6
 """Part in the first direction below which a channel may be silent."""
+COLUMNS = 1024
+"""Channels turned at a time, which bounds the workspace of a turn."""
 
 
 class Subspace:
@@ -57,13 +61,13 @@ class Subspace:
     Singular values, ``outside`` and ``power`` are held in units of 2**exponent, which is 1
     unless the samples are so large or small that their squares leave the range of the type.
 
+    A fold computes everything it changes before it changes anything.
+
     References
     ----------
     A. Levy and M. Lindenbaum (2000), Sequential Karhunen-Loeve basis extraction, IEEE Trans.
     Image Processing 9. M. Brand (2006), Fast low-rank modifications of the thin singular value
-    decomposition, Linear Algebra and its Applications 415. D. A. Ross, J. Lim, R.-S. Lin and
-    M.-H. Yang (2008), Incremental learning for robust visual tracking, Int. J. Computer Vision
-    77.
+    decomposition, Linear Algebra and its Applications 415.
     """
 
     __slots__ = (
@@ -75,14 +79,15 @@ class Subspace:
         "limit",
         "mean",
         "outside",
+        "piece",
         "power",
         "renewals",
         "residual",
-        "roots",
+        "rounding",
         "safe",
         "singular",
         "stack",
-        "typed_roots",
+        "tiny",
         "weight",
         "weight_squares",
     )
@@ -97,19 +102,23 @@ class Subspace:
         dtype: np.dtype[Any],
     ) -> None:
         self.limit, self.forget, self.centred = limit, forget, centred
-        # the directions, then room for the rows of a block outside them
-        self.stack = np.zeros((limit + block, count), dtype)
+        self.piece = min(block, max(LEAST_PIECE, min(limit, LARGEST_PIECE)))
+        # the directions, then what a fold puts below them
+        room = self.piece if limit == count else max(self.piece, limit + 2 * NEWCOMERS)
+        self.stack = np.zeros((limit + room, count), dtype)
         self.held = 0
         self.singular = np.zeros(0)
         self.mean = np.zeros(count, dtype)
         self.weight = self.weight_squares = 0.0
         self.outside = self.power = 0.0
         self.exponent = self.renewals = 0
-        self._weigh(block)
         self.residual = np.zeros(count, dtype)
-        self.coefficients = np.zeros(limit + block, dtype)
-        reach = 2.0 ** (0.8 * np.finfo(dtype).maxexp)
+        self.coefficients = np.zeros(limit + room, dtype)
+        real = np.finfo(dtype)
+        reach = 2.0 ** min(0.8 * real.maxexp, REACH)
         self.safe = (1.0 / reach, reach)
+        self.tiny = float(real.tiny)
+        self.rounding = ROUNDING_FLOOR * float(real.eps)
 
     @property
     def directions(self) -> NDArray[Any]:
@@ -119,15 +128,7 @@ class Subspace:
     @property
     def nbytes(self) -> int:
         """Bytes of all arrays."""
-        arrays = (
-            self.singular,
-            self.mean,
-            self.stack,
-            self.residual,
-            self.coefficients,
-            self.roots,
-            self.typed_roots,
-        )
+        arrays = (self.singular, self.mean, self.stack, self.residual, self.coefficients)
         return sum(array.nbytes for array in arrays)
 
     @property
@@ -159,116 +160,162 @@ class Subspace:
         suspects = np.flatnonzero(np.abs(self.stack[0]) < SUSPECT)
         parts = self.singular[:, None] * np.abs(self.directions[:, suspects])
         levels = np.sqrt((parts * parts).sum(axis=0))
-        rounding = ROUNDING_FLOOR * float(np.finfo(self.stack.dtype).eps)
-        silent = levels <= rounding * math.sqrt(self.power)
+        silent = levels <= self.rounding * math.sqrt(self.power)
         return max(count - int(np.count_nonzero(silent)), self.held)
 
     def spreads(self, rank: int) -> NDArray[np.float64]:
         """Return the standard deviations along the first directions, in units of 2**exponent."""
         return self.singular[:rank] / math.sqrt(self.weight or 1.0)
 
-    def split(self, deviations: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
-        """Return coordinates along all directions held, and what lies outside, (m, n).
+    def measure(self, samples: NDArray[Any]) -> Block | None:
+        """Return samples, (m, n), in units of 2**exponent, as measured against the directions.
 
-        What lies outside is a view of the workspace, valid until the next call; it has no rows
-        where the directions span the whole space.
+        None where squares are near the end of the range.
         """
-        directions = self.directions
-        coordinates = deviations @ directions.conj().T
-        rest = self._room(len(deviations))
-        if len(rest):
-            np.matmul(coordinates, directions, out=rest)
-            np.subtract(deviations, rest, out=rest)
-        return coordinates, rest
+        deviations, squares = self._deviations(samples), np.empty(len(samples))
+        if kernels.row_squares(deviations, *self.safe, squares) == kernels.UNUSUAL:
+            return None
+        return measure(deviations, squares, self.directions)
 
-    def _room(self, rows: int) -> NDArray[Any]:
-        """Return the rows of the workspace for what lies outside the directions."""
-        whole = self.held == self.stack.shape[1]
-        return self.stack[self.held : self.held + (0 if whole else rows)]
+    def _measure_any(self, samples: NDArray[Any]) -> Block:
+        """Return the same where squares have the range that the unit was chosen for."""
+        deviations, squares = self._deviations(samples), np.empty(len(samples))
+        kernels.row_squares(deviations, 0.0, np.inf, squares)
+        return measure(deviations, squares, self.directions)
 
-    def fold(self, block: NDArray[Any], coordinates: NDArray[Any] | None = None) -> None:
+    def _deviations(self, samples: NDArray[Any]) -> NDArray[Any]:
+        return samples - times_power(self.mean, -self.exponent) if self.centred else samples
+
+    def fold(self, samples: NDArray[Any], measured: Block | None, reported: int) -> None:
         """Fold samples, (m, n), into the subspace.
 
         Parameters
         ----------
-        block : ndarray, shape (m, n)
+        samples : ndarray, shape (m, n)
             Finite samples in Euclidean coordinates, oldest first.
-        coordinates : ndarray, shape (m, held), optional
-            What :meth:`split` has just returned for the same samples less the mean; its second
-            result is then taken from the workspace.
+        measured : Block, optional
+            What :meth:`measure` has just returned for the same samples.
+        reported : int
+            How many of the directions are asked for.
+
+        Raises
+        ------
+        NumericalError
+            If the core has no singular values, which finite samples do not bring about. What was
+            folded by then stays; nothing of the rest has left a trace.
 
         Notes
         -----
-        For m samples, k directions held and n channels: 2n(2km + m² + k(k + m) + 2k²) flops in
-        matrix products and about 10(k + m)³ in the core.
+        For m samples, k directions held and n channels: 4n·k·m + 10n·k² flops in one pass; exactly
+        2n(2km + m² + k(k + m) + 2k²) in matrix products and about 10(k + m)³ in the core.
         """
-        if len(block) != len(self.roots):
-            self._weigh(len(block))
-        roots, weights = self.roots, self.roots * self.roots
-        decay = self.forget ** len(block)
-        before, added = decay * self.weight, float(weights.sum())
-        total = before + added
-
-        squares = np.empty(len(block))
-        status = kernels.row_squares(block, *self.safe, squares)
-        self._fit_exponent(block, status)
-        if self.exponent != 0:
-            block = _times_power(block, -self.exponent)
-            kernels.row_squares(block, 0.0, np.inf, squares)
-        deviations = block
-        if self.centred:
-            mean = _times_power(self.mean, -self.exponent)
-            deviations = block - mean
-            # a difference is as uncertain as the larger of the two
-            squares += float(np.linalg.norm(mean)) ** 2
-        if coordinates is None or self.exponent != 0:
-            coordinates, rest = self.split(deviations)
+        before = self.exponent
+        squares, status = np.empty(len(samples)), kernels.USUAL
+        if measured is None or self.centred or before != 0:
+            status = kernels.row_squares(samples, *self.safe, squares)
         else:
-            rest = self._room(len(block))
-
-        wide = np.complex128 if block.dtype.kind == "c" else np.float64
-        coordinates = coordinates.astype(wide, copy=False)
-        typed = self.typed_roots
-        if self.forget < 1.0:
-            coordinates *= roots[:, None]
-            rest *= typed[: len(rest)]
+            squares = measured.squares
+        self._fit_exponent(samples, status)
+        if self.exponent != 0:
+            samples = times_power(samples, -self.exponent)
+            kernels.row_squares(samples, 0.0, np.inf, squares)
+        if measured is None or self.exponent != before:
+            measured = self._measure_any(samples)
         if self.centred:
-            self._move_mean(deviations, coordinates, rest, before, added)
-        self.weight = total
-        self.weight_squares = decay**2 * self.weight_squares + float(weights @ weights)
-        self.power = decay * self.power + float(weights @ squares)
-        self.outside *= decay
-        self._refactor(math.sqrt(decay), coordinates, rest, squares * weights)
+            # a difference is as uncertain as the larger of the two
+            mean = times_power(self.mean, -self.exponent)
+            squares += float(np.vdot(mean, mean).real)
+        whole = self.limit == self.stack.shape[1]
+        if self.held < self.limit or whole or not self._fold_at_once(measured, squares, reported):
+            self._fold_exactly(samples, measured, squares)
         self._forget_the_vanished()
 
-    def _move_mean(
-        self,
-        deviations: NDArray[Any],
-        coordinates: NDArray[Any],
-        rest: NDArray[Any],
-        before: float,
-        added: float,
-    ) -> None:
-        """Move the mean, and turn weighted rows about the old one into rows about the new one.
+    def _fold_at_once(self, block: Block, squares: NDArray[np.float64], reported: int) -> bool:
+        """Fold a block in one pass, or say that it takes an exact fold."""
+        weights = Weights(len(squares), self.forget, self.weight, self.centred)
+        turn = one_pass_turn(
+            self._stack(),
+            math.sqrt(weights.decay) * self.singular,
+            block,
+            weights,
+            self.rounding * np.sqrt(squares),
+            reported,
+        )
+        if turn is not None:
+            self._turn(turn, weights, block.deviations, squares)
+        return turn is not None
 
-        Notes
-        -----
-        The scatter about the new mean is that about the old one less the mean shift, counted W
-        times. With v the square roots of the weights this is the scatter of the weighted rows
-        times I - g·vvᵀ, g = (1 - √(Wa/W))/Wb, where Wa, Wb and W are the weights before, of the
-        block and after. (Ross et al. 2008 append the shift as one more row: the same scatter.)
-        """
-        roots, typed = self.roots, self.typed_roots
-        total = before + added
-        factor = (1.0 - math.sqrt(before / total)) / added
-        coordinates -= (factor * roots)[:, None] * (roots @ coordinates)
-        if len(rest):
-            rest -= (factor * typed) * (typed.T @ rest)
-        shift = (typed * typed).T @ deviations / total
-        self.mean += _times_power(shift[0].astype(self.mean.dtype), self.exponent)
-        if self.forget < 1.0 and np.abs(self.mean).max() < np.finfo(self.mean.dtype).tiny:
-            # rounding would hold it at a subnormal number for ever
-            self.mean[:] = 0
+    def _fold_exactly(
+        self, samples: NDArray[Any], block: Block, squares: NDArray[np.float64]
+    ) -> None:
+        """Fold samples piece by piece, each through its part outside the directions."""
+        start = 0
+        while start < len(samples):
+            every = self.held == self.stack.shape[1]
+            stop = len(samples) if every else min(start + self.piece, len(samples))
+            if start or stop < len(samples):
+                block = self._measure_any(samples[start:stop])
+            self._fold_piece(block, squares[start:stop])
+            start = stop
+
+    def _fold_piece(self, block: Block, squares: NDArray[np.float64]) -> None:
+        """Fold the samples of a block exactly."""
+        weights = Weights(len(squares), self.forget, self.weight, self.centred)
+        coordinates = block.coordinates
+        rest = self.stack[self.held : self.held]
+        if self.held < self.stack.shape[1]:
+            rest = self.stack[self.held : self.held + len(squares)]
+            np.matmul(coordinates, self.directions, out=rest)
+            np.subtract(block.deviations, rest, out=rest)
+            weights.apply(rest)
+        wide = np.complex128 if coordinates.dtype.kind == "c" else np.float64
+        turn = exact_turn(
+            self._stack(),
+            math.sqrt(weights.decay) * self.singular,
+            weights.apply(coordinates.astype(wide)),
+            rest,
+            self.rounding * np.sqrt(weights.squares * squares),
+            self.limit,
+        )
+        self._turn(turn, weights, block.deviations, squares)
+
+    def _stack(self) -> Stack:
+        return Stack(self.stack, self.held, self.residual, self.coefficients)
+
+    def _turn(
+        self,
+        turn: Turn,
+        weights: Weights,
+        deviations: NDArray[Any],
+        squares: NDArray[np.float64],
+    ) -> None:
+        """Take over a turn, and count its samples."""
+        if self.centred:
+            shift = weights.sum(deviations) / weights.total
+            self.mean += times_power(shift.astype(self.mean.dtype), self.exponent)
+            if self.forget < 1.0 and np.abs(self.mean).max() < self.tiny:
+                # rounding would hold it at a subnormal number for ever
+                self.mean[:] = 0
+        self.weight = weights.total
+        self.weight_squares *= weights.decay**2
+        self.weight_squares += float(weights.squares @ weights.squares)
+        self.power = weights.decay * self.power + float(weights.squares @ squares)
+        self.outside *= weights.decay
+        self._rotate(turn)
+
+    def _rotate(self, turn: Turn) -> None:
+        """Replace the directions by those of a turn, and cut what is beyond the limit."""
+        singular = turn.singular
+        floor = self.rounding * math.sqrt(self.power)
+        keep = min(self.limit, int(np.count_nonzero(singular > floor)))
+        self.outside += max(turn.missed + float(singular[keep:] @ singular[keep:]), 0.0)
+        rotation = turn.rotation[:keep].astype(self.stack.dtype, copy=False)
+        rows = self.stack[: rotation.shape[1]]
+        for start in range(0, rows.shape[1], COLUMNS):
+            columns = slice(start, start + COLUMNS)
+            self.stack[:keep, columns] = rotation @ rows[:, columns]
+        self.held, self.singular = keep, singular[:keep].copy()
+        self.renewals += renew(self.directions)
 
     def absorb(self, other: Subspace, folded: int) -> None:
         """Add the scatter of a subspace whose ``folded`` samples followed those of this one.
@@ -289,7 +336,7 @@ class Subspace:
         rows = singular.astype(np.finfo(self.stack.dtype).dtype)[:, None] * other.directions
         squares = singular**2
         if self.centred:
-            means = [_times_power(part.mean, -self.exponent) for part in (self, other)]
+            means = [times_power(part.mean, -self.exponent) for part in (self, other)]
             lever = math.sqrt(before * added / total)
             rows = np.concatenate([rows, (lever * (means[1] - means[0]))[None]])
             level = sum(float(np.linalg.norm(mean)) ** 2 for mean in means)
@@ -300,27 +347,32 @@ class Subspace:
         self.power = decay * self.power + math.ldexp(other.power, 2 * down)
         self.outside = decay * self.outside + math.ldexp(other.outside, 2 * down)
         self.renewals += other.renewals
-        usual = self.stack, self.coefficients
+        held, usual = self.held, self.stack
         self.stack = np.zeros((self.limit + len(rows), rows.shape[1]), rows.dtype)
-        self.stack[: self.held] = usual[0][: self.held]
-        self.coefficients = np.zeros(len(self.stack), rows.dtype)
-        coordinates, rest = self.split(rows)
+        self.stack[:held] = usual[:held]
+        coordinates = rows @ self.directions.conj().T
+        rest = self.stack[held : held + (len(rows) if held < rows.shape[1] else 0)]
+        if len(rest):
+            np.subtract(rows, coordinates @ self.directions, out=rest)
         wide = np.complex128 if rows.dtype.kind == "c" else np.float64
-        self._refactor(math.sqrt(decay), coordinates.astype(wide), rest, squares)
-        usual[0][: self.held] = self.directions
-        self.stack, self.coefficients = usual
-
-    def _weigh(self, m: int) -> None:
-        """Compute the roots of the weights of a block of m samples, as a column too."""
-        self.roots = math.sqrt(self.forget) ** np.arange(m - 1, -1, -1)
-        self.typed_roots = self.roots.astype(np.finfo(self.stack.dtype).dtype)[:, None]
+        turn = exact_turn(
+            Stack(self.stack, held, self.residual, np.zeros(len(self.stack), rows.dtype)),
+            math.sqrt(decay) * self.singular,
+            coordinates.astype(wide),
+            rest,
+            self.rounding * np.sqrt(squares),
+            self.limit,
+        )
+        self._rotate(turn)
+        usual[: self.held] = self.directions
+        self.stack = usual
 
     def _fit_exponent(self, block: NDArray[Any], status: int) -> None:
         """Choose the unit so that neither the block nor the spectrum leaves the range."""
         top = float(self.singular[0]) if self.held else 0.0
         level = math.frexp(top)[1] + self.exponent if top else 0
         wanted = 0
-        if status == kernels.UNUSUAL or abs(level) > 0.4 * np.finfo(block.dtype).maxexp:
+        if status == kernels.UNUSUAL or abs(level) > math.frexp(self.safe[1])[1] // 2:
             largest = float(max(abs(block.real).max(), abs(block.imag).max()))
             levels = [level] if top else []
             wanted = max([*levels, math.frexp(largest)[1]] if largest else levels)
@@ -334,104 +386,6 @@ class Subspace:
             self.outside = math.ldexp(self.outside, 2 * change)
             self.power = math.ldexp(self.power, 2 * change)
             self.exponent = wanted
-
-    def _refactor(
-        self,
-        decay: float,
-        coordinates: NDArray[Any],
-        rest: NDArray[Any],
-        squares: NDArray[np.float64],
-    ) -> None:
-        """Take the SVD of the old factor, decayed, with the rows of the block below it."""
-        held = self.held
-        rounding = ROUNDING_FLOOR * float(np.finfo(rest.dtype).eps)
-        if len(rest):
-            factor, change = self._factor_rest(coordinates, rest, rounding * np.sqrt(squares))
-        else:
-            factor, change = np.zeros((len(coordinates), 0), coordinates.dtype), None
-        # LAPACK's own scaling is by no power of two: bring a core far from 1 there first
-        top = max(math.sqrt(squares.max()), float(self.singular[0]) if held else 0.0)
-        level = math.frexp(top)[1]
-        if abs(level) > LEVEL_RANGE:
-            down = math.ldexp(1.0, -level)
-            coordinates, factor = down * coordinates, down * factor
-        else:
-            level, down = 0, 1.0
-        singular, rotation = core_spectrum(
-            (down * decay) * self.singular,
-            coordinates,
-            factor,
-            self.limit,
-            self.limit == self.stack.shape[1],
-        )
-        if level:
-            singular = np.ldexp(singular, level)
-        floor = rounding * math.sqrt(self.power)
-        keep = min(self.limit, int(np.count_nonzero(singular > floor)))
-        self.outside += float(singular[keep:] @ singular[keep:])
-        rotation = rotation[:keep]
-        if change is not None:
-            rotation = np.concatenate([rotation[:, :held], rotation[:, held:] @ change], axis=1)
-        rows = self.stack[: rotation.shape[1]]
-        self.stack[:keep] = rotation.astype(rows.dtype, copy=False) @ rows
-        self.held, self.singular = keep, singular[:keep].copy()
-        self._renew()
-
-    def _factor_rest(
-        self, coordinates: NDArray[Any], rest: NDArray[Any], floors: NDArray[np.float64]
-    ) -> tuple[NDArray[Any], NDArray[Any] | None]:
-        """Write the rows outside the directions as factor times orthonormal rows.
-
-        Returns the factor and the matrix that turns ``rest`` into the orthonormal rows, None
-        where they have replaced it in the workspace.
-        """
-        m = len(rest)
-        squares = np.empty(m)
-        kernels.row_squares(rest, 0.0, np.inf, squares)
-        if (squares <= floors * floors).all():
-            return np.zeros((m, 0), coordinates.dtype), None
-        gram = (rest @ rest.conj().T).astype(coordinates.dtype, copy=False)
-        # Cholesky-QR loses orthogonality by epsilon times the condition number squared, which
-        # a renewal squares: the fourth root of epsilon, and no worse than 1e-2 for the energies
-        narrowest = max(float(np.finfo(rest.dtype).eps) ** 0.25, 1e-2)
-        try:
-            lower = np.linalg.cholesky(gram)
-        except np.linalg.LinAlgError:
-            lower = None
-        if lower is not None:
-            diagonal = lower.diagonal().real
-            if diagonal.min() > narrowest * diagonal.max():
-                return lower, np.linalg.inv(lower)
-        factor, more = np.zeros((m, m), rest.dtype), np.zeros((m, self.held), rest.dtype)
-        width = kernels.orthonormal_rows(
-            rest.copy(),
-            floors,
-            self.stack,
-            self.held,
-            more,
-            factor,
-            self.residual,
-            self.coefficients,
-        )
-        coordinates += more
-        return factor[:, :width].astype(coordinates.dtype), None
-
-    def _renew(self) -> None:
-        """Make the directions orthonormal again where the last step cost too much of it.
-
-        The nearest orthonormal rows to U are (UUᴴ)^(-1/2) U; one step of its Newton iteration,
-        U - (UUᴴ - I)U/2, squares the loss.
-        """
-        directions = self.directions
-        count = directions.shape[1]
-        limit = RENEWAL_LIMIT * max(count, LEAST_DIMENSION) * unit_roundoff(directions.dtype)
-        for _ in range(MOST_RENEWALS):
-            loss = directions @ directions.conj().T
-            if not self.held or kernels.subtract_identity(loss) <= limit:
-                break
-            loss *= 0.5
-            directions -= loss @ directions
-            self.renewals += 1
 
     def _forget_the_vanished(self) -> None:
         """Drop every direction once silence has brought them below the smallest number."""
@@ -477,12 +431,3 @@ class Subspace:
         self.stack[: self.held] = directions
         self.singular, self.mean = singular, mean
         self.weight, self.weight_squares, self.outside, self.power = sums.tolist()
-
-
-def _times_power(values: NDArray[Any], exponent: int) -> NDArray[Any]:
-    """Return values times 2**exponent, exactly where they stay in range."""
-    if exponent == 0:
-        return values
-    real = np.ldexp(values.view(np.finfo(values.dtype).dtype), exponent)
-    out: NDArray[Any] = real.view(values.dtype)
-    return out

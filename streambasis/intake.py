@@ -9,11 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.decisions import Scores
-from streambasis.errors import SnapshotError
+from streambasis.errors import NumericalError, SnapshotError
 from streambasis.folding import Subspace
 from streambasis.gaps import Gaps
 from streambasis.inner import Inner
 from streambasis.kernels import principal as kernels
+from streambasis.measuring import Block, times_power
 from streambasis.principal_settings import RULES, Settings
 from streambasis.state import State, owned
 
@@ -115,12 +116,12 @@ class Intake:
             out.rank[rows] = self.rank
             if gaps is not None and gaps[rows].any():
                 filled, known = self._fill_gaps(piece, gaps[rows], out, rows)
-                piece, coordinates = filled[known], None
+                piece, measured = filled[known], None
             else:
-                coordinates = self._score(piece, out, rows)
+                measured = self._score(piece, out, rows)
             if fold:
                 self.header[kernels.COUNT] += rows.stop - rows.start
-                self._append(piece, coordinates)
+                self._append(piece, measured)
             start = rows.stop
         return out
 
@@ -134,11 +135,11 @@ class Intake:
             self._append(piece, None)
             start += len(piece)
 
-    def _append(self, piece: NDArray[Any], coordinates: NDArray[Any] | None) -> None:
+    def _append(self, piece: NDArray[Any], measured: Block | None) -> None:
         """Put rows into the block, which has room for them, and fold it when it is full."""
         due = int(self.header[kernels.DUE])
         if len(piece) == due:
-            self.fold(piece, coordinates)
+            self.fold(piece, measured)
             return
         fill = int(self.header[kernels.FILL])
         self.block[fill : fill + len(piece)] = piece
@@ -148,13 +149,16 @@ class Intake:
 
     def _score(
         self, piece: NDArray[Any], out: Scores, rows: slice | NDArray[np.int64]
-    ) -> NDArray[Any] | None:
-        """Score complete rows; return their coordinates where the fold may use them again."""
+    ) -> Block | None:
+        """Score complete rows; return them as measured where the fold may use that again."""
         core = self.core
-        deviations = piece - core.mean if core.centred else piece
-        squares = np.empty(len(piece))
-        status = kernels.row_squares(deviations, *core.safe, squares)
-        if status == kernels.UNUSUAL or core.exponent != 0:
+        if core.exponent == 0:
+            block = core.measure(piece)
+        else:
+            with np.errstate(over="ignore", under="ignore"):
+                # samples far from the unit leave the range here, and are then not in reach
+                block = core.measure(times_power(piece, -core.exponent))
+        if block is None:
             scored = [
                 kernels.score_sample(
                     row, core.mean, core.directions, self.spreads, self.header, *self.work
@@ -164,16 +168,17 @@ class Intake:
             norms, residuals, spes, t2s, _ = np.array(scored).T
             _write(out, rows, norms, residuals, spes, t2s)
             return None
-        norms = np.sqrt(squares)
-        coordinates, rest = core.split(deviations)
-        if len(rest):
-            kernels.row_squares(rest, 0.0, np.inf, squares)
-        else:
-            squares[:] = 0.0
+        norms = np.sqrt(block.squares)
         residuals, spes, t2s = np.empty((3, len(piece)))
-        kernels.score_rows(coordinates, self.spreads, self.rank, squares, residuals, spes, t2s)
+        kernels.score_rows(
+            block.coordinates, self.spreads, self.rank, block.outside, residuals, spes, t2s
+        )
+        if core.exponent:
+            with np.errstate(over="ignore", under="ignore"):
+                norms, residuals = (np.ldexp(field, core.exponent) for field in (norms, residuals))
+                spes = np.ldexp(spes, 2 * core.exponent)
         _write(out, rows, norms, residuals, spes, t2s)
-        return coordinates
+        return block
 
     def _fill_gaps(
         self, piece: NDArray[Any], gaps: NDArray[np.bool_], out: Scores, rows: slice
@@ -212,17 +217,23 @@ class Intake:
             groups.setdefault(row.tobytes(), []).append(i)
         return [np.array(group) for group in groups.values()]
 
-    def fold(
-        self, rows: NDArray[Any] | None = None, coordinates: NDArray[Any] | None = None
-    ) -> None:
+    def fold(self, rows: NDArray[Any] | None = None, measured: Block | None = None) -> None:
         """Fold rows, or what the block holds, and settle the rank."""
         if rows is None:
             rows = self.block[: int(self.header[kernels.FILL])]
-        if len(rows):
-            self.core.fold(rows, coordinates)
-            self.header[kernels.FOLDED] += len(rows)
-            self.header[kernels.FILL] = 0
-            self.settle()
+        if not len(rows):
+            return
+        # whatever happens: a block that cannot be folded must not be in the way of the next
+        self.header[kernels.FILL] = 0
+        try:
+            self.core.fold(rows, measured, self.rank)
+        except NumericalError as error:
+            raise NumericalError(
+                f"the {len(rows)} samples up to number {self.count - 1} are left out of the "
+                f"basis, which goes on without them: {error}"
+            ) from error
+        self.header[kernels.FOLDED] += len(rows)
+        self.settle()
 
     def absorb(self, other: Intake) -> None:
         """Take over what another has seen, as if its samples had followed."""
@@ -261,6 +272,7 @@ class Intake:
             "rank": settings.rule,
             "max_rank": settings.most,
             "forget": settings.forget,
+            "limit": settings.limit,
             "block": settings.block,
             "growing": settings.growing,
             "centre": self.core.centred,

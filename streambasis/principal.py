@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import threading
 from collections.abc import Iterable
-from typing import Any, Final, Self
+from typing import Any, Self
 
 import numpy as np
 from numpy.typing import ArrayLike, DTypeLike, NDArray
@@ -42,7 +42,8 @@ class PrincipalBasis(Saveable):
     block : int, optional
         Samples folded in at a time. Every sample is scored at once; the basis moves when a block
         is full and at :meth:`flush`. By default blocks start at 16 samples and double with the
-        samples folded, up to what costs least per sample or an eighth of the memory 1/(1 - forget).
+        samples folded, up to 1,024, an eighth of the memory 1/(1 - forget), or a buffer of two
+        million numbers.
     centre : bool
         Whether a running mean is kept, with the same forgetting, and everything is about it.
     dtype : str or dtype
@@ -94,14 +95,25 @@ class PrincipalBasis(Saveable):
         dtype: DTypeLike = "float64",
         inner: ArrayLike | None = None,
     ) -> None:
-        self._channels = Channels(channels)
-        count = self._channels.count
-        self.dtype: Final = checked_dtype(dtype)
-        settings = Settings.checked(count, rank, max_rank, forget, half_life, block)
-        self._inner = Inner(inner, count, self.dtype)
-        self._core = Intake(self._inner, count, settings, bool(centre), self.dtype)
+        named = Channels(channels)
+        kind = checked_dtype(dtype)
+        settings = Settings.checked(named.count, rank, max_rank, forget, half_life, block)
+        self._set_up(named, settings, bool(centre), kind, inner)
+
+    def _set_up(
+        self,
+        channels: Channels,
+        settings: Settings,
+        centre: bool,
+        dtype: np.dtype[Any],
+        inner: ArrayLike | None,
+    ) -> None:
+        self._channels = channels
+        self.dtype = dtype
+        self._inner = Inner(inner, channels.count, dtype)
+        self._core = Intake(self._inner, channels.count, settings, centre, dtype)
         self._lock = threading.Lock()
-        self._shape = (count,)
+        self._shape = (channels.count,)
 
     @property
     def channels(self) -> tuple[str, ...]:
@@ -238,7 +250,7 @@ class PrincipalBasis(Saveable):
         """Take a batch without asking for its scores."""
         with self._lock:
             checked = self._checked(samples)
-            if kernels.has_gap(checked):
+            if _has_gap(checked):
                 self._take(checked, fold=True)
             else:
                 self._core.take_unscored(self._entered(checked))
@@ -258,6 +270,8 @@ class PrincipalBasis(Saveable):
 
     def _entered(self, samples: NDArray[Any]) -> NDArray[Any]:
         entered = self._inner.enter(samples)
+        if _squares_are_finite(entered):
+            return entered
         if self._inner.kind != "euclidean" and not np.isfinite(entered).all():
             raise SampleError(
                 f"sample {self.count} or later: a value in the inner product is beyond "
@@ -273,7 +287,7 @@ class PrincipalBasis(Saveable):
 
     def _take(self, samples: NDArray[Any], *, fold: bool) -> Scores:
         """Score checked samples, (m, n), and take them too where ``fold`` says so."""
-        if kernels.has_gap(samples):
+        if _has_gap(samples):
             gaps = np.isnan(samples)
             return self._core.take(self._entered(np.where(gaps, 0, samples)), gaps, fold=fold)
         return self._core.take(self._entered(samples), None, fold=fold)
@@ -326,7 +340,8 @@ class PrincipalBasis(Saveable):
         Audit
             ``orthogonality`` over all directions held; ``coverage`` NaN (a noisy feed is not
             covered); ``condition`` largest over least standard deviation along the directions
-            reported; ``renewals``, ``rank`` and ``samples``.
+            reported; ``renewals`` (beyond the step that ends every fold where all directions are
+            held), ``rank`` and ``samples``.
         """
         with self._lock:
             spreads = self._core.spreads
@@ -357,12 +372,25 @@ class PrincipalBasis(Saveable):
         """Build a basis that goes on where the state was taken."""
         facts = state.facts
         names = facts["channels"]
-        given = ("rank", "max_rank", "forget", "centre", "dtype")
-        basis = cls(
-            names if facts["named"] else len(names),
-            block=None if facts["growing"] else facts["block"],
-            inner=inner_of(state),
-            **{name: facts[name] for name in given},
+        channels = Channels(names if facts["named"] else len(names))
+        settings = Settings.kept(facts, channels.count)
+        basis = cls.__new__(cls)
+        basis._set_up(
+            channels,
+            settings,
+            bool(facts["centre"]),
+            checked_dtype(facts["dtype"]),
+            inner_of(state),
         )
         basis._core.set_state(state)
         return basis
+
+
+def _squares_are_finite(samples: NDArray[Any]) -> bool:
+    """Say whether the squares add up to a finite number: no value is missing or near overflow."""
+    flat = samples.reshape(-1)
+    return math.isfinite(np.vdot(flat, flat).real)
+
+
+def _has_gap(samples: NDArray[Any]) -> bool:
+    return not _squares_are_finite(samples) and bool(kernels.has_gap(samples))

@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Self
 
 import numpy as np
 
-from streambasis.errors import SettingError
+from streambasis.errors import SettingError, SnapshotError
 from streambasis.ranks import rank_by_mdl, rank_by_noise
 
 RULES = {"noise": rank_by_noise, "mdl": rank_by_mdl}
@@ -19,8 +19,11 @@ DEFAULT_MAX_RANK = 64
 LEAST_RESERVE = 8
 """Directions held beyond those reported, at least: where the next ones grow until they count. With
 8 the angle to the true subspace was measured within 1 % of that of the batch SVD."""
-LEAST_BLOCK, LARGEST_BLOCK = 16, 96
-WHOLE_BLOCK = 256
+LEAST_BLOCK, LARGEST_BLOCK = 64, 1024
+LARGEST_BUFFER = 1 << 21
+"""Numbers in the buffer of a block: about as much as the directions and the workspace of a fold
+take with many channels. What a fold costs beside its products with the block is the same for
+blocks of any size."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,8 +62,20 @@ class Settings:
         factor = _checked_forgetting(forget, half_life)
         limit = most + max(LEAST_RESERVE, most // 4)
         limit = count if count <= WHOLE else min(count, limit)
-        size = _default_block(count, limit, factor) if block is None else _checked_block(block)
+        size = _default_block(count, factor) if block is None else _checked_block(block)
         return cls(rule, most, limit, factor, size, block is None)
+
+    @classmethod
+    def kept(cls, facts: dict[str, Any], count: int) -> Self:
+        """Return the settings that a state names, whatever the defaults are today."""
+        given = cls.checked(
+            count, facts["rank"], facts["max_rank"], facts["forget"], None, facts["block"]
+        )
+        # states were once written without it, under the rule that still holds
+        limit = facts.get("limit", given.limit)
+        if not isinstance(limit, int) or not given.most <= limit <= count:
+            raise SnapshotError(f"limit={limit!r}: from max_rank={given.most} to {count} channels")
+        return replace(given, limit=limit, growing=bool(facts["growing"]))
 
 
 def _checked_rank(rank: Any, max_rank: Any, count: int) -> tuple[str | int, int]:
@@ -99,14 +114,9 @@ def _checked_block(block: Any) -> int:
     return int(block)
 
 
-def _default_block(count: int, limit: int, forget: float) -> int:
+def _default_block(count: int, forget: float) -> int:
     """Return the block that costs least per sample, as far as the memory allows."""
-    if limit == count:
-        # the core stays as it is however many samples are folded
-        block = min(max(8 * count, LEAST_BLOCK), WHOLE_BLOCK)
-    else:
-        # the core grows with the block: it costs least per sample near the directions held
-        block = min(max(limit, LEAST_BLOCK), LARGEST_BLOCK)
+    block = max(LEAST_BLOCK, min(LARGEST_BLOCK, LARGEST_BUFFER // count))
     if forget < 1.0:
         # a basis that lags by more than an eighth of its memory forgets out of step
         block = min(block, max(1, int(0.125 / (1.0 - forget))))

@@ -7,6 +7,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis import PrincipalBasis
+
 
 def normal(rng: np.random.Generator, shape: tuple[int, ...], dtype: str) -> NDArray[Any]:
     """Return standard normal values of a dtype; complex ones have variance 1 in all."""
@@ -70,3 +72,42 @@ def row_squares(rows: NDArray[Any], least: float, most: float) -> tuple[NDArray[
     wide = rows.astype(np.complex128 if rows.dtype.kind == "c" else np.float64)
     squares = (np.abs(wide) ** 2).sum(axis=1)
     return squares, bool((((squares > least) & (squares < most)) | ~rows.any(axis=1)).all())
+
+
+def nystrom(
+    rows: NDArray[Any], singular: NDArray[np.float64], samples: NDArray[Any]
+) -> tuple[NDArray[np.float64], NDArray[Any], float]:
+    """Return energies and directions of the Nyström approximation of a scatter, and its trace.
+
+    The scatter is that of ``samples`` and of diag(singular) times the first ``rows``; it is
+    approximated from its products with all the rows.
+    """
+    wide = rows.astype(samples.dtype)
+    old = singular[:, None] * wide[: len(singular)]
+    scatter = samples.conj().T @ samples + old.conj().T @ old
+    across = wide @ scatter
+    approximate = across.conj().T @ np.linalg.solve(across @ wide.conj().T, across)
+    energies, columns = np.linalg.eigh(approximate)
+    leading = slice(None, -len(rows) - 1, -1)
+    return energies[leading], columns.conj().T[leading], float(np.trace(scatter).real)
+
+
+def outside_squares(
+    coordinates: NDArray[Any], squares: NDArray[np.float64], clear: float
+) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+    """Return squares less those of the coordinates, and the samples of which little is left."""
+    wide = coordinates.astype(np.complex128)
+    left = squares - (np.abs(wide) ** 2).sum(axis=1)
+    return left, np.flatnonzero(~(left > clear * squares))
+
+
+def same(a: PrincipalBasis, b: PrincipalBasis) -> bool:
+    """Say whether two bases are equal bit for bit in everything they go on from."""
+
+    def flat(state: Any) -> Any:
+        yield state.kind, state.facts
+        yield from ((name, array.tobytes()) for name, array in sorted(state.arrays.items()))
+        for name in sorted(state.parts):
+            yield from flat(state.parts[name])
+
+    return list(flat(a.to_state())) == list(flat(b.to_state()))

@@ -87,6 +87,21 @@ def test_row_squares_tell_rows_out_of_range(dtype: str) -> None:
 
 
 @pytest.mark.parametrize("dtype", DTYPES)
+def test_squares_outside_tell_where_they_cancel(dtype: str) -> None:
+    """What coordinates leave of squares is the twin's, and samples with little left are listed."""
+    rng = np.random.default_rng(7)
+    coordinates = normal(rng, (9, 5), dtype)
+    squares = (np.abs(coordinates.astype(np.complex128)) ** 2).sum(axis=1)
+    squares *= np.array([1.0, 1.001, 1.1, 2, 9, 1, 1.01, 5, 1])
+    outside, close = np.empty(9), np.full(9, -1)
+    found = kernels.outside_squares(coordinates, squares, 0.02, outside, close)
+    left, listed = reference.outside_squares(coordinates, squares, 0.02)
+    np.testing.assert_allclose(outside, left, atol=10 * ROUNDING[dtype])
+    np.testing.assert_array_equal(close[:found], listed)
+    assert found == 5
+
+
+@pytest.mark.parametrize("dtype", DTYPES)
 def test_rows_are_scored_from_all_coordinates(dtype: str) -> None:
     """What lies along directions that are held but not reported counts as residual."""
     rng = np.random.default_rng(3)

@@ -15,6 +15,8 @@ COUNT, RANK, FILL, DUE, FOLDED, EXPONENT, CENTRED = range(7)
 HEADER = 7
 # whether the squares of rows stay in range
 USUAL, UNUSUAL = 0, 1
+ORTHOGONAL = 1e-15
+"""Cosine of rows that count as orthogonal, a few roundings."""
 
 
 @kernel(reassociate=True)
@@ -122,6 +124,26 @@ def score_rows(coordinates, spreads, rank, outside, residuals, spes, t2s):
         t2s[i] = t2
 
 
+@kernel(reassociate=True)
+def outside_squares(coordinates, squares, clear, outside, close):
+    """Write to ``outside`` what the squares of coordinates leave of the squares of samples.
+
+    Returns how many samples keep less than the part ``clear`` of theirs, so that the difference
+    is not sharp; their numbers are in ``close``.
+    """
+    found = 0
+    for i in range(coordinates.shape[0]):
+        row = coordinates[i]
+        total = 0.0
+        for j in range(row.shape[0]):
+            total += row[j].real * row[j].real + row[j].imag * row[j].imag
+        outside[i] = squares[i] - total
+        if not outside[i] > clear * squares[i]:
+            close[found] = i
+            found += 1
+    return found
+
+
 @kernel()
 def orthonormal_rows(rows, floors, stack, held, coordinates, factor, residual, coefficients):
     """Orthonormalize rows against the first ``held`` rows of ``stack`` and one another.
@@ -146,6 +168,54 @@ def orthonormal_rows(rows, floors, stack, held, coordinates, factor, residual, c
             factor[i, added] = left
             added += 1
     return added
+
+
+@kernel()
+def rotate_orthogonal(rows, also, sweeps):
+    """Rotate rows in pairs until they are orthogonal to each other, and ``also`` likewise.
+
+    Returns USUAL, or UNUSUAL where that many sweeps over all pairs do not suffice, as where a
+    value is not finite. A row that is rounding beside the whole is orthogonal to all others.
+    """
+    total = 0.0
+    for p in range(rows.shape[0]):
+        for j in range(rows.shape[1]):
+            x = rows[p, j]
+            total += x.real * x.real + x.imag * x.imag
+    if not total < math.inf:
+        return UNUSUAL
+    least = ORTHOGONAL * ORTHOGONAL * total
+    for _ in range(sweeps):
+        status = USUAL
+        for p in range(rows.shape[0] - 1):
+            for q in range(p + 1, rows.shape[0]):
+                a, b, inner = 0.0, 0.0, rows[p, 0] * 0
+                for j in range(rows.shape[1]):
+                    x, y = rows[p, j], rows[q, j]
+                    a += x.real * x.real + x.imag * x.imag
+                    b += y.real * y.real + y.imag * y.imag
+                    inner += x * y.conjugate()
+                size = abs(inner)
+                if min(a, b) <= least or size <= ORTHOGONAL * math.sqrt(a) * math.sqrt(b):
+                    continue
+                status = UNUSUAL
+                turn = 0.5 * (b - a) / size
+                tangent = math.copysign(1.0, turn) / (abs(turn) + math.sqrt(1.0 + turn * turn))
+                cosine = 1.0 / math.sqrt(1.0 + tangent * tangent)
+                _turn_pair(rows, p, q, cosine, cosine * tangent, inner / size)
+                _turn_pair(also, p, q, cosine, cosine * tangent, inner / size)
+        if status == USUAL:
+            return USUAL
+    return UNUSUAL
+
+
+@kernel()
+def _turn_pair(rows, p, q, cosine, sine, phase):
+    """Turn two rows against each other, the second in phase with the first."""
+    for j in range(rows.shape[1]):
+        x, y = rows[p, j], phase * rows[q, j]
+        rows[p, j] = cosine * x - sine * y
+        rows[q, j] = sine * x + cosine * y
 
 
 @kernel()
