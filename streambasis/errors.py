@@ -79,3 +79,7 @@ class RecordError(StreambasisError, ValueError):
 
 class FleetError(StreambasisError, RuntimeError):
     """A fleet that cannot go on: it is closed, or stopped in the middle of a batch."""
+
+
+class EngineError(StreambasisError, RuntimeError):
+    """An engine such as Apache Spark that lacks what it needs; the message says what to install."""
