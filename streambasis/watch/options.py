@@ -117,7 +117,8 @@ OPTIONS = {
     ),
     "silent_after": Option(
         values.duration,
-        "/healthz is unhealthy when no sample has come for TIME such as 30s; 0 waits for ever.",
+        "Without a sample for TIME such as 30s the feed counts as silent: a line says so, and "
+        "/healthz is unhealthy. 0 waits for ever.",
         "TIME",
         typed=values.number,
         live=True,

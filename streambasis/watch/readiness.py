@@ -17,6 +17,7 @@ from typing import Self
 from streambasis.watch.vitals import Vitals
 
 SOCKET, WATCHDOG, WATCHDOG_PROCESS = "NOTIFY_SOCKET", "WATCHDOG_USEC", "WATCHDOG_PID"
+_READY = "READY=1"
 _SEND_SECONDS = 1.0
 
 
@@ -52,14 +53,9 @@ class Readiness:
         self._period = _watchdog_seconds(environment) if self._address else 0.0
         self._thread: threading.Thread | None = None
 
-    @property
-    def wanted(self) -> bool:
-        """Whether somebody wants to be told."""
-        return bool(self._address)
-
     def ready(self) -> None:
         """Say, once, that the daemon has started."""
-        self._once("READY=1")
+        self._once(_READY)
 
     def stopping(self) -> None:
         """Say, once, that the daemon has begun to end."""
@@ -67,11 +63,13 @@ class Readiness:
 
     def reloading(self) -> None:
         """Say that the config is being read again, which :meth:`reloaded` ends."""
-        self._send(f"RELOADING=1\nMONOTONIC_USEC={time.monotonic_ns() // 1000}")
+        if _READY in self._told:
+            self._send(f"RELOADING=1\nMONOTONIC_USEC={time.monotonic_ns() // 1000}")
 
     def reloaded(self) -> None:
         """Say that the config has been read."""
-        self._send("READY=1")
+        if _READY in self._told:
+            self._send(_READY)
 
     def _once(self, message: str) -> None:
         if message not in self._told:

@@ -226,7 +226,6 @@ class _Service:
                     # it was waiting for the first sample, and nothing was taken yet
                     return None
                 raise
-            self.readiness.ready()
             return self._watch(feed, home, reopen, asked)
 
     def _watch(
@@ -254,6 +253,7 @@ class _Service:
             vitals=self._vitals,
             reopen=reopen,
         )
+        self.readiness.ready()
         with self.terminal:
             return self._run(asked)
 
