@@ -193,8 +193,10 @@ def lock_folder(folder: str | os.PathLike[str], option: str) -> int:
             f"{os.fspath(folder)}: in use by another streambasis (process "
             f"{process or 'unknown'}); stop it, or choose another folder for {option}"
         ) from None
-    os.ftruncate(descriptor, 0)
-    os.pwrite(descriptor, f"{os.getpid()}\n".encode(), 0)
+    name = f"{os.getpid()}\n".encode()
+    # over what is there: a full disk has no room for a file that was emptied first
+    os.pwrite(descriptor, name, 0)
+    os.ftruncate(descriptor, len(name))
     return descriptor
 
 

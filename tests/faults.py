@@ -34,6 +34,8 @@ class Faults:
         Whether all later ones fail as well.
     error : callable
         Makes the exception; a function of nothing.
+    only : str, optional
+        Count and fail nothing but operations of this name.
     """
 
     def __init__(
@@ -43,12 +45,13 @@ class Faults:
         *,
         forever: bool,
         error: Callable[[], BaseException] = lambda: OSError(errno.EIO, "Input/output error"),
+        only: str | None = None,
     ) -> None:
         self.at, self.forever, self.error = at, forever, error
         self.count = 0
         self.met = False
         self.history: list[str] = []
-        for name in OPERATIONS:
+        for name in OPERATIONS if only is None else (only,):
             monkeypatch.setattr(os, name, self._wrapped(name, getattr(os, name)))
 
     def _wrapped(self, name: str, real: Callable[..., Any]) -> Callable[..., Any]:

@@ -16,7 +16,8 @@ from streambasis.feeds import BATCH_ROWS, open_feed
 from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.watch import home as home_module
 from streambasis.watch.home import Home
-from streambasis.watch.loop import Run, Summary
+from streambasis.watch.loop import Run
+from streambasis.watch.reporting import Summary
 from streambasis.watch.terminal import carriers, summary_lines, when
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"

@@ -27,9 +27,9 @@ from streambasis.files import lock_folder, remove_leftovers, replace_file, write
 from streambasis.monitor import NoveltyMonitor
 from streambasis.snapshot import read_state, save
 from streambasis.state import State
+from streambasis.watch.linelog import READABLE, LineLog
 from streambasis.watch.segment import SEGMENT_ROWS, Segment
 
-READABLE = 0o644
 KIND = "Run"
 """What ``state.arrow`` says it holds."""
 
@@ -41,63 +41,6 @@ MOST_MALFORMED = 1 << 24
 came first is kept, the rest is counted."""
 
 _SEGMENT_NAME = re.compile(rf"(\d{{12}})\.(?:{'|'.join(FORMATS)})")
-
-
-class _Log:
-    """A file of lines, of which so much counts as the last commit says."""
-
-    def __init__(self, path: Path, counted: int) -> None:
-        self._path = path
-        self._file = os.open(path, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, READABLE)
-        self.back_to(counted)
-
-    def back_to(self, counted: int) -> None:
-        """Forget everything behind what counts."""
-        if os.fstat(self._file).st_size < counted:
-            self.close()
-            raise HomeError(f"{self._path}: shorter than the run that state.arrow belongs to")
-        os.ftruncate(self._file, counted)
-        self._written = counted
-        self._lines = bytearray()
-
-    @property
-    def size(self) -> int:
-        """Bytes with what waits to be written."""
-        return self._written + len(self._lines)
-
-    @property
-    def waiting(self) -> int:
-        """Bytes that wait to be written."""
-        return len(self._lines)
-
-    def add(self, line: bytes) -> None:
-        """Take a line, to be written with the next commit."""
-        self._lines += line
-
-    def write(self, size: int) -> None:
-        """Write and force to the disk everything up to a size, in the thread that writes."""
-        data = bytes(self._lines[: size - self._written])
-        if data:
-            # all of it again after a failure: the kernel may have dropped what it could not write
-            write_at(self._file, data, self._written)
-            os.fsync(self._file)
-
-    def keep(self, size: int) -> None:
-        """Hear that everything up to a size is part of the run."""
-        del self._lines[: size - self._written]
-        self._written = size
-
-    def close(self) -> None:
-        """Close the file."""
-        os.close(self._file)
-
-
-def write_at(descriptor: int, data: bytes, offset: int) -> None:
-    """Write every byte at a place: one call of the system may take only a part."""
-    rest = memoryview(data)
-    while rest:
-        done = os.pwrite(descriptor, rest, offset)
-        rest, offset = rest[done:], offset + done
 
 
 @dataclass(frozen=True, slots=True)
@@ -183,9 +126,9 @@ class Home:
                 f"{self.path}: holds an earlier run without its state.arrow; choose an empty "
                 "folder for --home"
             )
-        self._events = _Log(names[0], counted[0])
+        self._events = LineLog(names[0], counted[0])
         try:
-            self._malformed = _Log(names[1], counted[1])
+            self._malformed = LineLog(names[1], counted[1])
         except BaseException:
             self._events.close()
             raise

@@ -5,7 +5,7 @@ from __future__ import annotations
 import time
 from collections.abc import Mapping
 from contextlib import suppress
-from typing import Any, Protocol
+from typing import Any
 
 import pyarrow as pa
 
@@ -13,6 +13,7 @@ from streambasis.errors import HomeError
 from streambasis.monitor import NoveltyMonitor
 from streambasis.state import State
 from streambasis.watch.home import Home
+from streambasis.watch.reporting import Reporter
 from streambasis.watch.vitals import Vitals
 
 COMMIT_SAMPLES = 1 << 16
@@ -32,13 +33,6 @@ Beyond that no sample is taken until there is room: nothing is lost, and a live 
 rule for being full."""
 
 
-class Warned(Protocol):
-    """Whoever wants to hear what goes wrong."""
-
-    def warned(self, warning: str) -> None:
-        """Hear what somebody must know, though it does not end the run."""
-
-
 class Keeping:
     """Commits of a run: one under way at a time, tried again while the disk takes none.
 
@@ -48,7 +42,7 @@ class Keeping:
         Where to.
     vitals : Vitals
         Its readings of commits are kept up to date.
-    reporter : Warned
+    reporter : Reporter
         Told at most once per minute that the disk takes nothing, and that it does again.
     every : (int, float)
         Samples, and seconds, between two commits.
@@ -60,7 +54,7 @@ class Keeping:
     """
 
     def __init__(
-        self, home: Home, vitals: Vitals, reporter: Warned, every: tuple[int, float]
+        self, home: Home, vitals: Vitals, reporter: Reporter, every: tuple[int, float]
     ) -> None:
         self._home, self._vitals, self._reporter, self.every = home, vitals, reporter, every
         self._count = 0 if home.state is None else home.state.parts["core"].facts["count"]

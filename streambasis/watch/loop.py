@@ -5,8 +5,7 @@ from __future__ import annotations
 import threading
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
-from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -22,6 +21,7 @@ from streambasis.times import NANOSECONDS
 from streambasis.watch.home import Home
 from streambasis.watch.keeping import COMMIT_SAMPLES, COMMIT_SECONDS, Keeping
 from streambasis.watch.progress import Progress
+from streambasis.watch.reporting import Reporter, Summary
 from streambasis.watch.segment import Segment
 from streambasis.watch.vitals import Vitals
 
@@ -34,66 +34,13 @@ costs many times as much."""
 FIRST_SHOWN = 10
 """Malformed rows of a run that are shown; the others are counted."""
 
+RECENT = 366 * 86_400.0
+"""Times that are numbers of seconds count from the Unix epoch if that makes them so recent."""
+
 PAUSE = 0.2
 """Seconds between two looks at a disk that is waited for."""
 
 _COUNTERS = ("opened", "repeats", "adopted", "first_time", "last_time", "novel", "malformed")
-
-
-class Reporter(Protocol):
-    """Whoever wants to hear how a run goes."""
-
-    def opened(self, event: Event) -> None:
-        """Hear that an event has opened."""
-
-    def closed(self, event: Event) -> None:
-        """Hear that an event has closed."""
-
-    def adopted(self, event: Event) -> None:
-        """Hear that an event lasted so long that it counts as known behaviour from now on."""
-
-    def advance(self, samples: int) -> None:
-        """Hear how many samples have been read."""
-
-    def warned(self, warning: str) -> None:
-        """Hear what somebody must know, though it does not end the run."""
-
-
-@dataclass(frozen=True, slots=True)
-class Summary:
-    """What a run came to.
-
-    Attributes
-    ----------
-    samples : int
-        Samples read.
-    first_time, last_time : int or None
-        Their first and last time in nanoseconds, where the feed has times.
-    rank : int
-        Directions of the basis at the end.
-    noise : float
-        Variance per residual dimension, in units of each channel's own noise.
-    drift : float
-        Largest principal angle between the baseline's subspace and today's, in radians.
-    events, repeats, adopted : int
-        Events, those that repeat an earlier one, and those adopted as known behaviour.
-    seconds : float
-        Time taken.
-    orthogonality : float
-        Orthogonality defect of the basis, |VVᴴ - I|₁ / (n·u); the contract is below 3.
-    """
-
-    samples: int
-    first_time: int | None
-    last_time: int | None
-    rank: int
-    noise: float
-    drift: float
-    events: int
-    repeats: int
-    adopted: int
-    seconds: float
-    orthogonality: float
 
 
 class Run:
@@ -225,6 +172,7 @@ class Run:
                 for batch in self._arrivals():
                     if batch is not None:
                         self._take(batch)
+                    self._look()
                     self._keep(asked)
                     self._vitals.busy_since = None
                     if asked.is_set():
@@ -407,7 +355,6 @@ class Run:
         vitals.taken_at = time.time()
         vitals.batches += 1
         if len(batch):
-            self._read_vitals()
             self._progress.take(self._monitor)
             self._reporter.advance(self._monitor.count)
 
@@ -438,15 +385,17 @@ class Run:
             if self._open or (columns.event[rows] != NO_EVENT).any():
                 self._tell()
 
-    def _read_vitals(self) -> None:
+    def _look(self) -> None:
         """Take the readings that cost next to nothing."""
         vitals, counts = self._vitals, self._feed.counts
         self._count_up()
         vitals.rank, vitals.noise = self._monitor.rank, self._monitor.noise
         vitals.queue, vitals.dropped = counts.get("queued", 0), counts.get("dropped", 0)
         vitals.duplicates = counts.get("duplicates", 0)
-        if self._last_time is not None and self._feed.columns.unit is None:
-            vitals.sample_time = self._last_time / NANOSECONDS
+        if self._last_time is not None and vitals.taken_at is not None:
+            moment = self._last_time / NANOSECONDS
+            if self._feed.columns.unit is None or abs(moment - vitals.taken_at) < RECENT:
+                vitals.sample_time = moment
 
     def _open_events(self) -> list[Event]:
         return [event for event in self._monitor.events if event.open] if self._open else []

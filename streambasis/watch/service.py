@@ -19,9 +19,10 @@ from streambasis.monitor import NoveltyMonitor
 from streambasis.warming import warm_up
 from streambasis.watch.health import Health, Listener
 from streambasis.watch.home import Home
-from streambasis.watch.loop import Run, Summary
+from streambasis.watch.loop import Run
 from streambasis.watch.options import spelled
 from streambasis.watch.readiness import Readiness
+from streambasis.watch.reporting import Summary
 from streambasis.watch.settings import STANDARD_INPUT, Settings, changed
 from streambasis.watch.stopping import Signals
 from streambasis.watch.terminal import Terminal

@@ -18,7 +18,7 @@ from rich.progress import (
 
 from streambasis.monitor import Event
 from streambasis.times import NANOSECONDS
-from streambasis.watch.loop import Summary
+from streambasis.watch.reporting import Summary
 
 MOST_NAMES = 4
 """Channels shown per event; the rest are counted."""

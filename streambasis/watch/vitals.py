@@ -28,7 +28,8 @@ class Vitals:
     renewals, audits, failed_audits : int
         Renewals of the basis, audits made, and audits that failed.
     sample_time : float or None
-        Time of the newest sample in seconds from the Unix epoch, where the feed has time stamps.
+        Time of the newest sample in seconds from the Unix epoch, where the feed has time stamps,
+        or counts seconds and these make it less than a year old.
     taken_at : float or None
         Clock, in seconds from the Unix epoch, when the newest batch was taken.
     committed_at : float or None
