@@ -29,7 +29,6 @@ ROUNDINGS = 16
 """Difference allowed between two orders of summation, in epsilons of the largest norm."""
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 @pytest.mark.parametrize("power", [-1060, -400, -140, -126, -3, 0, 1, 100, 127, 1000, 1023])
 def test_scaling_is_exact_and_brings_the_largest_part_below_one(dtype: str, power: int) -> None:
@@ -51,7 +50,6 @@ def test_scaling_is_exact_and_brings_the_largest_part_below_one(dtype: str, powe
     np.testing.assert_array_equal(np.ldexp(out.view(out.real.dtype), exponent).view(kind), sample)
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 @pytest.mark.parametrize("value", [np.nan, np.inf, -np.inf])
 def test_scaling_finds_the_first_value_that_is_not_finite(dtype: str, value: float) -> None:
@@ -62,7 +60,6 @@ def test_scaling_finds_the_first_value_that_is_not_finite(dtype: str, value: flo
         assert growth.scaled_copy(sample, np.empty_like(sample))[0] == place
 
 
-@pytest.mark.kernels
 def test_zero_and_the_least_subnormal_number() -> None:
     """Zero has exponent 0; the least subnormal number is scaled to one half."""
     out = np.empty(3)
@@ -73,7 +70,6 @@ def test_zero_and_the_least_subnormal_number() -> None:
     assert growth.scaled_copy(np.array([1e-45], np.float32), single) == (-1, -148)
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 def test_norms_are_summed_in_double_precision(dtype: str) -> None:
     """The norm of a long vector is right to double precision whatever its dtype."""
@@ -82,7 +78,6 @@ def test_norms_are_summed_in_double_precision(dtype: str) -> None:
     assert scaling.norm(vector) == pytest.approx(np.linalg.norm(wide), rel=1e-13)
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 @pytest.mark.parametrize("rank", [0, 1, 2, 3, 4, 5, 7, 8, 13])
 @pytest.mark.parametrize("backward", [False, True])
@@ -143,7 +138,6 @@ def test_a_dependent_sample_leaves_less_than_a_third_of_the_rounding_floor() -> 
             assert worst <= share * floor, (dtype, rank, count, worst / floor)
 
 
-@pytest.mark.kernels
 def test_a_residual_near_its_tolerance_gets_a_second_pass() -> None:
     """Clear rejections and clear growths cost one pass, a residual within rounding of it two."""
     rng = np.random.default_rng(4)
@@ -164,7 +158,6 @@ def test_a_residual_near_its_tolerance_gets_a_second_pass() -> None:
     assert growth.orthogonalize(held, 4, beside.copy(), np.zeros(4), 0.5, growth.CRITERION)[1] == 1
 
 
-@pytest.mark.kernels
 def test_the_criterion_divides_by_the_norm_after_projection() -> None:
     """A second pass is made just when sum |c| exceeds 0.99 times what is left (Giraud & Langou)."""
     held = np.eye(1, 8)
@@ -176,7 +169,6 @@ def test_the_criterion_divides_by_the_norm_after_projection() -> None:
         assert (left, passes, coefficients[0]) == (1.0, expected, ratio)
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 def test_measures_of_a_block_are_those_of_its_rows(dtype: str) -> None:
     """Rests, square sums and absolute coefficients agree with NumPy."""
@@ -195,7 +187,6 @@ def test_measures_of_a_block_are_those_of_its_rows(dtype: str) -> None:
         np.testing.assert_allclose(measures[row], values, rtol=1e-5 if "32" in dtype else 1e-6)
 
 
-@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DTYPES)
 def test_rows_are_solved_by_the_lower_factor(dtype: str) -> None:
     """Each row y of the result satisfies y L = c."""
