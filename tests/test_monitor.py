@@ -156,6 +156,19 @@ def test_change_that_stays_is_one_event_and_silent_once_adopted() -> None:
     assert abs(amounts[0]) < 5.0 < abs(amounts[1])
 
 
+@pytest.mark.parametrize("growth", [1.6, 2.0, 4.0])
+def test_noise_that_grows_everywhere_is_one_event(growth: float) -> None:
+    """A regime in which all channels are noisier, along no direction of its own, is one event."""
+    rng = np.random.default_rng(21)
+    feed = plant(20, 5000)
+    feed[2000:4000] += np.sqrt(growth**2 - 1.0) * rng.normal(size=(2000, 12)) * units(20)
+    monitor, _ = run(feed, [5000])
+    assert len(monitor.events) == 1
+    event = monitor.events[0]
+    assert 2000 <= event["start"] < 2300
+    assert 3900 < event["end"] < 4100
+
+
 def test_fault_on_top_of_a_lasting_change_is_its_own_event() -> None:
     """While one event stands, another fault is found, and a repetition of an earlier one known."""
     feed = with_faults()

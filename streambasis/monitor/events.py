@@ -22,6 +22,11 @@ MOST_DIRECTIONS = 4
 STANDING_PART = 0.75
 """An event's directions stand when they explain this part of the samples just collected."""
 
+STANDING_NOISE = 1.5
+"""What an event's directions leave, on the average, may be so many times ordinary noise for them to
+stand: beyond, the noise itself has grown, and whatever directions are taken off more would follow,
+as events of their own."""
+
 KEPT_EVENTS = 4096
 """Most events kept; beyond, the oldest is forgotten."""
 
@@ -176,7 +181,11 @@ class OpenEvent:
         lengths = np.sqrt(np.sum(self.rows[:own] ** 2, axis=1))
         self.directions = self.rows[:own] / lengths[:, None]
         fresh -= (fresh @ self.directions.T) @ self.directions
-        return bool(np.mean(np.sum(fresh * fresh, axis=1) <= limit) >= STANDING_PART)
+        left = np.sum(fresh * fresh, axis=1)
+        ordinary = noise * max(free - own, 1)
+        return bool(
+            np.mean(left <= limit) >= STANDING_PART and left.mean() <= STANDING_NOISE * ordinary
+        )
 
     def to_state(self) -> State:
         """Hand over everything needed to go on."""

@@ -332,8 +332,11 @@ class Judge:
         block, window = self.settings.block, self.settings.window
         fold = self._fold[:block]
         self.model.fold(self._z[:block] if fold.all() else self._z[:block][fold])
+        limit, spe = self.model.limit, self._spe[:block]
+        calm = limit.calm.tell(spe)
+        self.precursors.drop(self._number[:block][~calm])
         chance = self.precursors.release(self.count)
-        self.model.limit.take(np.concatenate([self._spe[:block][self._pool[:block]], chance]))
+        limit.take(np.concatenate([spe[self._pool[:block] & calm], chance]))
         for name in BUFFERED:
             array = getattr(self, f"_{name}")
             array[:window] = array[block : block + window].copy()

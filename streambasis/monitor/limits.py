@@ -10,6 +10,7 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from streambasis.monitor.calm import Calm
 from streambasis.monitor.quantiles import chi2_quantile, f_quantile
 from streambasis.state import State, owned
 
@@ -182,6 +183,8 @@ class SpeLimit:
         The limit.
     mean : float
         Mean of the values so far.
+    calm : Calm
+        Tells which values belong to ordinary stretches.
 
     Notes
     -----
@@ -192,7 +195,8 @@ class SpeLimit:
     and 0.2 at 1e-4 after 200,000 samples; right after 5,000 baseline samples a limit for 1e-4 is
     an extrapolation by a factor of 50 beyond the data, and the rate is uncertain by a factor of 3.
     Values outside events are to be given whether they exceed the limit or not: without the lone
-    exceedances it would creep down.
+    exceedances it would creep down. Those of stretches that are raised all along are not to be
+    given (``calm``): it would creep up.
     """
 
     def __init__(self, method: str, false_alarm: float, memory: float = math.inf) -> None:
@@ -207,6 +211,7 @@ class SpeLimit:
         self.mean = 0.0
         self._squares = 0.0
         self._roots = np.zeros(0)
+        self.calm = Calm(0.0, math.inf, 0.0, math.inf)
 
     def start(self, values: NDArray[np.float64], roots: NDArray[np.float64]) -> None:
         """Begin with values that the basis was not fitted on, in order of time.
@@ -221,6 +226,7 @@ class SpeLimit:
         self._roots = roots
         part = min(0.5, max(TAIL_PART, REACH * self.false_alarm))
         self._threshold = float(np.quantile(values, 1.0 - part))
+        self.calm = Calm.learn(values, self.memory)
         self.take(values)
         self.fit()
 
@@ -299,6 +305,7 @@ class SpeLimit:
             "fitted": self._fitted,
             "mean": self.mean,
             "squares": self._squares,
+            "calm": self.calm.to_facts(),
         }
         return State(
             "SpeLimit", facts, {"excesses": owned(self._excesses), "roots": owned(self._roots)}
@@ -313,6 +320,8 @@ class SpeLimit:
         limit.value, limit.count = facts["value"], facts["count"]
         limit._threshold, limit._fitted = facts["threshold"], facts["fitted"]
         limit.mean, limit._squares = facts["mean"], facts["squares"]
+        # older snapshots took every stretch for calm
+        limit.calm = Calm(*facts.get("calm", [0.0, math.inf, 0.0, math.inf]))
         limit._excesses = state.take("excesses", np.float64, (None,), finite=True)
         limit._roots = state.take("roots", np.float64, (None,), finite=True)
         return limit

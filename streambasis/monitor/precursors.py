@@ -43,6 +43,12 @@ class Precursors:
         before = int(np.searchsorted(self._numbers, start))
         self._keep(0, self._apart(np.append(self._numbers[:before], start)))
 
+    def drop(self, numbers: NDArray[np.int64]) -> None:
+        """Discard what belongs to samples of these numbers."""
+        if len(self._numbers):
+            kept = ~np.isin(self._numbers, numbers)
+            self._numbers, self._values = self._numbers[kept], self._values[kept]
+
     def release(self, now: int) -> NDArray[np.float64]:
         """Return the values that were chance, as seen from sample ``now``, and forget them."""
         free = self._apart(np.append(self._numbers, now))
