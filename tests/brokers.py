@@ -8,6 +8,7 @@ import socket
 import subprocess
 import threading
 import time
+from abc import ABC, abstractmethod
 from collections.abc import Iterable
 from pathlib import Path
 from typing import Any, Self
@@ -37,12 +38,12 @@ def free_port() -> int:
         return int(probe.getsockname()[1])
 
 
-class Held:
+class Held(ABC):
     """Something that ends with the block that holds it, however that ends."""
 
+    @abstractmethod
     def close(self) -> None:
         """End it."""
-        raise NotImplementedError
 
     def __enter__(self) -> Self:
         return self

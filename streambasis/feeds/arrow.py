@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import abstractmethod
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -73,9 +74,9 @@ class _TableFeed(PieceFeed):
                 "start in a new folder"
             )
 
+    @abstractmethod
     def _record_batches(self, skip: int) -> Iterator[tuple[int, pa.RecordBatch | None]]:
         """Yield batches with the number of their first row, those before row ``skip`` left out."""
-        raise NotImplementedError
 
     def pieces(self) -> Iterator[Piece | None]:
         """Yield the samples, Arrow batch by Arrow batch."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+from abc import ABC, abstractmethod
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field, replace
 from types import TracebackType
@@ -221,7 +222,7 @@ class Feed(Protocol):
         """Yield the same batches, and None when nothing has come for a while."""
         ...
 
-    def commit(self, position: Position) -> None:
+    def commit(self, position: Position) -> None:  # noqa: B027, most feeds have nothing to do
         """Hear that everything up to a position is kept and need not be given again."""
         ...
 
@@ -239,7 +240,7 @@ class Feed(Protocol):
     ) -> None: ...
 
 
-class PieceFeed:
+class PieceFeed(ABC):
     """What feeds have in common: a subclass yields pieces, this cuts them into batches.
 
     Parameters
@@ -295,9 +296,9 @@ class PieceFeed:
         """What keeps samples from coming; empty while all is well."""
         return ""
 
+    @abstractmethod
     def pieces(self) -> Iterator[Piece | None]:
         """Yield the samples as they are found; None when nothing has come for a while."""
-        raise NotImplementedError
 
     def batches(self) -> Iterator[Batch]:
         """Yield the samples in order, once, in batches that end at multiples of BATCH_ROWS."""
@@ -335,7 +336,7 @@ class PieceFeed:
         # which then cuts its batches where this one would have
         return not (self.repeatable and self.options.stop.is_set())
 
-    def commit(self, position: Position) -> None:
+    def commit(self, position: Position) -> None:  # noqa: B027, most feeds have nothing to do
         """Hear that everything up to a position is kept."""
 
     def close(self) -> None:
