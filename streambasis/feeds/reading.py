@@ -222,7 +222,7 @@ class Feed(Protocol):
         """Yield the same batches, and None when nothing has come for a while."""
         ...
 
-    def commit(self, position: Position) -> None:  # noqa: B027, most feeds have nothing to do
+    def commit(self, position: Position) -> None:
         """Hear that everything up to a position is kept and need not be given again."""
         ...
 
