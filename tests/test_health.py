@@ -72,6 +72,17 @@ def test_a_connection_that_comes_and_goes_is_said_once_a_minute() -> None:
     assert said[-1] == "feed: connected again"
 
 
+def test_each_session_that_a_broker_forgot_is_said() -> None:
+    """Once for each time: here messages may be lost."""
+    said: list[str] = []
+    vitals = Vitals()
+    listener = Listener(Health(vitals), said.append)
+    for vitals.sessions_lost in (0, 1, 1, 2):
+        listener.look(0.0)
+    assert len(said) == 2
+    assert said[0].startswith("feed: the broker had forgotten our session")
+
+
 def test_silence_is_said_without_anybody_asking_for_health() -> None:
     """The thread looks by itself, and ends with the block."""
     said: list[str] = []

@@ -31,6 +31,8 @@ class Health:
     ----------
     silent_after : float
         May change at any time.
+    vitals : Vitals
+        The readings.
     """
 
     def __init__(
@@ -38,7 +40,7 @@ class Health:
     ) -> None:
         self.silent_after = silent_after
         self.trouble = trouble
-        self._vitals = vitals
+        self.vitals = vitals
         self.opened()
 
     def opened(self) -> None:
@@ -47,7 +49,7 @@ class Health:
 
     def reasons(self) -> list[str]:
         """Return what is wrong, one sentence each; nothing while all is well."""
-        vitals = self._vitals
+        vitals = self.vitals
         silence = self.silence()
         found = [silence] if silence else []
         if vitals.unkept is not None:
@@ -58,7 +60,7 @@ class Health:
 
     def silence(self) -> str:
         """Return a sentence if the feed has been silent for too long, else nothing."""
-        silent = time.time() - (self._vitals.taken_at or self._opened)
+        silent = time.time() - (self.vitals.taken_at or self._opened)
         if not self.silent_after or silent <= self.silent_after:
             return ""
         trouble = self.trouble()
@@ -68,7 +70,7 @@ class Health:
 
 
 class Listener:
-    """Says when a feed falls silent or loses its connection, and when that is over.
+    """Says when a feed falls silent or loses its connection or session, and when that is over.
 
     Parameters
     ----------
@@ -89,6 +91,7 @@ class Listener:
         self._over = threading.Event()
         self._said = {"samples come again": False, "connected again": False}
         self._next = dict.fromkeys(self._said, 0.0)
+        self._sessions_lost = 0
         self._thread = threading.Thread(target=self._listen, name="health", daemon=True)
 
     def look(self, now: float) -> None:
@@ -100,6 +103,13 @@ class Listener:
                 self._said[over] = bool(text)
                 self._next[over] = now + REPEAT_SECONDS
                 self._warned(text or f"feed: {over}")
+        lost = self._health.vitals.sessions_lost
+        if lost > self._sessions_lost:
+            self._sessions_lost = lost
+            self._warned(
+                "feed: the broker had forgotten our session: what was sent while we were away is "
+                "lost"
+            )
 
     def _listen(self) -> None:
         while not self._over.wait(LOOK_SECONDS):

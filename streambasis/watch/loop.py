@@ -392,6 +392,8 @@ class Run:
         vitals.rank, vitals.noise = self._monitor.rank, self._monitor.noise
         vitals.queue, vitals.dropped = counts.get("queued", 0), counts.get("dropped", 0)
         vitals.duplicates = counts.get("duplicates", 0)
+        vitals.connections = counts.get("connections", 0)
+        vitals.sessions_lost = counts.get("sessions_lost", 0)
         if self._last_time is not None and vitals.taken_at is not None:
             moment = self._last_time / NANOSECONDS
             if self._feed.columns.unit is None or abs(moment - vitals.taken_at) < RECENT:

@@ -42,6 +42,8 @@ COUNTERS = (
     _Reading("malformed_rows", "malformed", "Rows or messages that hold no sample."),
     _Reading("dropped", "dropped", "Messages dropped because the machine did not keep up."),
     _Reading("duplicates", "duplicates", "Messages recognised as taken before."),
+    _Reading("connections", "connections", "Connections made to a broker."),
+    _Reading("sessions_lost", "sessions_lost", "Times that the broker had forgotten the session."),
     _Reading("restarts", "restarts", "Earlier processes of this run."),
 )
 GAUGES = (

@@ -243,6 +243,8 @@ class _Service:
             monitor = home.monitor()
         if monitor is None:
             monitor = new_monitor(settings, feed.columns.channels)
+        else:
+            self.terminal.noted(f"{settings.home}: goes on behind {monitor.count:,} samples")
         self.terminal.expect(feed.rows)
         self._run = Run(
             feed,

@@ -38,6 +38,8 @@ class Vitals:
         Size of the last snapshot.
     queue, dropped, duplicates, malformed : int
         Samples that wait, and how many were dropped, recognised as taken before, or unreadable.
+    connections, sessions_lost : int
+        Connections made to a broker, and how often it had forgotten us since the one before.
     restarts : int
         Earlier processes of this run.
     unkept : str or None
@@ -69,6 +71,8 @@ class Vitals:
     dropped: int = 0
     duplicates: int = 0
     malformed: int = 0
+    connections: int = 0
+    sessions_lost: int = 0
     restarts: int = 0
     unkept: str | None = None
     unsound: str | None = None
