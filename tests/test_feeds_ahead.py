@@ -114,11 +114,11 @@ def test_a_followed_file_can_drop_as_well_and_goes_on_from_its_position(tmp_path
 
 def file_of(folder: Path, ending: str) -> Path:
     """Return a file of some samples, with gaps where a row is torn."""
-    numbers = np.arange(60_000.0)
+    numbers = np.arange(120_000.0)
     table = pa.table({"a": numbers, "b": -numbers})
     path = folder / f"feed.{ending}"
     if ending == "csv":
-        lines = [b"%d,%d\n" % (n, -n) if n % 777 else b"torn\n" for n in range(60_000)]
+        lines = [b"%d,%d\n" % (n, -n) if n % 777 else b"torn\n" for n in range(120_000)]
         path.write_bytes(HEADER + b"".join(lines))
     elif ending == "parquet":
         pq.write_table(table, path, row_group_size=3000)

@@ -21,7 +21,7 @@ BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
 blocks, so that the same samples give bit-identical results from every file."""
 
-AHEAD_ROWS = 8 * BATCH_ROWS
+AHEAD_ROWS = 32 * BATCH_ROWS
 """Samples of a file that are read ahead."""
 
 FORMATS = ("csv", "json")
