@@ -335,27 +335,34 @@ def test_what_cannot_be_is_refused_before_spark_begins(session: Any) -> None:
         spark.fit_one(frame, channels=["u"], ranks=2)
     with pytest.raises(SettingError, match="monitors cannot be merged"):
         spark.fit_one(frame, channels=["u", "at"], kind="NoveltyMonitor")
+
+
+def test_the_state_store_is_rocksdb(session: Any) -> None:
+    """The one that Spark begins with gives way; any other is the user's own and is refused."""
+    frame = session.createDataFrame([("a", 1.0, 2.0)], "pump string, at double, u double")
+    given: dict[str, Any] = {"key": "pump", "time": "at", "channels": ["u"]}
     before = session.conf.get(PROVIDER)
-    session.conf.set(PROVIDER, before.replace("RocksDB", "HDFSBacked"))
     try:
-        with pytest.raises(EngineError, match="needs RocksDB"):
-            spark.watch_stream(frame, **fine)
+        session.conf.set(PROVIDER, "org.example.OurStateStoreProvider")
+        with pytest.raises(EngineError, match=r"OurStateStoreProvider.*needs RocksDB"):
+            spark.watch_stream(frame, **given)
+        session.conf.set(PROVIDER, before.replace("RocksDB", "HDFSBacked"))
+        spark.watch_stream(frame, **given)
+        assert session.conf.get(PROVIDER) == before
     finally:
         session.conf.set(PROVIDER, before)
 
 
-def test_the_block_of_the_readme_runs(
-    session: Any, run: Run, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_the_block_of_the_readme_runs(session: Any, tmp_path: Path) -> None:
     """What README shows of Spark does what it says."""
     blocks = re.findall(r"^```py\n(.*?)^```$", (ROOT / "README.md").read_text(), re.M | re.DOTALL)
     (tmp_path / "arrived").mkdir()
-    table = rows(run.feeds, slice(None)).select(["pump", "taken", "flow", "speed"])
+    table = rows(fleet_of(KEYS, SAMPLES), slice(None)).select(["pump", "taken", "flow", "speed"])
     pq.write_table(table.rename_columns(["pump", "time", "flow", "speed"]), tmp_path / "arrived/0")
-    monkeypatch.chdir(tmp_path)
     assert len(blocks) == 1
     shown: dict[str, Any] = {}
-    exec(blocks[0], shown)
+    # where Spark looks for a relative path was settled when its Java began
+    exec(blocks[0].replace('"arrived"', f'"{tmp_path}/arrived"'), shown)
     assert shown["session"] is session
     assert shown["decisions"].isStreaming
     assert shown["events"].isStreaming

@@ -147,6 +147,21 @@ def test_rows_without_a_key_touch_no_state() -> None:
     assert store.value is None
 
 
+def test_nulls_among_whole_numbers_are_no_time() -> None:
+    """Spark can be set to hand over whole numbers in a type of pandas' own that holds nulls."""
+    rows = pd.DataFrame({"at": MICROSECONDS[:4], "values": list(feed(0, 4))})
+    rows["at"] = rows["at"].astype("Int64")
+    operator = Watching(to_bytes(NoveltyMonitor(**CONFIG)), seconds=False)
+    operator.init(Store())
+    (decisions,) = operator.handleInputRows(("=a",), iter([rows]), None)
+    assert decisions["at"].tolist() == MICROSECONDS[:4].tolist()
+    rows.loc[2, "at"] = pd.NA
+    operator.init(Store())
+    decisions, refused = operator.handleInputRows(("=a",), iter([rows]), None)
+    assert decisions["at"].tolist() == MICROSECONDS[[0, 1, 3]].tolist()
+    assert refused["text"].tolist() == [NO_TIME]
+
+
 def test_times_in_seconds_keep_their_last_bits() -> None:
     """Seconds since 1970 become the nanoseconds that the monitor makes of them."""
     at = np.array([1_772_000_000.123456, 1_772_000_000.123457])

@@ -33,7 +33,7 @@ from streambasis.fleet.spark_fitting import (
     merge_all,
     merged,
 )
-from streambasis.fleet.spark_setup import check_environment, check_store, session
+from streambasis.fleet.spark_setup import check_environment, session, use_rocksdb
 from streambasis.fleet.spark_watching import DECIDED, FEED, Watching
 from streambasis.monitor import NoveltyMonitor
 from streambasis.samples import Channels
@@ -120,8 +120,9 @@ def watch_stream(
     Raises
     ------
     EngineError
-        If Spark lacks what a stateful operator needs: protobuf, a pandas below 3, the RocksDB
-        state store (``session()`` sets it).
+        If Spark lacks what a stateful operator needs: protobuf, a pandas below 3, a state store
+        in RocksDB. The session is set to that where it still has the one that Spark begins with,
+        which cannot hold such a state.
     SettingError
         If a column is missing or of no possible type, or the configuration is refused.
 
@@ -152,7 +153,7 @@ def watch_stream(
     (``trigger(processingTime=...)``) are cheaper than short ones.
     """
     check_environment()
-    check_store(df)
+    use_rocksdb(df)
     names, start = _started(channels, config)
     taken = {"kind", "time", "text", "json", "reason", *DECIDED}
     taken |= {field.split()[0] for field in EVENT_FIELDS.split(", ") if " " in field}

@@ -26,6 +26,9 @@ MESSAGES = "pyspark.sql.streaming.proto.StateMessage_pb2"
 INSTALL = "pip install 'streambasis[spark]'"
 PROVIDER = "spark.sql.streaming.stateStore.providerClass"
 ROCKSDB = "org.apache.spark.sql.execution.streaming.state.RocksDBStateStoreProvider"
+NO_USE = "HDFSBackedStateStoreProvider"
+"""What Spark begins with, and what cannot hold the state of operators such as ours."""
+
 SETTINGS = {
     PROVIDER: ROCKSDB,
     # without it each commit of a partition uploads whole files of its store
@@ -107,20 +110,23 @@ def _check_java() -> None:
         raise EngineError(f"{program} is Java {found[1]}: {way_out}")
 
 
-def check_store(frame: DataFrame) -> None:
-    """Refuse a session whose state store cannot hold the state of a stateful operator.
+def use_rocksdb(frame: DataFrame) -> None:
+    """Have the session of a frame keep state in RocksDB, where it says nothing else.
 
     Raises
     ------
     EngineError
-        If it is not RocksDB.
+        If it is set to another state store than RocksDB or the one that Spark begins with.
     """
-    provider = str(frame.sparkSession.conf.get(PROVIDER))
-    if "rocksdb" not in provider.lower():
+    conf = frame.sparkSession.conf
+    provider = str(conf.get(PROVIDER))
+    if "rocksdb" in provider.lower():
+        return
+    if not provider.endswith(NO_USE):
         raise EngineError(
-            f"{PROVIDER} is {provider}: the state of feeds needs RocksDB; make the session with "
-            f"streambasis.fleet.spark.session(), or set it to {ROCKSDB}"
+            f"{PROVIDER} is {provider}: the state of feeds needs RocksDB; set it to {ROCKSDB}"
         )
+    conf.set(PROVIDER, ROCKSDB)
 
 
 def session(

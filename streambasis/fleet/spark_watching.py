@@ -225,7 +225,7 @@ class Watching:
         """Judge the rows of one key."""
         del timers  # nothing here waits for a time
         pieces = list(rows)
-        at = np.concatenate([piece["at"].to_numpy() for piece in pieces])
+        at = np.concatenate([_numbers(piece["at"]) for piece in pieces])
         values = np.array([row for piece in pieces for row in piece["values"]], np.float64)
         taken = Arrivals(at, values, seconds=self._seconds)
         name = key[0]
@@ -253,6 +253,13 @@ class Watching:
 
     def close(self) -> None:
         """Do nothing: there is nothing to let go of."""
+
+
+def _numbers(column: pd.Series) -> NDArray[Any]:
+    """Return a column of numbers, which may be of a type of pandas' own, with NaN for null."""
+    if column.isna().any():
+        return np.asarray(column.to_numpy(np.float64, na_value=np.nan))
+    return np.asarray(column.to_numpy())
 
 
 def _told(key: str, events: list[Event]) -> pd.DataFrame:
