@@ -6,7 +6,7 @@ Promise: a C-contiguous array of the right dtype is used as it is, without a cop
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -224,9 +224,30 @@ def arrow_table(samples: Any) -> pa.Table:
 
 
 def from_arrow(
-    table: pa.Table, channels: Channels, dtype: np.dtype[Any], *, missing: bool = False
+    table: pa.Table,
+    channels: Channels,
+    dtype: np.dtype[Any],
+    *,
+    missing: bool = False,
 ) -> NDArray[Any]:
     """Return the channels of an Arrow table as an array, (m, n), whose values may be infinite.
+
+    Raises
+    ------
+    SampleError, SampleTypeError
+        As :func:`many_samples`.
+    """
+    array = np.empty((table.num_rows, channels.count), dtype=dtype)
+    for column, values in enumerate(arrow_columns(table, channels, missing=missing)):
+        with np.errstate(over="ignore"):
+            array[:, column] = values.to_numpy()
+    return array
+
+
+def arrow_columns(
+    table: pa.Table, channels: Channels, *, missing: bool = False
+) -> Iterator[pa.ChunkedArray]:
+    """Yield the column of each channel of an Arrow table, as floating-point numbers.
 
     Raises
     ------
@@ -251,8 +272,7 @@ def from_arrow(
                 f"batch: {len(names)} columns for {channels.count} channels without names"
             )
         positions = list(range(channels.count))
-    array = np.empty((table.num_rows, channels.count), dtype=dtype)
-    for column, position in enumerate(positions):
+    for position in positions:
         values = table.column(position)
         kind = values.type
         if not (
@@ -272,6 +292,4 @@ def from_arrow(
             )
         if values.null_count or not pa.types.is_floating(kind):
             values = values.cast(pa.float64())
-        with np.errstate(over="ignore"):
-            array[:, column] = values.to_numpy()
-    return array
+        yield values

@@ -8,16 +8,18 @@ import threading
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from types import TracebackType
-from typing import TYPE_CHECKING, Any, Self
+from typing import Any, Self
 
 import numpy as np
+import pyarrow as pa
 from numpy.typing import ArrayLike
 
 from streambasis.errors import FleetError, SampleTypeError, SettingError, StreambasisError
 from streambasis.fleet.folder import Committed, Folder
 from streambasis.fleet.members import Members
-from streambasis.fleet.rows import FLOAT64, TIME, Key, Layout, Rows, decisions, read_rows
+from streambasis.fleet.rows import FLOAT64, TIME, Key, Layout, Room, Rows, read_rows
 from streambasis.fleet.workers import Workers
+from streambasis.kernels.plain import take_plain
 from streambasis.monitor import Event, NoveltyMonitor
 from streambasis.monitor.verdict import Columns, Verdict
 from streambasis.samples import Channels, one_sample
@@ -25,8 +27,10 @@ from streambasis.snapshot import to_bytes
 from streambasis.state import State
 from streambasis.times import nanoseconds
 
-if TYPE_CHECKING:
-    import pyarrow as pa
+SHARES = 8
+LEAST_SHARE = 1024
+"""Into how many shares the work of a thread is cut, so that all end at about the same time; and
+rows of a share at least, so that threads do not wait for each other more than they work."""
 
 
 class Fleet:
@@ -107,6 +111,7 @@ class Fleet:
         self._left = first.baseline_left
         self._about = self._described()
         self._lock = threading.RLock()
+        self._room = Room()
         self._closed, self._stopped = False, ""
         self._folder: Folder | None = None
         if home is not None or live is not None:
@@ -178,9 +183,10 @@ class Fleet:
 
     @property
     def nbytes(self) -> int:
-        """Bytes of the monitors in memory."""
+        """Bytes of the monitors in memory, and of room for a batch."""
         with self._lock:
-            return sum(monitor.nbytes for monitor in self._members.live.values())
+            held = sum(monitor.nbytes for monitor in self._members.live.values())
+            return held + self._room.nbytes
 
     @property
     def position(self) -> Any:
@@ -220,12 +226,13 @@ class Fleet:
         """
         with self._lock:
             self._ready()
-            rows = read_rows(table, self._layout, at)
-            columns = Columns(0, rows.times, len(rows.values))
+            rows = read_rows(table, self._layout, at, self._workers, self._room)
+            columns = Columns(0, rows.times, len(rows))
             self._take(rows, columns)
             if self._folder is not None and self._folder.parking.begun:
                 self._tidy(self._folder)
-            return decisions(rows, columns, self._layout.key)
+            key = pa.field(self._layout.key, rows.column.type)
+            return columns.table().add_column(0, key, rows.column)
 
     def push(self, key: Key, sample: ArrayLike, at: Any = None) -> Verdict:
         """Judge one sample of a feed.
@@ -265,23 +272,18 @@ class Fleet:
     def _take(self, rows: Rows, columns: Columns) -> None:
         """Let every feed judge its rows, those first that can still refuse them."""
         members = self._members
-        ends = rows.ends.tolist()
-        spans = {
-            key: slice(start, end)
-            for key, start, end in zip(rows.keys, [0, *ends], ends, strict=False)
-        }
         new = [key for key in rows.keys if key not in members]
         for key in new:
             members.know(key, None, self._left)
         # what a baseline teaches can be beyond double precision, which only learning it shows
         first = [
             key
-            for key, span in spans.items()
-            if 0 < members.learning.get(key, 0) <= span.stop - span.start
+            for key, (start, stop) in rows.spans.items()
+            if 0 < members.learning.get(key, 0) <= stop - start
         ]
         before = {key: members.before(key) for key in first}
         try:
-            self._judge(first, spans, rows, columns)
+            self._judge(first, rows, columns)
         except StreambasisError:
             for key, was in before.items():
                 members.put_back(key, was)
@@ -292,29 +294,55 @@ class Fleet:
             self._stop(error)
             raise
         try:
-            self._judge([key for key in rows.keys if key not in before], spans, rows, columns)
+            self._judge([key for key in rows.keys if key not in before], rows, columns)
         except BaseException as error:
             self._stop(error)
             raise
 
-    def _judge(
-        self, keys: list[Key], spans: Mapping[Key, slice], rows: Rows, columns: Columns
-    ) -> None:
+    def _judge(self, keys: list[Key], rows: Rows, columns: Columns) -> None:
         members = self._members
+        whole = columns.plain(slice(None))
 
-        def work(key: Key) -> None:
-            span = spans[key]
-            monitor = members.monitor(key)
-            try:
-                monitor.judge_rows(rows.values[span], columns, span.start)
-            except StreambasisError as error:
-                raise type(error)(f"key {key!r}: {error}; nothing of the batch was taken") from None
-            members.note_learning(key)
+        def work(share: list[Key]) -> None:
+            monitors = [members.monitor(key) for key in share]
+            starts, stops = np.array([rows.spans[key] for key in share], np.int64).T.copy()
+            ports = np.array([monitor.port for monitor in monitors], np.int64)
+            waiting = np.flatnonzero(stops > starts)
+            while len(waiting):
+                there = waiting[ports[waiting] != 0]
+                due = np.ones(len(share), np.bool_)
+                begun, left = starts[there], due[there]
+                take_plain(
+                    ports[there], begun, stops[there], rows.order, rows.values, columns.time,
+                    whole, left,
+                )  # fmt: skip
+                starts[there], due[there] = begun, left
+                waiting = waiting[due[waiting]]
+                for i in waiting.tolist():
+                    start, stop = int(starts[i]), int(stops[i])
+                    starts[i] += self._step(share[i], monitors[i], rows, columns, start, stop)
+                    ports[i] = monitors[i].port
+                waiting = waiting[starts[waiting] < stops[waiting]]
 
         for turn in members.turns(keys):
             self._workers(members.park, members.surplus(turn))
-            self._workers(work, turn)
+            self._workers(work, _shares(turn, rows, self._workers.count))
             members.used(turn)
+
+    def _step(
+        self, key: Key, monitor: NoveltyMonitor, rows: Rows, columns: Columns, start: int, stop: int
+    ) -> int:
+        """Let a monitor do what the kernel cannot; return how many rows that judges."""
+        where = rows.where(start, stop)
+        part = Columns(0, columns.time[where], stop - start)
+        try:
+            count = monitor.step(rows.values[where], part)
+        except StreambasisError as error:
+            text = f"key {key!r}: {error}; nothing of the batch was taken"
+            raise type(error)(text) from None
+        columns.put(where, part, count)
+        self._members.note_learning(key)
+        return count
 
     def monitor(self, key: Key) -> NoveltyMonitor:
         """Return a copy of the monitor of a feed as it stands: to look at, or to save.
@@ -482,6 +510,25 @@ class _Events(Mapping[Key, list[Event]]):
 
     def __len__(self) -> int:
         return len(self._fleet)
+
+
+def _shares(keys: list[Key], rows: Rows, threads: int) -> Iterator[list[Key]]:
+    """Yield the keys in shares of about the same number of rows; one thread takes them as one."""
+    if threads == 1 and keys:
+        yield keys
+        return
+    lengths = [rows.spans[key][1] - rows.spans[key][0] for key in keys]
+    most = max(sum(lengths) / (SHARES * threads), LEAST_SHARE)
+    share: list[Key] = []
+    held = 0
+    for key, length in zip(keys, lengths, strict=True):
+        share.append(key)
+        held += length
+        if held >= most:
+            yield share
+            share, held = [], 0
+    if share:
+        yield share
 
 
 def _check_columns(channels: Channels, key: str, time: str | None) -> None:

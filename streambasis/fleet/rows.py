@@ -1,8 +1,9 @@
-"""Rows of many feeds: checked as a whole, put together feed by feed, and back in their order."""
+"""Rows of many feeds: checked as a whole, and told apart."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -10,12 +11,12 @@ import pyarrow as pa
 from numpy.typing import ArrayLike, NDArray
 
 from streambasis.errors import SampleError, SampleTypeError
-from streambasis.monitor.verdict import Columns
+from streambasis.fleet.workers import Workers
+from streambasis.kernels.plain import to_rows
 from streambasis.samples import (
     Channels,
+    arrow_columns,
     arrow_table,
-    first_refused,
-    from_arrow,
     speaks_arrow,
 )
 from streambasis.times import many_nanoseconds
@@ -26,6 +27,10 @@ Key = str | int
 TIME = "time"
 """The column that is taken for the time where no other is named."""
 
+PIECE = 4096
+"""Rows that one thread reads at a time."""
+
+_IN_PLACE = np.zeros(0, np.int64)
 FLOAT64 = np.dtype(np.float64)
 
 
@@ -50,34 +55,64 @@ class Layout:
 
 @dataclass(frozen=True, slots=True)
 class Rows:
-    """The rows of one batch, those of a feed one after the other.
+    """The rows of one batch, and which of them belong to which feed.
 
     Attributes
     ----------
     keys : list of str or int
         The feeds, in the order in which they first appear.
-    ends : ndarray of int64
-        For each of them, where its rows end; they begin where those of the one before end.
+    spans : dict of key to (int, int)
+        Where in ``order`` the rows of each feed begin and end.
+    order : ndarray of int64, shape (m,), or (0,)
+        Numbers of the rows, those of a feed one after the other; empty where they lie so already.
     values : ndarray of float64, shape (m, n)
         One row per sample; NaN marks a missing value.
     times : ndarray of int64, shape (m,), or None
         Nanoseconds.
-    order : ndarray of int64, shape (m,), or None
-        Which row of the batch each of these is; None where nothing has moved.
     column : pyarrow.ChunkedArray
         The keys as they were given.
     """
 
     keys: list[Key]
-    ends: NDArray[np.int64]
+    spans: dict[Key, tuple[int, int]]
+    order: NDArray[np.int64]
     values: NDArray[np.float64]
     times: NDArray[np.int64] | None
-    order: NDArray[np.int64] | None
     column: pa.ChunkedArray
 
+    def __len__(self) -> int:
+        return len(self.values)
 
-def read_rows(batch: Any, layout: Layout, at: ArrayLike | None) -> Rows:
-    """Check a batch and put together the rows of each feed.
+    def where(self, start: int, stop: int) -> slice | NDArray[np.int64]:
+        """Return which rows stand from ``start`` to ``stop`` in the order of the feeds."""
+        return self.order[start:stop] if len(self.order) else slice(start, stop)
+
+
+class Room:
+    """Memory for the values of a batch, kept from one to the next.
+
+    Fresh memory costs as much as filling it: the system hands it out page by page.
+    """
+
+    def __init__(self) -> None:
+        self._held = np.zeros((0, 0))
+
+    @property
+    def nbytes(self) -> int:
+        """Bytes held: as many as the largest batch so far took."""
+        return self._held.nbytes
+
+    def rows(self, count: int, channels: int) -> NDArray[np.float64]:
+        """Return an array of rows, to be filled; it is the one returned before."""
+        if len(self._held) < count:
+            self._held = np.empty((count, channels))
+        return self._held[:count]
+
+
+def read_rows(
+    batch: Any, layout: Layout, at: ArrayLike | None, workers: Workers, room: Room
+) -> Rows:
+    """Check a batch and tell the rows of each feed apart.
 
     Parameters
     ----------
@@ -87,6 +122,10 @@ def read_rows(batch: Any, layout: Layout, at: ArrayLike | None) -> Rows:
         Which columns these are.
     at : array_like of shape (m,), optional
         Times, where no column holds them.
+    workers : Workers
+        Who reads.
+    room : Room
+        Where the values go.
 
     Raises
     ------
@@ -97,7 +136,7 @@ def read_rows(batch: Any, layout: Layout, at: ArrayLike | None) -> Rows:
 
     Notes
     -----
-    Costs a sort of the rows by their keys, and one copy of the values.
+    Costs a sort of the keys, and one copy of the values.
     """
     if not speaks_arrow(batch):
         raise SampleTypeError(
@@ -109,10 +148,9 @@ def read_rows(batch: Any, layout: Layout, at: ArrayLike | None) -> Rows:
     keys, codes = _keys(table, layout.key)
     time = _time_column(table, layout, at)
     others = [i for i, name in enumerate(table.column_names) if name not in (layout.key, time)]
-    values = from_arrow(table.select(others), layout.channels, FLOAT64, missing=True)
-    refused = first_refused(values, missing=True)
-    if refused is not None:
-        row, column = refused
+    values, refused = _values(table.select(others), layout.channels, workers, room)
+    if refused >= 0:
+        row, column = divmod(refused, layout.channels.count)
         name = layout.channels.names[column]
         raise SampleError(
             f"row {row}, key {keys[codes[row]]!r}, channel {name!r}: value {values[row, column]} "
@@ -121,13 +159,34 @@ def read_rows(batch: Any, layout: Layout, at: ArrayLike | None) -> Rows:
     if time is not None:
         at = table.column(time).to_numpy()
     times = None if at is None else _times(at, len(table))
-    counts = np.bincount(codes, minlength=len(keys))
-    order = None
+    ends = np.cumsum(np.bincount(codes, minlength=len(keys))).tolist()
+    spans = dict(zip(keys, pairwise([0, *ends]), strict=True))
+    order = _IN_PLACE
     if len(keys) > 1 and (codes[1:] < codes[:-1]).any():
         order = np.argsort(codes, kind="stable")
-        values = values[order]
-        times = None if times is None else times[order]
-    return Rows(keys, np.cumsum(counts), values, times, order, table.column(layout.key))
+    return Rows(keys, spans, order, values, times, table.column(layout.key))
+
+
+def _values(
+    table: pa.Table, channels: Channels, workers: Workers, room: Room
+) -> tuple[NDArray[np.float64], int]:
+    """Return the channels as rows, and the position of the first infinite value in them or -1."""
+    count = len(table)
+    columns = [
+        np.ascontiguousarray(column.to_numpy(), np.float64)
+        for column in arrow_columns(table, channels, missing=True)
+    ]
+    addresses = np.array([column.__array_interface__["data"][0] for column in columns])
+    values = room.rows(count, channels.count)
+    refused: list[int] = []
+
+    def read(start: int) -> None:
+        found = to_rows(addresses, count, start, min(start + PIECE, count), values)
+        if found >= 0:
+            refused.append(found)
+
+    workers(read, range(0, count, PIECE))
+    return values, min(refused, default=-1)
 
 
 def _keys(table: pa.Table, name: str) -> tuple[list[Key], NDArray[np.int64]]:
@@ -185,14 +244,3 @@ def _times(at: ArrayLike, count: int) -> NDArray[np.int64]:
         return many_nanoseconds(at, count)
     except SampleError as error:
         raise SampleError(f"{error}; nothing of the batch was taken") from None
-
-
-def decisions(rows: Rows, columns: Columns, key: str) -> pa.Table:
-    """Return the key column and the decisions, in the order of the batch."""
-    if rows.order is not None:
-        for name in Columns.__slots__:
-            grouped = getattr(columns, name)
-            given = np.empty_like(grouped)
-            given[rows.order] = grouped
-            setattr(columns, name, given)
-    return columns.table().add_column(0, pa.field(key, rows.column.type), rows.column)

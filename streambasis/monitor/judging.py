@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from streambasis.errors import SettingError, SnapshotError
+from streambasis.kernels import plain
 from streambasis.kernels.monitor import CLOSED, COLLECTED, NOTHING, OPENED, note_rows, walk
 from streambasis.monitor.contributions import leading, shares
 from streambasis.monitor.events import COLLECT, Event, History, OpenEvent
@@ -32,6 +33,8 @@ BUFFERED = ("z", "spe", "number", "time", "loose", "fold", "pool")
 COUNTED = ("ring", "counters", "last", "quiet", "taken")
 """The arrays that hold a row of the buffer each, and those of the walk."""
 
+_IN_PLACE = np.zeros(0, np.int64)
+
 
 class Judge:
     """The monitor after its baseline.
@@ -46,18 +49,32 @@ class Judge:
     directions are taken off before a sample is judged, so that the next fault is found while the
     first still lasts, and the basis goes on learning from what is left.
 
+    While no event is open, a sample that is whole and within its limit is taken by a kernel alone,
+    every other one by the general way. Which way a sample takes depends on the state before it and
+    on itself, never on how the feed is cut, so a last bit that the two round otherwise is the same
+    in every run.
+
     Parameters
     ----------
     model : Model
         What is ordinary.
     first : int
         Number of the first sample to be judged.
+
+    Attributes
+    ----------
+    port : ndarray of int64
+        Where the kernel finds everything, as :mod:`streambasis.kernels.plain` says.
+    address : int
+        Where the port itself lies.
     """
 
     def __init__(self, model: Model, first: int) -> None:
         n, settings = len(model.names), model.settings
         self.model = model
         self.settings = settings
+        self.port = np.zeros(plain.PORT, np.int64)
+        self.address: int = self.port.__array_interface__["data"][0]
         self.count = first
         self.history = History(n, settings.same)
         self.precursors = Precursors(settings.quiet)
@@ -72,6 +89,45 @@ class Judge:
         self._spe = np.zeros(rows)
         self._number, self._time = np.full(rows, -1), np.full(rows, NO_TIME)
         self._loose, self._fold, self._pool = (np.zeros(rows, np.bool_) for _ in range(3))
+        self._connect()
+
+    @property
+    def count(self) -> int:
+        """Number of the next sample."""
+        return int(self.port[plain.COUNT])
+
+    @count.setter
+    def count(self, number: int) -> None:
+        self.port[plain.COUNT] = number
+
+    @property
+    def _fill(self) -> int:
+        """Rows of the block that is under way."""
+        return int(self.port[plain.FILL])
+
+    @_fill.setter
+    def _fill(self, rows: int) -> None:
+        self.port[plain.FILL] = rows
+
+    def _connect(self) -> None:
+        """Tell the kernel where everything is, after arrays were replaced or events changed."""
+        model, port, projection = self.model, self.port, self.model.projection
+        n, first = self._z.shape[1], projection.first
+        port[plain.OPEN] = len(self.open)
+        port[[plain.CHANNELS, plain.BLOCK, plain.WINDOW]] = (
+            n, self.settings.block, self.settings.window,
+        )  # fmt: skip
+        port[[plain.KNOWN, plain.FIRST, plain.SPREADS, plain.RANK]] = (
+            projection.known, first, len(projection.whitening), model.rank,
+        )  # fmt: skip
+        # whatever the port points at has to live as long as it does
+        self._connected = [
+            *model.standard_parts, projection.mean, projection.directions, projection.whitening,
+            self._z, self._spe, self._number, self._time, self._loose, self._fold, self._pool,
+            self._ring, self._counters, np.array([model.limit.value, model.t2_limit]),
+            np.zeros(n + first + 5), np.zeros(4, np.bool_),
+        ]  # fmt: skip
+        port[plain.CENTRE :] = [a.__array_interface__["data"][0] for a in self._connected]
 
     @property
     def nbytes(self) -> int:
@@ -101,25 +157,62 @@ class Judge:
         at : int
             Row of the first sample there.
         """
+        port, starts = np.array([self.address]), np.zeros(1, np.int64)
+        stops, due = np.array([len(samples)]), np.ones(1, np.bool_)
+        rows = slice(at, at + len(samples))
+        times, whole = columns.time[rows], columns.plain(rows)
+        while True:
+            plain.take_plain(port, starts, stops, _IN_PLACE, samples, times, whole, due)
+            if not due[0]:
+                return
+            done = int(starts[0])
+            starts[0] += self.step(samples[done:], columns, at + done)
+
+    def step(self, samples: NDArray[np.float64], columns: Columns, at: int) -> int:
+        """Do what is due once the kernel has gone as far as it can; return how many rows it judges.
+
+        Parameters
+        ----------
+        samples, columns, at
+            As for :meth:`take`: the samples that the kernel has left.
+        """
+        count = 0
+        if self._fill < self.settings.block:
+            count = self._take_others(samples, columns, at)
+        if self._fill == self.settings.block:
+            self._turn()
+        return count
+
+    def _take_others(self, samples: NDArray[np.float64], columns: Columns, at: int) -> int:
+        """Judge the samples that the kernel leaves, as far as this block goes; return how many."""
+        count = min(len(samples), self.settings.block - self._fill)
+        if not self.open:
+            # those with gaps that follow one another, or the one that is beyond its limit
+            whole = ~np.isnan(samples[:count]).any(axis=1)
+            count = max(int(whole.argmax()) if whole.any() else count, 1)
+        start = self.settings.window + self._fill
+        rows = slice(start, start + count)
+        before = self.model.runs()
+        gaps = self.model.standard(samples[:count], self._z[rows], follow=True)
+        self._number[rows] = np.arange(self.count, self.count + count)
+        self._time[rows] = columns.time[at : at + count]
         done = 0
-        while done < len(samples):
-            start = self.settings.window + self._fill
-            count = min(len(samples) - done, self.settings.block - self._fill)
-            rows = slice(start, start + count)
-            gaps = self.model.standard(samples[done : done + count], self._z[rows], follow=True)
-            self._number[rows] = np.arange(self.count, self.count + count)
-            self._time[rows] = columns.time[at + done : at + done + count]
-            while start < rows.stop:
-                size = self._stretch(slice(start, rows.stop), gaps, columns, at + done)
-                start += size
-                done += size
-                self._fill += size
-            if self._fill == self.settings.block:
-                self._turn()
+        while done < count:
+            size = self._stretch(slice(start + done, rows.stop), gaps, columns, at)
+            done += size
+            at += size
+            self._fill += size
+            if not self.open and done < count:
+                # the rest is for the kernel, which follows the runs of values itself
+                self.model.set_runs(before)
+                self.model.standard(samples[:done], np.empty((done, samples.shape[1])), follow=True)
+                break
+        return done
 
     def _stretch(self, rows: slice, gaps: bool, columns: Columns, at: int) -> int:
         """Judge rows of the buffer up to the next transition of an event; return how many."""
         scored = self._score(rows, gaps, columns, at)
+        columns.sample[at : at + len(scored.z)] = self._number[rows]
         row, what, which = walk(
             self.count, scored.judged, scored.beyond, scored.shows, self._ring, self._counters,
             self._last, self._quiet, self._taken, self._walk,
@@ -221,6 +314,7 @@ class Judge:
         self._last[at], self._quiet[at], self._taken[at] = self.count - 1, 0, len(rows)
         self._ring[:] = False
         self._counters[:] = (0, 0, at + 1, 1)
+        self.port[plain.OPEN] = len(self.open)
         self._look(event)
 
     def _look(self, event: OpenEvent) -> bool:
@@ -241,7 +335,7 @@ class Judge:
         if forming and explained:
             self._counters[3] = 0
         if explained or not forming:
-            self.model.project(self._standing)
+            self._project()
 
     def _close(self, which: int) -> None:
         """Close an open event."""
@@ -253,7 +347,7 @@ class Judge:
         self._counters[2] = len(self.open)
         for array in (self._last, self._quiet, self._taken):
             array[which:-1] = array[which + 1 :]
-        self.model.project(self._standing)
+        self._project()
 
     def close_all(self) -> None:
         """Close every open event."""
@@ -325,7 +419,12 @@ class Judge:
             self._close(self.open.index(event))
         if number not in self.model.adopted:
             self.model.adopt(number, event.directions)
-            self.model.project(self._standing)
+            self._project()
+
+    def _project(self) -> None:
+        """Set up the directions that samples are split over, after events have changed."""
+        self.model.project(self._standing)
+        self._connect()
 
     def _turn(self) -> None:
         """End a block: learn from the rows now past the persistence window, move the rest up."""
@@ -342,6 +441,7 @@ class Judge:
             array[:window] = array[block : block + window].copy()
         self._fill = 0
         self.model.refresh(self._standing)
+        self._connect()
 
     def to_state(self) -> State:
         """Hand over everything needed to go on."""
@@ -374,7 +474,7 @@ class Judge:
             held_by = getattr(judge, f"_{name}")
             held_by[:] = state.take(name, held_by.dtype, held_by.shape)
         judge._check()
-        judge.model.project(judge._standing)
+        judge._project()
         return judge
 
     def _check(self) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -202,6 +203,23 @@ class Model:
             self.scaling.patience, held, runs, out,
         )  # fmt: skip
         return gaps > 0
+
+    @property
+    def standard_parts(self) -> list[NDArray[Any]]:
+        """What :meth:`standard` goes by: centre, inverse scale, reach, freeze, patience, runs."""
+        scaling = self.scaling
+        return [
+            scaling.centre, self.inverse, self._reach, self._freeze, scaling.patience,
+            self._held, self._runs,
+        ]  # fmt: skip
+
+    def runs(self) -> tuple[NDArray[np.float64], NDArray[np.int64]]:
+        """Return which value each channel repeats, and how many times it has come again."""
+        return self._held.copy(), self._runs.copy()
+
+    def set_runs(self, runs: tuple[NDArray[np.float64], NDArray[np.int64]]) -> None:
+        """Put back what :meth:`runs` returned."""
+        self._held[:], self._runs[:] = runs
 
     def score(self, out: Scored, *, gaps: bool) -> Scored:
         """Split samples over the directions and compare what is left with the limits."""

@@ -152,7 +152,7 @@ class NoveltyMonitor:
         )
         self._baseline, self._rank, self._most = int(baseline), rank, max_rank
         self._first, self._waiting = np.zeros((0, n)), 0
-        self._count = 0
+        self._waited = 0
         self._judge: Judge | None = None
         self._lock = threading.Lock()
         if given is not None:
@@ -181,7 +181,7 @@ class NoveltyMonitor:
     @property
     def count(self) -> int:
         """Samples seen."""
-        return self._count
+        return self._judge.count if self._judge else self._waited
 
     @property
     def nbytes(self) -> int:
@@ -275,7 +275,7 @@ class NoveltyMonitor:
         -----
         4·n·rank flops, and a refinement at the end of each block.
         """
-        checked = one_sample(sample, self._channels, FLOAT64, number=self._count, missing=True)
+        checked = one_sample(sample, self._channels, FLOAT64, number=self.count, missing=True)
         time = None if at is None else np.array([nanoseconds(at)])
         with self._lock:
             columns = self._take(checked[None], time)
@@ -306,7 +306,7 @@ class NoveltyMonitor:
         SampleError, SampleTypeError
             If any sample or time is refused; the monitor is unchanged.
         """
-        checked = many_samples(samples, self._channels, FLOAT64, first=self._count, missing=True)
+        checked = many_samples(samples, self._channels, FLOAT64, first=self.count, missing=True)
         times = None if at is None else many_nanoseconds(at, len(checked))
         with self._lock:
             return self._take(checked, times).table()
@@ -324,23 +324,47 @@ class NoveltyMonitor:
             The first of these rows.
         """
         with self._lock:
-            columns.sample[first : first + len(samples)] = np.arange(
-                self._count, self._count + len(samples)
-            )
             self._fill(samples, columns, first)
 
+    @property
+    def port(self) -> int:
+        """Address of what :func:`streambasis.kernels.plain.take_plain` needs; 0 before that.
+
+        Whoever gives it to the kernel lets nobody else push meanwhile.
+        """
+        return self._judge.address if self._judge else 0
+
+    def step(self, samples: NDArray[np.float64], columns: Columns) -> int:
+        """Do what is due where the kernel has left off; return how many samples that judges.
+
+        Parameters
+        ----------
+        samples : ndarray of float64, shape (m, n)
+            Checked, in the order of the channels; NaN marks a missing value.
+        columns : Columns
+            As many rows are filled; the times there are read.
+        """
+        with self._lock:
+            if self._judge is not None:
+                return self._judge.step(samples, columns, 0)
+            self._fill(samples, columns, 0)
+            return len(samples)
+
     def _take(self, samples: NDArray[np.float64], times: NDArray[np.int64] | None) -> Columns:
-        columns = Columns(self._count, times, len(samples))
+        columns = Columns(0, times, len(samples))
         self._fill(samples, columns, 0)
         return columns
 
     def _fill(self, samples: NDArray[np.float64], columns: Columns, first: int) -> None:
         start = 0
         if self._judge is None:
+            numbers = np.arange(self._waited, self._waited + len(samples))
+            columns.sample[first : first + len(samples)] = numbers
             start = self._learn_from(samples)
         if self._judge is not None:
             self._judge.take(samples[start:], columns, first + start)
-        self._count += len(samples)
+        else:
+            self._waited += len(samples)
 
     def _learn_from(self, samples: NDArray[np.float64]) -> int:
         """Take samples for the baseline; return how many."""
@@ -353,7 +377,7 @@ class NoveltyMonitor:
             self._waiting += len(positions)
             return len(samples)
         stop = int(positions[-1]) + 1
-        self._learn(self._first, self._count + stop)
+        self._learn(self._first, self._waited + stop)
         self._first, self._waiting = np.zeros((0, samples.shape[1])), 0
         return stop
 
@@ -470,7 +494,7 @@ class NoveltyMonitor:
                 "rank": self._rank,
                 "max_rank": self._most,
                 "settings": asdict(self._settings),
-                "count": self._count,
+                "count": self.count,
             }
             parts = {} if self._judge is None else {"core": self._judge.to_state()}
             return State(
@@ -495,7 +519,7 @@ class NoveltyMonitor:
             same=settings.same,
         )
         monitor._settings = settings
-        monitor._count = facts["count"]
+        monitor._waited = facts["count"]
         first = state.take("first", np.float64, (None, len(names)))
         if settings.block < 1 or len(first) >= monitor._baseline:
             raise SnapshotError("the block or the baseline is of no possible length")

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -75,6 +75,19 @@ class Columns:
         self.novel, self.extreme = np.zeros((2, count), np.bool_)
         self.rank = np.zeros(count, np.int32)
         self.event = np.full(count, NO_EVENT)
+
+    def plain(self, rows: slice) -> tuple[NDArray[Any], ...]:
+        """Return the columns that a plain sample has an entry in, as the kernel names them."""
+        found = (self.sample, self.spe, self.t2, self.limit, self.t2_limit, self.extreme, self.rank)
+        return tuple(column[rows] for column in found)
+
+    def put(self, where: slice | NDArray[np.int64], part: Columns, count: int) -> None:
+        """Take over the first ``count`` decisions of a part, whose rows are ``where`` in this."""
+        rows = (
+            slice(where.start, where.start + count) if isinstance(where, slice) else where[:count]
+        )
+        for name in self.__slots__:
+            getattr(self, name)[rows] = getattr(part, name)[:count]
 
     def verdict(self, missing: tuple[str, ...], known: tuple[int, ...]) -> Verdict:
         """Return the first row as a verdict."""
