@@ -42,7 +42,6 @@ class Daemon(Held):
         self, folder: Path, *arguments: str | Path, managed: bool = False, **environment: str
     ) -> None:
         self.folder = folder
-        self.told: list[str] = []
         self._socket = None
         if managed:
             self._socket = socket.socket(socket.AF_UNIX, socket.SOCK_DGRAM)

@@ -67,18 +67,13 @@ def running(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Daemon]:
     write_feed(folder)
     (folder / "watch.toml").write_text(CONFIG)
     with Daemon(folder, "--config", folder / "watch.toml", managed=True) as daemon:
+        assert daemon.hear() == "READY=1"
+        daemon.until(lambda: daemon.taken(FIRST))
         yield daemon
-
-
-def test_the_service_manager_hears_that_it_is_ready(running: Daemon) -> None:
-    """READY=1 comes once everything is open, and the samples after it."""
-    assert running.hear() == "READY=1"
-    running.until(lambda: running.taken(FIRST))
 
 
 def test_a_scrape_shows_every_metric_of_the_run(running: Daemon) -> None:
     """All that is promised is there, and follows what the feed brings."""
-    running.until(lambda: running.taken(FIRST))
     with (running.folder / "feed.csv").open("a") as file:
         file.write(lines(FIRST, FIRST + 100) + "no,sample,at,all\n")
     running.until(lambda: running.taken(FIRST + 100))
@@ -111,8 +106,6 @@ def hang_up(daemon: Daemon, config: str, answer: str) -> None:
 
 def test_a_hang_up_takes_over_what_may_change_and_names_what_may_not(running: Daemon) -> None:
     """What the daemon is told live works at once; the rest is said to need another start."""
-    running.until(lambda: running.taken(FIRST))
-    running.told.clear()
     hang_up(
         running,
         CONFIG.replace("1h", "20ms", 1).replace(f"baseline = {BASELINE}", "baseline = 300"),
@@ -124,28 +117,40 @@ def test_a_hang_up_takes_over_what_may_change_and_names_what_may_not(running: Da
     (reason,) = json.loads(running.get("healthz")[1])["reasons"]
     assert reason.startswith("feed: nothing has come for")
     assert running.metrics()["streambasis_healthy"] == 0
+    hang_up(running, CONFIG, "read the settings again: silent-after")
+    running.until(lambda: running.get("healthz")[0] == 200)
+
+
+def test_a_hang_up_changes_how_often_the_run_is_kept(running: Daemon) -> None:
+    """From once an hour to at once: the snapshot is written again though nothing has come."""
+    before = running.metrics()["streambasis_snapshot_timestamp_seconds"]
+    hang_up(
+        running,
+        CONFIG.replace('[500, "1h"]', '[500, "20ms"]'),
+        "read the settings again: snapshot-every",
+    )
+    running.until(lambda: running.metrics()["streambasis_snapshot_timestamp_seconds"] > before)
+    hang_up(running, CONFIG, "read the settings again: snapshot-every")
 
 
 def test_a_hang_up_with_a_broken_config_changes_nothing(running: Daemon) -> None:
     """The error is named and everything stays as it was; a config that works again is taken."""
-    running.until(lambda: running.taken(FIRST))
     hang_up(
         running,
         CONFIG + "silent_aftr = 3\n",
         "{}: no setting 'silent_aftr' (did you mean 'silent-after'?); everything stays as it was",
     )
-    hang_up(running, CONFIG, "read the settings again: silent-after")
-    running.until(lambda: running.get("healthz")[0] == 200)
+    hang_up(running, CONFIG, "read the settings again: nothing new")
 
 
 def test_a_daemon_that_waits_for_its_feed_stops_when_asked(running: Daemon) -> None:
     """SIGTERM: exit code 0, the manager told, everything taken kept, nothing left running."""
-    running.until(lambda: running.taken(FIRST + 100))
+    taken = running.metrics()["streambasis_samples_total"]
     assert running.stop() == cli.OK
     while (said := running.hear()) != "STOPPING=1":
         assert said == "READY=1" or said.startswith("RELOADING=1")
     state = read_state(running.folder / "run" / "state.arrow")
-    assert state.parts["core"].facts["count"] == FIRST + 100
+    assert state.parts["core"].facts["count"] == taken
     assert "Traceback" not in running.err
 
 

@@ -14,7 +14,7 @@ from dataclasses import fields
 from pathlib import Path
 
 import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from prometheus_client.openmetrics.parser import text_string_to_metric_families
 from prometheus_client.parser import text_string_to_metric_families as plain_families
@@ -170,28 +170,24 @@ def test_heads_and_other_pages_are_answered() -> None:
         assert get(server, "/metrics", "POST")[0] == 501
 
 
-@settings(max_examples=60, suppress_health_check=[HealthCheck.function_scoped_fixture])
-@given(st.binary(max_size=200) | st.binary(max_size=50).map(lambda x: b"GET /metrics " + x))
-def test_any_request_is_answered_or_dropped(data: bytes) -> None:
+@pytest.fixture(scope="module")
+def lasting() -> Iterator[MetricsServer]:
+    """Serve all requests of a test from one server."""
+    with served(filled()) as server:
+        yield server
+
+
+@settings(max_examples=60)
+@given(data=st.binary(max_size=200) | st.binary(max_size=50).map(lambda x: b"GET /metrics " + x))
+def test_any_request_is_answered_or_dropped(lasting: MetricsServer, data: bytes) -> None:
     """Whatever is sent, the server closes the connection, says nothing, and goes on serving."""
-    with socket.create_connection(("127.0.0.1", port_of(FUZZED)), WAIT) as client:
+    with socket.create_connection(("127.0.0.1", port_of(lasting)), WAIT) as client:
         client.sendall(data)
         client.shutdown(socket.SHUT_WR)
         with contextlib.suppress(ConnectionError):
             while client.recv(1 << 16):
                 pass
-    assert get(FUZZED, "/healthz")[0] == 200
-
-
-FUZZED: MetricsServer
-
-
-@pytest.fixture(autouse=True, scope="module")
-def _fuzzed() -> Iterator[None]:
-    """Keep one server for all requests of the fuzz test."""
-    global FUZZED
-    with served(filled()) as FUZZED:
-        yield
+    assert get(lasting, "/healthz")[0] == 200
 
 
 def test_those_who_wait_keep_nobody_out() -> None:

@@ -22,8 +22,6 @@ from streambasis.watch.service import broker_of
 from streambasis.watch.settings import Settings, changed, settings_of
 from streambasis.watch.values import SNAPSHOT_EVERY, Endpoint, Every
 
-ROOT = Path(__file__).parent.parent
-
 # each setting as it is typed, as a file has it, and as the daemon uses it
 GIVEN: list[tuple[str, Any, str, Any]] = [
     ("feed", "feed.csv", 'feed = "feed.csv"', "feed.csv"),
@@ -161,9 +159,11 @@ REFUSED = [
     ('key-file = "k.pem"', "certificate-file and key-file: give both or none"),
     ("baseline = x", "not a TOML file (Invalid value (at line 1, column 12))"),
     ("a = " + "[" * 5000, "not a TOML file ("),
+    ("a." * 50_000 + "a = 1", "holds a key of a hundred parts; a setting has one"),
+    ("['a' . \"b\"" + ".c" * 200 + "]", "holds a key of a hundred parts"),
     ("a = 2026-99-99", "not a TOML file ("),
     ("baseline = " + "9" * 5000, "not a TOML file (Exceeds the limit"),
-    ("#" + "x" * MOST_BYTES, "longer than the 65536 bytes that settings may take"),
+    ("#" + "x" * MOST_BYTES, "longer than the 524288 bytes that settings may take"),
 ]
 
 
@@ -180,6 +180,14 @@ def test_a_file_that_cannot_be_used_is_named_with_its_key(
     if "give both" not in message:
         assert str(caught.value).startswith(f"{file}: ")
     assert "hush" not in str(caught.value)
+
+
+def test_the_names_of_many_channels_have_room(tmp_path: Path) -> None:
+    """Ten thousand names, with dots in them, are read."""
+    names = [f"hall{i % 7}.line{i % 90}.sensor{i}" for i in range(10_000)]
+    file = tmp_path / "a.toml"
+    file.write_text("channels = [\n" + "".join(f'  "{name}",\n' for name in names) + "]\n")
+    assert settings_of({}, read_config(file), file).channels == tuple(names)
 
 
 def test_what_is_no_readable_file_is_refused(tmp_path: Path) -> None:

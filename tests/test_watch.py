@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 import threading
 from pathlib import Path
@@ -18,7 +19,7 @@ from streambasis.watch import home as home_module
 from streambasis.watch.home import Home
 from streambasis.watch.loop import Run
 from streambasis.watch.reporting import Summary
-from streambasis.watch.terminal import carriers, summary_lines, when
+from streambasis.watch.terminal import Terminal, carriers, summary_lines, when
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
 
@@ -210,6 +211,18 @@ def test_lines_name_time_sample_and_channels() -> None:
     assert carriers(event, shares=True) == "a 70 %, b 25 %"
     many = event_of(channels=list("abcdef"), contributions=dict.fromkeys("abcdef", 1 / 6))
     assert carriers(many, shares=False) == "a, b, c, d and 2 more"
+
+
+def test_a_warning_is_one_line_whatever_it_holds() -> None:
+    """What came from outside neither breaks the line nor moves the cursor; quiet or not."""
+    out, err = io.StringIO(), io.StringIO()
+    terminal = Terminal(out, err, as_json=False, quiet=True)
+    terminal.warned("row 3: 'a\nb\x1b[2J'")
+    terminal.noted("good to know")
+    assert (out.getvalue(), err.getvalue()) == ("", "streambasis: row 3: 'a\\nb\\x1b[2J'\n")
+    terminal.quiet = False
+    terminal.noted("good to know")
+    assert err.getvalue().endswith("streambasis: good to know\n")
 
 
 def test_summary_says_all_that_was_promised() -> None:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 import stat
 import tomllib
 from pathlib import Path
@@ -11,8 +12,13 @@ from typing import Any
 from streambasis.errors import SettingError
 from streambasis.watch.options import OPTIONS, spelled
 
-MOST_BYTES = 1 << 16
-"""Bytes of a file that are read; some hundred settings need a tenth of it."""
+MOST_BYTES = 1 << 19
+"""Bytes of a file that are read: room for the names of ten thousand channels."""
+
+# the time that the parser takes grows with the square of the parts of a key; no setting has two
+_LONG_KEY = re.compile(
+    r"""(?<![\w-])(?:(?:[\w-]+|"[^"\n]*"|'[^'\n]*')[ \t]*\.[ \t]*){100}""", re.ASCII
+)
 
 _SECRET = ("user", "username", "password", "passwd", "secret", "token")
 
@@ -37,6 +43,8 @@ def read_config(path: Path) -> dict[str, Any]:
         names the file, the line or the key, and the nearest key there is.
     """
     text = _text_of(path)
+    if _LONG_KEY.search(text):
+        raise SettingError(f"{path}: holds a key of a hundred parts; a setting has one")
     try:
         document = tomllib.loads(text)
     except RecursionError:
