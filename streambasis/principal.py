@@ -63,7 +63,7 @@ class PrincipalBasis(Saveable):
     gaps filled by what the basis expects there. Where the observed channels do not determine the
     coordinates the scores are NaN and the sample is counted but not folded.
 
-    Memory is (2·held + block + work)·n numbers. Energies, noise and SPE are squares: of samples
+    Memory is (2·held + block + 16)·n numbers. Energies, noise and SPE are squares: of samples
     beyond about 1e±154 they are infinite or zero in double precision, while norms, residuals,
     T², rank and directions stay right.
 

@@ -8,6 +8,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.kernels import principal as kernels
+
 
 class Weights:
     """The weights of the samples of one block, and of what came before them.
@@ -51,15 +53,14 @@ class Weights:
 
     def apply(self, rows: NDArray[Any]) -> NDArray[Any]:
         """Replace rows, (m, q), by L times them, and return them."""
-        if not self.plain:
-            rows *= self._column(rows)
-        return self._less_shift(rows)
+        if self.shrink or not self.plain:
+            kernels.weigh_rows(rows, self.roots, self.shrink, self._total(rows))
+        return rows
 
     def apply_adjoint(self, rows: NDArray[Any]) -> NDArray[Any]:
         """Replace rows, (m, q), by Lᵀ times them, and return them."""
-        self._less_shift(rows)
-        if not self.plain:
-            rows *= self._column(rows)
+        if self.shrink or not self.plain:
+            kernels.weigh_rows_back(rows, self.roots, self.shrink, self._total(rows))
         return rows
 
     def sum(self, rows: NDArray[Any]) -> NDArray[Any]:
@@ -81,11 +82,6 @@ class Weights:
         lever = (2.0 - self.shrink * self.added) * self.shrink
         return max(every - lever * float(np.vdot(summed, summed).real), 0.0)
 
-    def _less_shift(self, rows: NDArray[Any]) -> NDArray[Any]:
-        if self.shrink:
-            roots = self.roots.astype(rows.real.dtype, copy=False)
-            rows -= (rows.real.dtype.type(self.shrink) * roots)[:, None] * (roots @ rows)
-        return rows
-
-    def _column(self, rows: NDArray[Any]) -> NDArray[Any]:
-        return self.roots.astype(rows.real.dtype, copy=False)[:, None]
+    def _total(self, rows: NDArray[Any]) -> NDArray[Any]:
+        """Return room for a sum of rows in double precision."""
+        return np.empty(rows.shape[1], np.result_type(rows.dtype, np.float64))

@@ -92,6 +92,11 @@ def nystrom(
     return energies[leading], columns.conj().T[leading], float(np.trace(scatter).real)
 
 
+def weighing(roots: NDArray[np.float64], shrink: float) -> NDArray[np.float64]:
+    """Return the matrix that a block is multiplied by when it is folded."""
+    return (np.eye(len(roots)) - shrink * np.outer(roots, roots)) * roots
+
+
 def outside_squares(
     coordinates: NDArray[Any], squares: NDArray[np.float64], clear: float
 ) -> tuple[NDArray[np.float64], NDArray[np.int64]]:

@@ -86,6 +86,23 @@ def test_row_squares_tell_rows_out_of_range(dtype: str) -> None:
         assert not reference.row_squares(rows, 1 / most, most)[1]
 
 
+@pytest.mark.parametrize("shrink", [0.0, 0.1])
+@pytest.mark.parametrize("dtype", DTYPES)
+def test_rows_are_weighed_by_a_matrix_and_by_its_transpose(dtype: str, shrink: float) -> None:
+    """weigh_rows and weigh_rows_back are products with the twin's matrix and its transpose."""
+    rng = np.random.default_rng(8)
+    rows, roots = normal(rng, (9, 4), dtype), 0.9 ** np.arange(9.0)
+    matrix = reference.weighing(roots, shrink)
+    total = np.empty(4, np.result_type(dtype, np.float64))
+    for weigh, expected in (
+        (kernels.weigh_rows, matrix @ rows),
+        (kernels.weigh_rows_back, matrix.T @ rows),
+    ):
+        weighed = rows.copy()
+        weigh(weighed, roots, shrink, total)
+        np.testing.assert_allclose(weighed, expected, rtol=ROUNDING[dtype], atol=ROUNDING[dtype])
+
+
 @pytest.mark.parametrize("dtype", DTYPES)
 def test_squares_outside_tell_where_they_cancel(dtype: str) -> None:
     """What coordinates leave of squares is the twin's, and samples with little left are listed."""
@@ -135,6 +152,23 @@ def test_rows_are_orthonormalized_and_dependent_ones_dropped(dtype: str) -> None
     assert orthogonality(stack[: 3 + added]) < ORTHOGONALITY_LIMIT
     again = coordinates @ stack[:3] + factor[:, :added] @ stack[3 : 3 + added]
     np.testing.assert_allclose(again, rows, atol=100 * np.finfo(dtype).eps)
+
+
+@pytest.mark.parametrize("dtype", ["float64", "complex128"])
+def test_rotated_rows_are_orthogonal_or_said_not_to_be(dtype: str) -> None:
+    """Rows end orthogonal, the other array takes the same turns; what is not finite is reported."""
+    rng = np.random.default_rng(9)
+    rows = normal(rng, (6, 8), dtype)
+    rows[5] = rows[0] + rows[1]
+    turned, turns = rows.copy(), np.eye(6, dtype=dtype)
+    assert kernels.rotate_orthogonal(turned, turns, 60) == kernels.USUAL
+    np.testing.assert_allclose(turns @ rows, turned, atol=1e-14)
+    np.testing.assert_allclose(turns @ turns.conj().T, np.eye(6), atol=1e-14)
+    gram = turned @ turned.conj().T
+    np.testing.assert_allclose(gram, np.diag(gram.diagonal()), atol=1e-13)
+    assert kernels.rotate_orthogonal(rows.copy(), turns, 1) == kernels.UNUSUAL
+    rows[2, 3] = np.inf
+    assert kernels.rotate_orthogonal(rows, turns, 60) == kernels.UNUSUAL
 
 
 @pytest.mark.parametrize("dtype", DTYPES)

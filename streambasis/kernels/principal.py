@@ -103,6 +103,41 @@ def row_squares(rows, least, most, out):
 
 
 @kernel()
+def weigh_rows(rows, roots, shrink, total):
+    """Multiply rows by D = diag(roots), then by I - shrink·(roots)(roots)ᵀ, in place.
+
+    ``total``, of the length of a row, is workspace.
+    """
+    for j in range(rows.shape[1]):
+        total[j] = 0
+    for i in range(rows.shape[0]):
+        root = roots[i]
+        for j in range(rows.shape[1]):
+            rows[i, j] = root * rows[i, j]
+            total[j] += root * rows[i, j]
+    if shrink != 0:
+        for i in range(rows.shape[0]):
+            lever = shrink * roots[i]
+            for j in range(rows.shape[1]):
+                rows[i, j] -= lever * total[j]
+
+
+@kernel()
+def weigh_rows_back(rows, roots, shrink, total):
+    """Multiply rows by the transpose of what :func:`weigh_rows` multiplies by, in place."""
+    for j in range(rows.shape[1]):
+        total[j] = 0
+    for i in range(rows.shape[0]):
+        for j in range(rows.shape[1]):
+            total[j] += roots[i] * rows[i, j]
+    for i in range(rows.shape[0]):
+        root = roots[i]
+        lever = shrink * root
+        for j in range(rows.shape[1]):
+            rows[i, j] = root * (rows[i, j] - lever * total[j])
+
+
+@kernel()
 def score_rows(coordinates, spreads, rank, outside, residuals, spes, t2s):
     """Turn coordinates along all directions held into residual, SPE and T², row by row.
 
