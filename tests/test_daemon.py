@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import json
 import os
+import pty
 import signal
 import socket
 import subprocess
 import sys
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -184,6 +186,24 @@ def test_without_a_config_a_hang_up_is_survived(tmp_path: Path) -> None:
         daemon.send(signal.SIGHUP)
         daemon.until(lambda: "there is no --config to read again" in daemon.err)
         assert daemon.stop() == cli.OK
+
+
+def test_a_terminal_that_is_closed_ends_the_run_well(tmp_path: Path) -> None:
+    """SIGHUP without a config and on a terminal keeps what was taken, with exit code 0."""
+    feed, home = write_feed(tmp_path), tmp_path / "run"
+    parent, child = pty.openpty()
+    command = [sys.executable, "-m", "streambasis", "watch", str(feed), "--follow", "--quiet"]
+    command += ["--home", str(home), "--baseline", str(BASELINE), "--snapshot-every", "200ms"]
+    with subprocess.Popen(command, stdout=child, stderr=child, cwd=ROOT) as process:
+        os.close(child)
+        deadline = time.monotonic() + PATIENCE
+        state = home / "state.arrow"
+        while not (state.exists() and read_state(state).parts["core"].facts["count"] == FIRST):
+            assert time.monotonic() < deadline
+            time.sleep(0.05)
+        process.send_signal(signal.SIGHUP)
+        assert process.wait(PATIENCE) == cli.OK
+    os.close(parent)
 
 
 SECRET = "hush-7f3a"

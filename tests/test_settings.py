@@ -18,7 +18,7 @@ from streambasis.feeds.broker import WHEN_FULL, Broker
 from streambasis.monitor.novelty import LEAST_BASELINE
 from streambasis.watch.config import MOST_BYTES, read_config
 from streambasis.watch.options import FEED, OPTIONS, spelled
-from streambasis.watch.service import broker_of
+from streambasis.watch.service import broker_of, feed_options
 from streambasis.watch.settings import Settings, changed, settings_of
 from streambasis.watch.values import SNAPSHOT_EVERY, Endpoint, Every
 
@@ -264,6 +264,29 @@ def test_bounds_agree_with_those_who_use_the_settings() -> None:
     )
     dropping = broker_of(settings_of({"feed": "mqtt://h/t", "on_overload": "drop"}))
     assert dropping.when_full == WHEN_FULL[1]
+
+
+def test_every_setting_of_a_connection_reaches_it(tmp_path: Path) -> None:
+    """Broker and feed are opened as the settings say; who we are comes from the file."""
+    login = tmp_path / "login"
+    login.write_text("me\nhush\n")
+    typed = {"credentials": str(login), "client": "mine", "mqtt_version": "3.1.1", "queue": "9"}
+    typed |= {"ca_file": "ca", "certificate_file": "c", "key_file": "k", "on_overload": "drop"}
+    assert broker_of(settings_of({"feed": "mqtts://h/t", **typed})) == Broker(
+        user="me",
+        password="hush",
+        client="mine",
+        version="3.1.1",
+        queue=9,
+        when_full="drop-oldest",
+        ca_file=Path("ca"),
+        certificate_file=Path("c"),
+        key_file=Path("k"),
+    )
+    switches = {"follow": True, "strict": True}
+    options = feed_options(settings_of({"feed": "f", "format": "json", **switches, **typed}))
+    assert (options.follow, options.strict, options.format) == (True, True, "json")
+    assert (options.when_full, options.queue, options.broker) == ("drop-oldest", 9, None)
 
 
 def test_each_home_has_a_session_of_its_own() -> None:
