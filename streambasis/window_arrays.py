@@ -268,6 +268,7 @@ class WindowArrays:
             any(((each < exchange.NONE) | (each >= top)).any() for each in slots)
             or ((places < exchange.NONE) | (places >= uncovered)).any()
             or not k <= header[growth.CAPACITY] <= channels
+            or (members[:, exchange.ID] >= header[growth.COUNT]).any()
             or not _linked(header, members)
         ):
             raise SnapshotError(

@@ -103,3 +103,13 @@ def test_every_example_is_listed() -> None:
     """README names each script of examples/."""
     for script in (ROOT / "examples").glob("*.py"):
         assert f"examples/{script.name}" in README, script.name
+
+
+def test_the_tests_that_catch_comparisons_exist() -> None:
+    """DEVELOPERS.md names, for each comparison, a test that is there."""
+    text = (ROOT / "DEVELOPERS.md").read_text()
+    table = text.split("## Comparisons and the tests that catch them")[1].split("\n## ")[0]
+    named = set(re.findall(r"`(test_\w+)` \|$", table, re.MULTILINE))
+    tests = "".join(path.read_text() for path in (ROOT / "tests").glob("test_*.py"))
+    assert len(named) >= 12
+    assert {name for name in named if f"def {name}(" not in tests} == set()

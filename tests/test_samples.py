@@ -136,3 +136,22 @@ def test_arrow_columns_of_every_number_type() -> None:
     np.testing.assert_array_equal(out, [[1] * 5, [0] * 5])
     with pytest.raises(SampleError, match="5 columns for 4 channels"):
         many_samples(table, Channels(4), DOUBLE)
+
+
+def test_a_batch_that_comes_as_one_arrow_array_is_taken() -> None:
+    """An object that hands over a single array, and no stream, is a table of its fields."""
+
+    class Handed:
+        """Speaks the array half of the PyCapsule protocol and nothing else."""
+
+        def __init__(self, batch: pa.RecordBatch) -> None:
+            self._batch = batch
+
+        def __arrow_c_array__(self, requested_schema: object = None) -> object:
+            return self._batch.__arrow_c_array__(requested_schema)
+
+    batch = pa.RecordBatch.from_pydict({"b": [2.0, 4.0], "a": [1, 3]})
+    taken = many_samples(Handed(batch), Channels(["a", "b"]), DOUBLE)
+    assert taken.tolist() == [[1.0, 2.0], [3.0, 4.0]]
+    with pytest.raises(SampleError, match="column 'c' is missing"):
+        many_samples(Handed(batch), Channels(["a", "c"]), DOUBLE)

@@ -19,6 +19,7 @@ from numpy.typing import NDArray
 import streambasis
 from streambasis.errors import SnapshotError
 from streambasis.kernels import exchange
+from streambasis.kernels.growth import CAPACITY, COUNT
 from streambasis.snapshot import from_bytes, load, save, state_from_bytes, to_bytes
 from streambasis.state import State
 
@@ -391,3 +392,17 @@ def test_the_samples_of_a_window_are_plain_columns() -> None:
     assert frame["times"][0].to_list() == [number * 250_000_000 for number in obj.members]
     assert frame["pivots"][0].to_list() == obj.pivots.tolist()
     assert np.array_equal(frame["vectors"].to_numpy()[0], obj.vectors)
+
+
+@pytest.mark.parametrize("window", [None, 8])
+@pytest.mark.parametrize(("entry", "value"), [(CAPACITY, 2), (CAPACITY, CHANNELS + 1), (COUNT, 2)])
+def test_counters_that_contradict_the_directions_are_refused(
+    window: int | None, entry: int, value: int
+) -> None:
+    """A capacity below the rank or beyond the channels, or fewer samples than it holds."""
+    basis = streambasis.StreamBasis(CHANNELS, window=window)
+    basis.push_many(np.eye(CHANNELS)[:3])
+    state = basis.to_state()
+    state.parts["core"].arrays["header"][entry] = value
+    with pytest.raises(SnapshotError, match=r"3 (directions|samples)"):
+        from_bytes(to_bytes(state))
