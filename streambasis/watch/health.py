@@ -5,6 +5,7 @@ from __future__ import annotations
 import threading
 import time
 from collections.abc import Callable
+from dataclasses import dataclass
 from types import TracebackType
 from typing import Self
 
@@ -66,7 +67,17 @@ class Health:
         trouble = self.trouble()
         reason = f" ({trouble})" if trouble else ""
         allowed = f"allowed are {self.silent_after:g} s"
-        return f"feed: nothing has come for {silent:.3g} s, {allowed}{reason}"
+        shown = f"{silent:,.0f}" if silent >= 10.0 else f"{silent:.2f}"
+        return f"feed: nothing has come for {shown} s, {allowed}{reason}"
+
+
+@dataclass(slots=True)
+class _Kind:
+    """A kind of trouble: what to say when it is over; if it was said, and may be said again."""
+
+    over: str
+    said: bool = False
+    due: float = 0.0
 
 
 class Listener:
@@ -89,20 +100,21 @@ class Listener:
         self._health = health
         self._warned = warned
         self._over = threading.Event()
-        self._said = {"samples come again": False, "connected again": False}
-        self._next = dict.fromkeys(self._said, 0.0)
+        self._silence = _Kind("samples come again")
+        self._connection = _Kind("connected again")
         self._sessions_lost = 0
         self._thread = threading.Thread(target=self._listen, name="health", daemon=True)
 
     def look(self, now: float) -> None:
         """Say what has changed; ``now`` is a monotonic clock."""
         trouble = self._health.trouble()
-        found = (self._health.silence(), f"feed: {trouble}" if trouble else "")
-        for (over, said), text in zip(list(self._said.items()), found, strict=True):
-            if bool(text) != said and now >= self._next[over]:
-                self._said[over] = bool(text)
-                self._next[over] = now + REPEAT_SECONDS
-                self._warned(text or f"feed: {over}")
+        for kind, text in (
+            (self._silence, self._health.silence()),
+            (self._connection, f"feed: {trouble}" if trouble else ""),
+        ):
+            if bool(text) != kind.said and now >= kind.due:
+                kind.said, kind.due = bool(text), now + REPEAT_SECONDS
+                self._warned(text or f"feed: {kind.over}")
         lost = self._health.vitals.sessions_lost
         if lost > self._sessions_lost:
             self._sessions_lost = lost

@@ -52,7 +52,7 @@ OPTIONS = {
         many=True,
     ),
     "time": Option(
-        values.text,
+        values.name,
         "The time column. Default: found by itself where there is one obvious candidate.",
         "COLUMN",
     ),

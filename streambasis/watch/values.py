@@ -15,6 +15,7 @@ from pathlib import Path
 from typing import Any, NamedTuple
 
 LOOPBACK = "127.0.0.1"
+MOST_WHOLE = 10**15
 UNITS = {"ms": 0.001, "s": 1.0, "min": 60.0, "h": 3600.0, "d": 86_400.0}
 
 _LENGTH = re.compile(r"(\d{1,9}(?:\.\d{1,9})?)\s?(ms|s|min|h|d)")
@@ -81,12 +82,12 @@ def switch(value: object) -> bool:
     return value
 
 
-def whole(least: int, most: int = 10**15) -> Callable[[object], int]:
+def whole(least: int, most: int = MOST_WHOLE) -> Callable[[object], int]:
     """Return a check for a whole number in a range."""
 
     def check(value: object) -> int:
         if not isinstance(value, int) or isinstance(value, bool) or not least <= value <= most:
-            upto = "" if most == 10**15 else f" and at most {most}"
+            upto = "" if most == MOST_WHOLE else f" and at most {most}"
             raise ValueError(f"a whole number of at least {least}{upto}")
         return value
 
@@ -120,24 +121,31 @@ def duration(value: object) -> float:
 
 def every(value: object) -> Every:
     """Check how often the run is kept; what is not given stays at its default."""
-    expected = 'a number of samples such as 50000, a length of time such as "10s", or both'
-    given: dict[str, Any] = {}
-    for item in value if isinstance(value, list | tuple) else [value]:
-        parts: list[Any] = item.split(",") if isinstance(item, str) else [item]
-        for part in parts:
-            text = part.strip() if isinstance(part, str) else ""
-            part = int(text) if _COUNT.fullmatch(text) else text or part
-            kind = "seconds" if isinstance(part, str) else "samples"
-            try:
-                read = duration(part) if kind == "seconds" else whole(1)(part)
-            except ValueError:
-                raise ValueError(expected) from None
-            if kind in given or not read:
-                raise ValueError(expected)
-            given[kind] = read
-    if not given:
-        raise ValueError(expected)
-    return SNAPSHOT_EVERY._replace(**given)
+    items = value if isinstance(value, list | tuple) else [value]
+    # what is typed may hold both, separated by a comma
+    parts = [p for i in items for p in (i.split(",") if isinstance(i, str) else [i])]
+    try:
+        given = [_samples_or_seconds(part) for part in parts]
+    except ValueError:
+        given = []
+    if not given or len(dict(given)) < len(given):
+        raise ValueError(
+            'a number of samples such as 50000, a length of time such as "10s", or both'
+        )
+    return SNAPSHOT_EVERY._replace(**dict(given))
+
+
+def _samples_or_seconds(part: object) -> tuple[str, Any]:
+    """Return one of the two with the name of its field."""
+    if isinstance(part, str):
+        part = part.strip()
+        if not _COUNT.fullmatch(part):
+            seconds = duration(part)
+            if not seconds:
+                raise ValueError("more than no time")
+            return "seconds", seconds
+        part = int(part)
+    return "samples", whole(1)(part)
 
 
 def one_of(*choices: str) -> Callable[[object], str]:
@@ -164,12 +172,12 @@ def names(value: object) -> tuple[str, ...]:
     A name that holds a comma stands in quotes in such a list.
     """
     if isinstance(value, list):
-        found = [_name(item) for item in value]
+        found = [name(item) for item in value]
     else:
         lists = value if isinstance(value, tuple) else (value,)
         try:
             rows = csv.reader(io.StringIO("\n".join(lists)), skipinitialspace=True)
-            found = [_name(name.strip()) for row in rows for name in row]
+            found = [name(cell.strip()) for row in rows for cell in row]
         except (TypeError, csv.Error):
             raise ValueError("names separated by commas, or an array of names") from None
     if not found or len(set(found)) < len(found):
@@ -177,9 +185,10 @@ def names(value: object) -> tuple[str, ...]:
     return tuple(found)
 
 
-def _name(value: object) -> str:
+def name(value: object) -> str:
+    """Check the name of a column."""
     if not isinstance(value, str) or not value:
-        raise ValueError("a list of names, none of them empty")
+        raise ValueError("the name of a column, or such names")
     return value
 
 
@@ -199,8 +208,8 @@ def source(value: object) -> str:
 
 def endpoint(value: object) -> Endpoint:
     """Check HOST:PORT; without a host it is the loopback address."""
-    given = str(value) if isinstance(value, int) and not isinstance(value, bool) else value
-    match = _ADDRESS.fullmatch(given) if isinstance(given, str) else None
+    port = isinstance(value, int) and not isinstance(value, bool) and 0 <= value <= 65535
+    match = _ADDRESS.fullmatch(str(value)) if port or isinstance(value, str) else None
     if match is None or int(match[3]) > 65535:
         raise ValueError("HOST:PORT such as 127.0.0.1:9464, or a port of the loopback address")
     return Endpoint(match[1] or match[2] or LOOPBACK, int(match[3]))
