@@ -18,7 +18,7 @@ LOOPBACK = "127.0.0.1"
 MOST_WHOLE = 10**15
 UNITS = {"ms": 0.001, "s": 1.0, "min": 60.0, "h": 3600.0, "d": 86_400.0}
 
-_LENGTH = re.compile(r"(\d{1,9}(?:\.\d{1,9})?)\s?(ms|s|min|h|d)")
+_LENGTH = re.compile(r"([0-9]{1,9}(?:\.[0-9]{1,9})?) ?(ms|s|min|h|d)")
 _COUNT = re.compile(r"[0-9]{1,18}")
 _ADDRESS = re.compile(r"(?:(?:\[([0-9a-fA-F:.%]{1,80})\]|([^:\[\]/@\s]{0,255})):)?([0-9]{1,5})")
 _MOST_SHOWN = 60
