@@ -29,8 +29,9 @@ from streambasis.feeds.reading import (
 from streambasis.feeds.sources import PATIENCE
 
 REMEMBERED = 4
-"""Messages remembered per message sent ahead. A broker should need 1; mosquitto 2.0.11 does not
-count what it sends again after a reconnect, and was seen to send twice what it may."""
+"""Messages remembered per message sent ahead, beside all that are not acknowledged. A broker should
+need 1; mosquitto 2.0.11 does not count what it sends again after a reconnect, and was seen to send
+twice what it may, or any number in a session that somebody began without a limit."""
 
 LEAST_REMEMBERED = 1024
 
@@ -62,8 +63,9 @@ class MqttFeed(PieceFeed):
     At least once: a message is acknowledged when a position behind it is committed, and sent again
     until then. Exactly once where a payload has a time or a sequence number: the position holds
     what tells the newest messages apart. Acknowledgements go out in the order of the messages, so
-    what can come again is always among as many as the broker sends before the first of them is
-    acknowledged; four times that are remembered (see REMEMBERED).
+    what can come again is what has not been acknowledged, or has been a moment ago; that, and four
+    times as many as the broker may send before the first of them is acknowledged, are remembered
+    (see REMEMBERED).
     """
 
     kind = "messages"
@@ -189,7 +191,8 @@ class MqttFeed(PieceFeed):
             messages = self._connection.take(BATCH_ROWS, wait)
 
     def _piece(self, messages: list[Message]) -> Piece:
-        gathered = _Gathered(self._serial, self._ids, self._remembered, self.columns)
+        remembered = self._remembered + len(messages)
+        gathered = _Gathered(self._serial, self._ids, remembered, self.columns)
         for message in messages:
             try:
                 content = self._reader.read(message.topic, message.payload)
@@ -216,7 +219,8 @@ class MqttFeed(PieceFeed):
 
     @property
     def _remembered(self) -> int:
-        return max(LEAST_REMEMBERED, REMEMBERED * self._broker.ahead)
+        pending = self._serial - self._committed
+        return pending + max(LEAST_REMEMBERED, REMEMBERED * self._broker.ahead)
 
     def _note(self, message: Message, identity: bytes | None = None) -> None:
         """Give a message its number, and keep what acknowledges it and what tells it again."""
@@ -225,7 +229,7 @@ class MqttFeed(PieceFeed):
             self._receipts[self._serial] = [message.receipt]
         if identity is not None:
             self._known[identity] = self._serial
-            if len(self._known) > self._remembered:
+            while len(self._known) > self._remembered:
                 del self._known[next(iter(self._known))]
 
     def _is_known(self, content: Content, message: Message) -> bool:

@@ -12,8 +12,8 @@ import json
 import os
 import re
 from collections.abc import Mapping, Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
-from contextlib import ExitStack
+from concurrent.futures import Future, ThreadPoolExecutor, wait
+from contextlib import ExitStack, suppress
 from dataclasses import asdict, dataclass
 from pathlib import Path
 from types import TracebackType
@@ -192,7 +192,9 @@ class Home:
         HomeError
             If it cannot be read.
         """
-        self.settle(wait=True)
+        with suppress(HomeError):
+            # one that fails leaves the one before
+            self.settle(wait=True)
         self._full = []
         events, malformed = self._resume(self.path / "state.arrow")
         self._events.back_to(events)
@@ -276,6 +278,13 @@ class Home:
         state = State(KIND, {**facts, **own}, {}, held)
         commit = _Commit(state, list(self._full), sizes, progress)
         self._under_way = commit, self._thread.submit(self._write, commit)
+
+    def wait(self, seconds: float) -> bool:
+        """Wait so long for the commit that is under way; return whether there is one."""
+        if self._under_way is None:
+            return False
+        wait([self._under_way[1]], seconds)
+        return True
 
     def settle(self, *, wait: bool = False) -> Mapping[str, Any] | None:
         """Hear what has become of the commit that is under way.

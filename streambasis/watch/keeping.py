@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 import time
 from collections.abc import Mapping
 from contextlib import suppress
@@ -115,6 +116,11 @@ class Keeping:
         if done is not None:
             self._succeeded()
         return done
+
+    def wait(self, seconds: float, asked: threading.Event) -> None:
+        """Wait until the commit under way is through, somebody asks to stop, or so long."""
+        if not asked.is_set() and not self._home.wait(seconds):
+            asked.wait(seconds)
 
     def finish(
         self,

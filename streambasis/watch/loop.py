@@ -98,7 +98,7 @@ class Run:
         self._audit_every = audit_every
         self._audit_due = time.monotonic() + audit_every
         self._reopen = reopen
-        self._acknowledged = False
+        self._acknowledged = 0
         self._repaired_at = -1
         if home is not None and home.state is not None:
             self._vitals.restarts = home.state.facts.get("restarts", 0) + 1
@@ -241,12 +241,12 @@ class Run:
             if self._vitals.unkept and feed.due:
                 # a broker would send nothing more: scoring goes on, and memory holds what it gives
                 feed.commit(self._place() or {})
-                self._acknowledged = True
+                self._acknowledged = self._monitor.count
             if not keeping.full(live=feed.live) or asked.is_set():
                 return
             # a watchdog is to end a loop that hangs, not one that waits for the disk
             self._vitals.busy_since = None
-            asked.wait(PAUSE)
+            keeping.wait(PAUSE, asked)
 
     def _commit(self) -> None:
         """Keep the run as it is after the last batch, and wait for that."""
@@ -256,10 +256,8 @@ class Run:
 
     def _hear(self, facts: Mapping[str, Any] | None) -> None:
         """Tell the feed of a commit that has come through."""
-        if facts is not None:
-            self._acknowledged = False
-            if facts["position"] is not None:
-                self._feed.commit(facts["position"])
+        if facts is not None and facts["position"] is not None:
+            self._feed.commit(facts["position"])
 
     def _facts(self) -> tuple[dict[str, Any], dict[str, State]]:
         """Return what a commit holds beside the monitor and the results."""
@@ -302,14 +300,16 @@ class Run:
         would hide the fault, not repair it.
         """
         home, feed = self._home, self._feed
-        if home is None or self._reopen is None or not feed.repeatable or self._acknowledged:
-            raise NumericalError(
-                f"{found}; the run has no commit to go back to from which its feed can be read "
-                "again, and ends here: what it kept before is sound"
-            )
+        ended = NumericalError(
+            f"{found}; the run has no commit to go back to from which its feed can be read again, "
+            "and ends here: what it kept before is sound"
+        )
+        if home is None or self._reopen is None or not feed.repeatable:
+            raise ended
         home.go_back()
         monitor = home.monitor()
-        assert monitor is not None
+        if monitor is None or monitor.count < self._acknowledged:
+            raise ended
         if monitor.count == self._repaired_at:
             raise NumericalError(
                 f"{found}, once more after going back to sample {monitor.count}: suspect the "
