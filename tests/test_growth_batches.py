@@ -23,6 +23,7 @@ def exact_feed(dtype: str, length: int, count: int = 48, rank: int = 6) -> NDArr
     return random_rows(rng, length, rank, dtype) @ random_rows(rng, rank, count, dtype)
 
 
+@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", DOUBLES)
 @pytest.mark.parametrize(("rank", "count"), [(1, 1), (1, 9), (7, 7), (12, 40), (5, 400)])
 def test_picked_channels_tell_the_others(dtype: str, rank: int, count: int) -> None:
@@ -37,6 +38,7 @@ def test_picked_channels_tell_the_others(dtype: str, rank: int, count: int) -> N
     assert (rest <= EXACT / 16 * np.linalg.norm(x, axis=1)).all()
 
 
+@pytest.mark.kernels
 def test_directions_that_few_channels_carry_are_found() -> None:
     """Channels are picked where the directions are, however few of many those are."""
     directions = np.zeros((3, 5000))
@@ -44,6 +46,7 @@ def test_directions_that_few_channels_carry_are_found() -> None:
     assert sorted(interpolation(directions)[0]) == [2, 17, 4321]
 
 
+@pytest.mark.kernels
 def test_what_cannot_be_interpolated_is_not() -> None:
     """Rows without an interpolation that keeps rounding small give none."""
     rows = np.ones((2, 8)) / np.sqrt(8)
@@ -82,6 +85,7 @@ def test_an_exact_feed_is_interpolated_and_decides_the_same(dtype: str) -> None:
     assert abs(np.vdot(one.vectors[-1], other.vectors[-1])) == pytest.approx(1, abs=1e-9)
 
 
+@pytest.mark.kernels
 def test_a_feed_with_noise_is_projected_instead() -> None:
     """One sample with something outside the span ends interpolation until the next growth."""
     samples = exact_feed("float64", 2000)
@@ -99,6 +103,7 @@ def test_a_feed_with_noise_is_projected_instead() -> None:
     assert basis._core._exact()
 
 
+@pytest.mark.kernels
 def test_interpolation_that_decides_too_little_is_given_up() -> None:
     """When most samples of a block have to be pushed one by one, the next block is projected."""
     samples = exact_feed("float64", 1200)
@@ -113,6 +118,7 @@ def test_interpolation_that_decides_too_little_is_given_up() -> None:
     assert basis._core.reals[kernels.INEXACT] == 1.0
 
 
+@pytest.mark.kernels
 @pytest.mark.parametrize("dtype", ["float64", "complex128", "float32"])
 def test_a_restart_within_an_exact_feed_is_invisible(dtype: str) -> None:
     """Contract 9 where samples are interpolated: what follows is the same bit for bit."""
