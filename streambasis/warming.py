@@ -12,10 +12,13 @@ from streambasis.basis import StreamBasis
 from streambasis.errors import SettingError
 from streambasis.monitor import NoveltyMonitor
 from streambasis.principal import PrincipalBasis
+from streambasis.principal_settings import WHOLE
 from streambasis.samples import checked_dtype
 
 BASELINE = 60
 """Samples of the baseline of the monitor that is run once."""
+WIDE = WHOLE + 6
+"""Channels of a principal basis that does not hold every direction."""
 
 
 def warm_up(*what: Any, dtypes: Iterable[DTypeLike] = ("float64",)) -> None:
@@ -73,11 +76,15 @@ def _run_growing(dtype: np.dtype[Any], windowed: bool) -> None:
 
 
 def _run_principal(dtype: np.dtype[Any]) -> None:
-    basis = PrincipalBasis(4, rank=1, block=4, dtype=dtype)
-    samples = np.random.default_rng(0).standard_normal((12, 4)).astype(dtype)
-    for sample in samples:
-        basis.push(sample)
-    basis.push_many(samples)
+    # loud with a sample that comes twice, then quiet: folds of every kind
+    samples = np.random.default_rng(0).standard_normal((24, WIDE)).astype(dtype)
+    samples[1] = samples[0]
+    samples[12:] *= 2.0**-10
+    for channels in (4, WIDE):
+        basis = PrincipalBasis(channels, rank=1, block=4, forget=0.9, centre=True, dtype=dtype)
+        for sample in samples[:4, :channels]:
+            basis.push(sample)
+        basis.push_many(samples[4:, :channels])
 
 
 def _run_monitor() -> None:
