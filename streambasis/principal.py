@@ -15,7 +15,6 @@ from streambasis.decisions import Score, Scores
 from streambasis.errors import SampleError, SettingError
 from streambasis.inner import Inner, inner_of
 from streambasis.intake import Intake
-from streambasis.kernels import principal as kernels
 from streambasis.principal_settings import Settings
 from streambasis.samples import Channels, checked_dtype, many_samples, one_sample
 from streambasis.state import Saveable, State, owned
@@ -278,7 +277,8 @@ class PrincipalBasis(Saveable):
                 f"{self.dtype}; nothing was taken"
             )
         quarter = float(np.finfo(self.dtype).max) / 4
-        if self._core.core.centred and kernels.largest_part(np.atleast_2d(entered)) > quarter:
+        parts = entered.view(np.finfo(self.dtype).dtype)
+        if self._core.core.centred and np.abs(parts).max() > quarter:
             raise SampleError(
                 f"sample {self.count} or later: a value above a quarter of what {self.dtype} "
                 "holds cannot be taken about a mean; nothing was taken"
@@ -393,4 +393,4 @@ def _squares_are_finite(samples: NDArray[Any]) -> bool:
 
 
 def _has_gap(samples: NDArray[Any]) -> bool:
-    return not _squares_are_finite(samples) and bool(kernels.has_gap(samples))
+    return not _squares_are_finite(samples) and bool(np.isnan(samples).any())

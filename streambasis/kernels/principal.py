@@ -267,27 +267,6 @@ def subtract_identity(gram):
 
 
 @kernel()
-def has_gap(rows):
-    """Say whether any value is NaN."""
-    for i in range(rows.shape[0]):
-        for j in range(rows.shape[1]):
-            if rows[i, j] != rows[i, j]:
-                return True
-    return False
-
-
-@kernel()
-def largest_part(rows):
-    """Return the largest absolute value of a real or imaginary part."""
-    largest = 0.0
-    for i in range(rows.shape[0]):
-        for j in range(rows.shape[1]):
-            value = rows[i, j]
-            largest = max(largest, abs(value.real), abs(value.imag))
-    return largest
-
-
-@kernel()
 def least_magnitude(vector):
     """Return the least absolute value of a vector that is not empty."""
     least = abs(vector[0])
