@@ -132,7 +132,7 @@ def singly(quick: bool) -> Table:
             "ratio",
             "score_many",
             "products",
-            "ratio's bound",
+            "bound",
         ],
     )
     for channels, rank in SIZES:

@@ -85,7 +85,9 @@ def _by_gram(
         energies, columns = np.linalg.eigh(gram, UPLO="L")
     except np.linalg.LinAlgError:
         return None
-    return np.sqrt(np.maximum(energies[::-1], 0.0)), columns.T[::-1].conj()
+    # NumPy has no fast product of an array with a negative stride
+    rows = np.ascontiguousarray(columns.T[::-1]).conj()
+    return np.sqrt(np.maximum(energies[::-1], 0.0)), rows
 
 
 def by_rotations(core: NDArray[Any]) -> tuple[NDArray[np.float64], NDArray[Any]]:

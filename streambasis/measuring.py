@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,8 +15,7 @@ as the difference of squares. That is off by some epsilons of the sample's squar
 by some tens of epsilons of its norm."""
 
 
-@dataclass(frozen=True, slots=True)
-class Block:
+class Block(NamedTuple):
     """Samples about their mean, and how they lie to the directions.
 
     Attributes

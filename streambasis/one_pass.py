@@ -108,7 +108,8 @@ def one_pass_turn(
         return None
     if not math.isfinite(found.sum()):
         return None
-    combined = columns.conj().T[::-1] @ combined
+    # NumPy has no fast product of an array with a negative stride
+    combined = np.ascontiguousarray(columns.T[::-1]).conj() @ combined
     summed = None
     if weights.shrink:
         summed = weights.sum(block.deviations) - weights.sum(block.coordinates) @ rows[:held]

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,8 +17,7 @@ RENEWAL_LIMIT = 1.5
 made orthonormal again."""
 
 
-@dataclass(frozen=True, slots=True)
-class Turn:
+class Turn(NamedTuple):
     """New directions in terms of the rows of a stack, and their singular values.
 
     Attributes
@@ -37,8 +35,7 @@ class Turn:
     missed: float
 
 
-@dataclass(frozen=True, slots=True)
-class Stack:
+class Stack(NamedTuple):
     """The rows that a fold works on: directions first, room for what lies outside them below.
 
     Attributes
