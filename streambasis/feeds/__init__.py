@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from streambasis.feeds.broker import Broker
 from streambasis.feeds.files import open_feed
+from streambasis.feeds.keys import Keys
 from streambasis.feeds.reading import (
     BATCH_ROWS,
     Batch,
@@ -19,6 +20,7 @@ __all__ = [
     "Broker",
     "Feed",
     "FeedOptions",
+    "Keys",
     "Malformed",
     "Position",
     "open_feed",

@@ -44,15 +44,17 @@ def damage_named(name: str, format_name: str) -> Iterator[None]:
 
 def samples_of(batch: pa.RecordBatch, columns: Columns) -> Rows:
     """Return the rows of an Arrow batch that hold samples, and what is wrong with the others."""
-    rows = Rows.empty(len(columns.channels), columns.time is not None)
-    values = np.empty((len(batch), len(columns.channels)))
-    values_of((batch.column(name) for name in columns.channels), values)
+    rows = Rows.empty(len(columns.read), columns.time is not None)
+    values = np.empty((len(batch), len(columns.read)))
+    values_of((batch.column(name) for name in columns.read), values, columns.keys)
     lines = np.arange(len(batch))
     times = None
     if columns.time is not None:
         times, missing, outside = times_of(batch.column(columns.time), columns)
         rows.note_times(lines, missing, outside, columns.time)
-    rows.add(values, times, lines, columns.channels)
+    if columns.keys is not None:
+        rows.note_keys(lines, values[:, -1], columns.keys.column)
+    rows.add(values, times, lines, columns.read)
     return rows
 
 
@@ -129,12 +131,12 @@ class ParquetFeed(_TableFeed):
         with damage_named(name, self.format_name):
             # read, not mapped: a mapped file that somebody cuts short kills the process
             self._file = pq.ParquetFile(path, memory_map=False)
-            self.columns = choose(name, self._file.schema_arrow, channels, time)
+            self.columns = choose(name, self._file.schema_arrow, channels, time, options.keys)
             self.rows = self._file.metadata.num_rows
         self._begin(position, _identity(path, whole=True))
 
     def _record_batches(self, skip: int) -> Iterator[tuple[int, pa.RecordBatch | None]]:
-        wanted = [*self.columns.channels, *([self.columns.time] if self.columns.time else [])]
+        wanted = [*self.columns.read, *([self.columns.time] if self.columns.time else [])]
         first = 0
         groups: list[int] = []
         for group in range(self._file.metadata.num_row_groups):
@@ -190,7 +192,7 @@ class ArrowFeed(_TableFeed):
                 stream = pa.ipc.open_stream(self._source)
                 self._read = lambda: iter(stream)
                 schema = stream.schema
-            self.columns = choose(name, schema, channels, time)
+            self.columns = choose(name, schema, channels, time, options.keys)
         self._begin(position, _identity(path, whole=is_file))
 
     def _record_batches(self, skip: int) -> Iterator[tuple[int, pa.RecordBatch | None]]:
@@ -227,7 +229,7 @@ class ArrowPipeFeed(_TableFeed):
         self._bytes = _Exactly(source, beginning)
         with damage_named(name, self.format_name):
             self._stream = pa.ipc.open_stream(pa.PythonFile(self._bytes, mode="r"))
-            self.columns = choose(name, self._stream.schema, channels, time)
+            self.columns = choose(name, self._stream.schema, channels, time, options.keys)
         self._begin(position, {})
 
     def _record_batches(self, skip: int) -> Iterator[tuple[int, pa.RecordBatch | None]]:

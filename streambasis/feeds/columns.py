@@ -13,6 +13,7 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from streambasis.errors import FeedError
+from streambasis.feeds.keys import Keys
 
 UNITS = {"s": 10**9, "sec": 10**9, "ms": 10**6, "us": 10**3, "ns": 1}
 """Nanoseconds per unit; the name of a time column may end in one, as in ``time_ms``."""
@@ -40,15 +41,27 @@ class Columns:
         Name of the time column.
     unit : int or None
         Nanoseconds per unit where the time column holds numbers; None where it holds timestamps.
+    keys : Keys or None
+        The column of keys, where several feeds are told apart; its number follows the channels.
     """
 
     channels: tuple[str, ...]
     time: str | None
     unit: int | None
+    keys: Keys | None = None
+
+    @property
+    def read(self) -> tuple[str, ...]:
+        """Names of the numbers that a reader gives for each row."""
+        return self.channels if self.keys is None else (*self.channels, self.keys.column)
 
 
 def choose(
-    source: str, schema: pa.Schema, channels: Sequence[str] | None, time: str | None
+    source: str,
+    schema: pa.Schema,
+    channels: Sequence[str] | None,
+    time: str | None,
+    keys: Keys | None = None,
 ) -> Columns:
     """Choose the time column and the channels among the columns of a feed.
 
@@ -62,6 +75,8 @@ def choose(
         The channels asked for; None takes every column but the time.
     time : str or None
         The time column asked for; None looks for the one obvious candidate.
+    keys : Keys or None
+        The column of keys, if there is to be one.
 
     Raises
     ------
@@ -83,12 +98,17 @@ def choose(
         for name in wanted:
             if wanted.count(name) > 1:
                 raise FeedError(f"{source}: channel {name!r} is asked for twice")
+    if keys is not None:
+        _require(source, names, keys.column)
+        if keys.column in (time, *(wanted or [])):
+            raise FeedError(f"{source}: the key {keys.column!r} cannot be time or channel as well")
+    reserved = [] if keys is None else [keys.column]
     if time is None:
-        time = _find_time(source, schema, wanted or [])
+        time = _find_time(source, schema, [*(wanted or []), *reserved])
     else:
         _require(source, names, time)
     if wanted is None:
-        wanted = [name for name in names if name != time]
+        wanted = [name for name in names if name not in (time, *reserved)]
         for position, name in enumerate(names):
             if not name:
                 raise FeedError(
@@ -107,7 +127,7 @@ def choose(
                 f"{source}: column {name!r} is not numeric ({_described(kind)}); leave it out by "
                 "choosing the channels by name"
             )
-    return Columns(tuple(wanted), time, _unit(source, schema, time))
+    return Columns(tuple(wanted), time, _unit(source, schema, time), keys)
 
 
 def _require(source: str, names: list[str], name: str) -> None:
@@ -172,9 +192,17 @@ def _described(kind: pa.DataType) -> str:
     return "text" if pa.types.is_string(kind) or pa.types.is_large_string(kind) else str(kind)
 
 
-def values_of(columns: Iterable[pa.Array], out: NDArray[np.float64]) -> None:
-    """Write numeric Arrow columns to ``out``, float64 (m, n); a null becomes NaN."""
+def values_of(
+    columns: Iterable[pa.Array], out: NDArray[np.float64], keys: Keys | None = None
+) -> None:
+    """Write numeric Arrow columns to ``out``, float64 (m, n); a null becomes NaN.
+
+    With ``keys`` the last column is that of the keys.
+    """
     for position, column in enumerate(columns):
+        if keys is not None and position == out.shape[1] - 1:
+            out[:, position] = keys.numbers(column)
+            continue
         if not pa.types.is_float64(column.type):
             column = column.cast(pa.float64(), safe=False)
         out[:, position] = column.to_numpy(zero_copy_only=False)

@@ -90,6 +90,9 @@ def open_feed(
         # needs paho-mqtt, which only the extra [watch] installs
         from streambasis.feeds.mqtt import MqttFeed
 
+        if options.keys is not None:
+            raise FeedError(f"{text}: keys are read from files and pipes, not from a topic")
+
         return MqttFeed(text, channels, time, options, position)
     if text == STANDARD_INPUT:
         return opening.standard_input()
@@ -169,8 +172,8 @@ class _Opening:
             if kind == "json" or (
                 kind is None and start.lstrip(b"\xef\xbb\xbf \r\n\t")[:1] == b"{"
             ):
-                return JsonRows(name, peek, self.channels, self.time)
-            return CsvRows(name, peek, self.channels, self.time)
+                return JsonRows(name, peek, self.channels, self.time, self.options.keys)
+            return CsvRows(name, peek, self.channels, self.time, self.options.keys)
 
         return make
 

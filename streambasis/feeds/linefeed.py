@@ -98,7 +98,7 @@ class LineFeed(PieceFeed):
 
     def _piece(self, lines: Lines) -> Piece:
         if lines.refused is not None:
-            rows = Rows.empty(len(self.columns.channels), self.columns.time is not None)
+            rows = Rows.empty(len(self.columns.read), self.columns.time is not None)
             rows.faults[0] = lines.refused
         else:
             rows = self._parser.parse(lines)
@@ -125,7 +125,7 @@ class LineFeed(PieceFeed):
             raise FeedError(f"{self.name}: {reason}")
         start = Lines(b"", np.empty(0, np.int64), 0, 1, 0, True)
         identity = self._reader.source.identity()
-        nothing = np.empty((0, len(self.columns.channels)))
+        nothing = np.empty((0, len(self.columns.read)))
         times = None if self.columns.time is None else np.empty(0, np.int64)
         return Piece(
             nothing,

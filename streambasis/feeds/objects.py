@@ -14,6 +14,7 @@ import pyarrow as pa
 
 from streambasis.errors import FeedError
 from streambasis.feeds.columns import MOST_NANOSECONDS, Columns, choose
+from streambasis.feeds.keys import Keys
 from streambasis.feeds.lines import Lines
 from streambasis.feeds.rows import Rows
 from streambasis.times import NANOSECONDS
@@ -74,7 +75,11 @@ def moment(text: str) -> int:
 
 
 def columns_of(
-    name: str, found: dict[str, Any], channels: Sequence[str] | None, time: str | None
+    name: str,
+    found: dict[str, Any],
+    channels: Sequence[str] | None,
+    time: str | None,
+    keys: Keys | None = None,
 ) -> Columns:
     """Choose channels and time among the keys of an object.
 
@@ -83,7 +88,8 @@ def columns_of(
     FeedError
         As of :func:`streambasis.feeds.columns.choose`.
     """
-    return choose(name, pa.schema([(key, _kind(found[key])) for key in found]), channels, time)
+    schema = pa.schema([(key, _kind(found[key])) for key in found])
+    return choose(name, schema, channels, time, keys)
 
 
 def _kind(value: Any) -> pa.DataType:
@@ -137,6 +143,11 @@ class ObjectReader:
             row.append(value)
         if not present:
             raise RowError("none of the channels is in it")
+        keys = self.columns.keys
+        if keys is not None:
+            row.append(keys.number(found.get(keys.column)))
+            if np.isnan(row[-1]):
+                raise RowError(f"{keys.column!r}: no key (text or a whole number)")
         return row
 
     def time(self, found: dict[str, Any]) -> int:
@@ -179,12 +190,17 @@ class JsonRows:
         What the feed is called in messages.
     peek : bytes
         The first lines; the first whole object names the channels.
-    channels, time
+    channels, time, keys
         As of :func:`streambasis.feeds.open_feed`.
     """
 
     def __init__(
-        self, name: str, peek: bytes, channels: Sequence[str] | None, time: str | None
+        self,
+        name: str,
+        peek: bytes,
+        channels: Sequence[str] | None,
+        time: str | None,
+        keys: Keys | None = None,
     ) -> None:
         for line in peek.split(b"\n"):
             try:
@@ -194,7 +210,7 @@ class JsonRows:
             break
         else:
             raise FeedError(f"{name}: none of the first lines is a JSON object")
-        self.columns = columns_of(name, found, channels, time)
+        self.columns = columns_of(name, found, channels, time, keys)
         self._reader = ObjectReader(self.columns)
 
     def begin(self, line: bytes) -> bool:
@@ -204,7 +220,7 @@ class JsonRows:
 
     def parse(self, lines: Lines) -> Rows:
         """Parse lines; blank ones hold no row."""
-        rows = Rows.empty(len(self.columns.channels), self.columns.time is not None)
+        rows = Rows.empty(len(self.columns.read), self.columns.time is not None)
         values, times, kept = [], [], []
         for index in range(len(lines)):
             line = lines.text(index)

@@ -16,6 +16,7 @@ from streambasis.errors import FeedError
 from streambasis.feeds.ahead import Ahead
 from streambasis.feeds.broker import WHEN_FULL, Broker
 from streambasis.feeds.columns import Columns
+from streambasis.feeds.keys import Keys
 
 BATCH_ROWS = 1024
 """Samples per batch. Batches are cut at the same sample numbers whatever the format and its own
@@ -152,6 +153,9 @@ class FeedOptions:
     broker : Broker or None
         How to reach a broker; None takes user and password from the environment and the defaults
         for the rest.
+    keys : Keys or None
+        The column that tells several feeds in one source apart: then the values of a batch have
+        one column more, the number of each row's key.
     """
 
     format: str | None = None
@@ -163,6 +167,7 @@ class FeedOptions:
     queue: int = 1 << 16
     ahead: bool = False
     broker: Broker | None = None
+    keys: Keys | None = None
 
     def __post_init__(self) -> None:
         if self.format not in (None, *FORMATS):
@@ -440,7 +445,7 @@ class _Held:
 
     def __init__(self, first: int, columns: Columns) -> None:
         self.first = first
-        self._width = len(columns.channels)
+        self._width = len(columns.read)
         self._timed = columns.time is not None
         self._clear()
 

@@ -60,6 +60,11 @@ class Rows:
                 f"column {name!r}: the time is no number of seconds within 292 years"
             )
 
+    def note_keys(self, lines: NDArray[np.int64], numbers: NDArray[np.float64], name: str) -> None:
+        """Note the rows without a key."""
+        for row in np.flatnonzero(np.isnan(numbers)):
+            self.faults[int(lines[row])] = f"column {name!r}: no key (text or a whole number)"
+
     def add(
         self,
         values: NDArray[np.float64],

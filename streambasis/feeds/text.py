@@ -15,6 +15,7 @@ from pyarrow import csv as arrow_csv
 
 from streambasis.errors import FeedError
 from streambasis.feeds.columns import choose, times_of, values_of
+from streambasis.feeds.keys import Keys
 from streambasis.feeds.lines import Lines
 from streambasis.feeds.rows import Rows
 
@@ -32,7 +33,7 @@ class CsvRows:
         What the feed is called in messages.
     peek : bytes
         The first lines of the file.
-    channels, time
+    channels, time, keys
         As of :func:`streambasis.feeds.open_feed`.
 
     Notes
@@ -44,7 +45,12 @@ class CsvRows:
     """
 
     def __init__(
-        self, name: str, peek: bytes, channels: Sequence[str] | None, time: str | None
+        self,
+        name: str,
+        peek: bytes,
+        channels: Sequence[str] | None,
+        time: str | None,
+        keys: Keys | None = None,
     ) -> None:
         self._name = name
         first, _, body = peek.partition(b"\n")
@@ -62,8 +68,10 @@ class CsvRows:
         if all(_is_number(column) for column in self._names):
             raise FeedError(f"{name}: the first line holds numbers; it should hold column names")
         schema = self._types(body)
-        self.columns = choose(name, schema, channels, time)
+        self.columns = choose(name, schema, channels, time, keys)
         self._kinds = {column: pa.float64() for column in self.columns.channels}
+        if keys is not None:
+            self._kinds[keys.column] = pa.string()
         if self.columns.time is not None:
             self._kinds[self.columns.time] = self._time_kind(schema.field(self.columns.time).type)
         self._prepare()
@@ -147,7 +155,7 @@ class CsvRows:
 
     def parse(self, lines: Lines) -> Rows:
         """Parse lines; blank ones hold no row."""
-        rows = Rows.empty(len(self.columns.channels), self.columns.time is not None)
+        rows = Rows.empty(len(self.columns.read), self.columns.time is not None)
         if not len(lines):
             return rows
         data = np.frombuffer(lines.data, np.uint8)
@@ -186,13 +194,15 @@ class CsvRows:
 
     def _take(self, table: pa.Table, kept: NDArray[np.int64], rows: Rows) -> None:
         batch = table.combine_chunks().to_batches()[0]
-        values = np.empty((len(batch), len(self.columns.channels)))
-        values_of(batch.columns[: values.shape[1]], values)
+        values = np.empty((len(batch), len(self.columns.read)))
+        values_of(batch.columns[: values.shape[1]], values, self.columns.keys)
+        if self.columns.keys is not None:
+            rows.note_keys(kept, values[:, -1], self.columns.keys.column)
         times = None
         if self.columns.time is not None:
             times, missing, outside = times_of(batch.columns[-1], self.columns)
             rows.note_times(kept, missing, outside, self.columns.time)
-        rows.add(values, times, kept, self.columns.channels)
+        rows.add(values, times, kept, self.columns.read)
 
     def _faults(self, lines: Lines, kept: NDArray[np.int64]) -> dict[int, str]:
         """Return the lines that are seen to be malformed, with the reason of each."""
@@ -262,6 +272,8 @@ def _all_fit(column: pa.ChunkedArray, kind: pa.DataType) -> bool:
 
 
 def _fits(text: str, kind: pa.DataType) -> bool:
+    if pa.types.is_string(kind):
+        return True
     text = text.strip()
     if text in _NO_VALUE:
         return True
