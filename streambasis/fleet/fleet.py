@@ -189,6 +189,17 @@ class Fleet:
             return held + self._room.nbytes
 
     @property
+    def learning(self) -> int:
+        """Feeds whose baseline is not complete."""
+        return len(self._members.learning)
+
+    @property
+    def parts(self) -> Mapping[str, State]:
+        """What else was given to the last :meth:`commit`."""
+        committed = None if self._folder is None else self._folder.committed
+        return {} if committed is None else committed.parts
+
+    @property
     def position(self) -> Any:
         """What was given to the last :meth:`commit`; None before the first."""
         committed = None if self._folder is None else self._folder.committed
@@ -370,6 +381,11 @@ class Fleet:
         """The events of each feed, looked up when they are asked for."""
         return _Events(self)
 
+    def _events_of(self, key: Key) -> list[Event]:
+        with self._lock:
+            held = self._members.live.get(key)
+            return self.monitor(key).events if held is None else held.events
+
     def label(self, key: Key, event: int, text: str | None) -> None:
         """Give an event of a feed a text that its recurrences name; None takes it away."""
         with self._lock:
@@ -380,11 +396,11 @@ class Fleet:
         with self._lock:
             self._brought(key).adopt(event)
 
-    def finish(self) -> None:
-        """Close what is open in every feed, at the end of all of them."""
+    def finish(self, key: Key | None = None) -> None:
+        """Close what is open in one feed, or in every feed, at the end of it."""
         with self._lock:
-            for key in self.keys:
-                self._brought(key).finish()
+            for each in self.keys if key is None else (key,):
+                self._brought(each).finish()
 
     def _brought(self, key: Key) -> NoveltyMonitor:
         """Return the monitor of a feed, in memory and about to change."""
@@ -503,7 +519,7 @@ class _Events(Mapping[Key, list[Event]]):
     def __getitem__(self, key: Key) -> list[Event]:
         if key not in self._fleet:
             raise KeyError(key)
-        return self._fleet.monitor(key).events
+        return self._fleet._events_of(key)
 
     def __iter__(self) -> Iterator[Key]:
         return iter(self._fleet.keys)

@@ -51,6 +51,36 @@ class Committed:
     parts: dict[str, State] = field(default_factory=dict)
 
 
+def kept_position(path: Path) -> Any:
+    """Return the position of the last commit in a folder, None where there is none.
+
+    Raises
+    ------
+    HomeError
+        If the folder holds something else.
+    """
+    return _committed(path / INDEX).position if (path / INDEX).exists() else None
+
+
+def _committed(path: Path) -> Committed:
+    try:
+        state = read_state(path)
+        if state.kind != KIND:
+            raise HomeError(f"{path}: holds a {state.kind}, not a fleet")
+        keys = state.facts["keys"]
+        table = state.take("places", np.int64, (len(keys), 3)).tolist()
+        left = state.take("learning", np.int64, (len(keys),)).tolist()
+    except SnapshotError as error:
+        raise HomeError(f"{error}; the fleet cannot go on from it") from error
+    return Committed(
+        state.facts["about"],
+        {key: Place(*row) for key, row in zip(keys, table, strict=True)},
+        {key: count for key, count in zip(keys, left, strict=True) if count},
+        state.facts["position"],
+        state.parts,
+    )
+
+
 class Folder:
     """The files of a fleet.
 
@@ -85,7 +115,7 @@ class Folder:
             try:
                 remove_leftovers(path)
                 if (path / INDEX).exists():
-                    self.committed = self._read()
+                    self.committed = _committed(path / INDEX)
                 elif (path / FEEDS).exists() and any((path / FEEDS).iterdir()):
                     raise HomeError(
                         f"{path}: holds feeds without the {INDEX} that says which of them count; "
@@ -98,25 +128,6 @@ class Folder:
                 raise
         except OSError as error:
             raise self.named(error) from None
-
-    def _read(self) -> Committed:
-        path = self.path / INDEX
-        try:
-            state = read_state(path)
-            if state.kind != KIND:
-                raise HomeError(f"{path}: holds a {state.kind}, not a fleet")
-            keys = state.facts["keys"]
-            table = state.take("places", np.int64, (len(keys), 3)).tolist()
-            left = state.take("learning", np.int64, (len(keys),)).tolist()
-        except SnapshotError as error:
-            raise HomeError(f"{error}; the fleet cannot go on from it") from error
-        return Committed(
-            state.facts["about"],
-            {key: Place(*row) for key, row in zip(keys, table, strict=True)},
-            {key: count for key, count in zip(keys, left, strict=True) if count},
-            state.facts["position"],
-            state.parts,
-        )
 
     def commit(self, committed: Committed) -> None:
         """Make the snapshots that these places name, and everything else in it, what counts.

@@ -56,6 +56,12 @@ OPTIONS = {
         "The time column. Default: found by itself where there is one obvious candidate.",
         "COLUMN",
     ),
+    "key": Option(
+        values.text,
+        "The column that tells several feeds in one file or pipe apart: each of its values has a "
+        "monitor of its own.",
+        "COLUMN",
+    ),
     "format": Option(
         values.one_of("csv", "json"),
         "csv or json, for text whose first bytes should not decide.",

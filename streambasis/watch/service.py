@@ -13,15 +13,19 @@ from dataclasses import replace
 from typing import TextIO
 
 from streambasis.errors import FeedError, SettingError
-from streambasis.feeds import Broker, Feed, FeedOptions, Position, open_feed
+from streambasis.feeds import Broker, Feed, FeedOptions, Keys, Position, open_feed
 from streambasis.feeds.broker import CREDENTIALS, credentials_of
+from streambasis.fleet import Fleet
+from streambasis.fleet.folder import kept_position
 from streambasis.monitor import NoveltyMonitor
 from streambasis.warming import warm_up
 from streambasis.watch.health import Health, Listener
 from streambasis.watch.home import Home
+from streambasis.watch.keyed import KeyedRun, KeyedSummary
 from streambasis.watch.loop import Run
 from streambasis.watch.options import spelled
 from streambasis.watch.readiness import Readiness
+from streambasis.watch.records import Records
 from streambasis.watch.reporting import Summary
 from streambasis.watch.settings import STANDARD_INPUT, Settings, changed
 from streambasis.watch.stopping import Signals
@@ -187,17 +191,19 @@ class _Service:
         self._health = Health(self._vitals, settings.silent_after)
         self._run: Run | None = None
         self._warming: threading.Thread | None = None
-        self.terminal = Terminal(out, err, as_json=settings.json, quiet=settings.quiet)
+        self.terminal = Terminal(
+            out, err, as_json=settings.json, quiet=settings.quiet, key=settings.key
+        )
         self.readiness = Readiness(self._vitals, self.terminal.warned)
 
-    def run(self, asked: threading.Event) -> Summary | None:
+    def run(self, asked: threading.Event) -> Summary | KeyedSummary | None:
         """Run until the feed ends or somebody asks to stop; None if that was before it began."""
         settings, name = self._settings, named_feed(self._settings)
         with ExitStack() as held:
             held.enter_context(self.readiness)
             options = replace(feed_options(settings), stop=asked)
             home = None
-            if settings.home is not None:
+            if settings.home is not None and settings.key is None:
                 format = "parquet" if settings.parquet else "arrow"
                 home = held.enter_context(Home(settings.home, format))
             if settings.metrics is not None:
@@ -207,6 +213,8 @@ class _Service:
             self._health.opened()
             if is_address(name) or name == STANDARD_INPUT or settings.follow:
                 held.enter_context(Listener(self._health, self.terminal.warned))
+            if settings.key is not None:
+                return self._watch_keyed(settings.key, options, asked)
             if is_address(name) or name == STANDARD_INPUT:
                 # these wait for the first sample, which may be hours away
                 self.readiness.ready()
@@ -259,6 +267,39 @@ class _Service:
         self.readiness.ready()
         with self.terminal:
             return self._run(asked)
+
+    def _watch_keyed(self, key: str, options: FeedOptions, asked: threading.Event) -> KeyedSummary:
+        """Run a monitor for each value of a column, from the home's last commit if there is one."""
+        settings, keys = self._settings, Keys(key)
+        options = replace(options, keys=keys)
+        with ExitStack() as held:
+            home = settings.home
+            position = None if home is None else kept_position(home)
+            feed = held.enter_context(opened(settings, options, position))
+            # the time is given beside the rows: no column is looked for
+            config = {
+                "channels": feed.columns.channels,
+                "baseline": settings.baseline,
+                "false_alarm": settings.false_alarm,
+                "half_life": settings.half_life or None,
+            }
+            fleet = held.enter_context(Fleet(config, key=key, home=home))
+            if len(fleet):
+                self.terminal.noted(f"{home}: goes on with {len(fleet):,} feeds")
+            self.terminal.expect(feed.rows)
+            records = None if home is None else functools.partial(Records, home)
+            run = KeyedRun(
+                feed,
+                keys,
+                fleet,
+                self.terminal,
+                records=records,
+                every=settings.snapshot_every,
+                adopt_after=settings.adopt_after,
+            )
+            self.readiness.ready()
+            with self.terminal:
+                return run(asked)
 
     @property
     def compiles(self) -> bool:

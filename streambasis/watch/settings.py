@@ -27,6 +27,7 @@ class Settings:
     feed: str | None = None
     channels: tuple[str, ...] | None = None
     time: str | None = None
+    key: str | None = None
     format: str | None = None
     follow: bool = False
     strict: bool = False

@@ -18,6 +18,7 @@ from rich.progress import (
 
 from streambasis.monitor import Event
 from streambasis.times import NANOSECONDS
+from streambasis.watch.keyed import KeyedSummary
 from streambasis.watch.reporting import Summary
 
 MOST_NAMES = 4
@@ -35,6 +36,8 @@ class Terminal:
         Closed events go to ``out`` as JSON lines, everything made for reading to ``err``.
     quiet : bool
         Nothing made for reading is written but warnings.
+    key : str, optional
+        What of an event names its feed, where there are several.
 
     Attributes
     ----------
@@ -47,8 +50,11 @@ class Terminal:
     terminal, and none where JSON lines would run through it.
     """
 
-    def __init__(self, out: TextIO, err: TextIO, *, as_json: bool, quiet: bool) -> None:
+    def __init__(
+        self, out: TextIO, err: TextIO, *, as_json: bool, quiet: bool, key: str | None = None
+    ) -> None:
         self.quiet = quiet
+        self._key = key
         self._json = out if as_json else None
         self._err = err
         self._lines = err if as_json else out
@@ -95,7 +101,7 @@ class Terminal:
     def opened(self, event: Event) -> None:
         """Show that an event has opened."""
         self._write(
-            f"event {event['event']} opened   {when(event, 'start')}  "
+            f"{self._title(event)} opened   {when(event, 'start')}  "
             f"{event['peak']:.1f} x limit  {carriers(event, shares=False)}"
         )
 
@@ -106,7 +112,7 @@ class Terminal:
             label = f" ({event['label']})" if event["label"] else ""
             repeats = f"  repeats event {event['repeats']}{label}, cosine {event['cosine']:.2f}"
         self._write(
-            f"event {event['event']} closed   {when(event, 'end')}  "
+            f"{self._title(event)} closed   {when(event, 'end')}  "
             f"peak {event['peak']:.1f} x limit  {carriers(event, shares=True)}{repeats}"
         )
         if self._json is not None:
@@ -115,7 +121,7 @@ class Terminal:
 
     def adopted(self, event: Event) -> None:
         """Show that an event counts as known behaviour from now on."""
-        self._write(f"event {event['event']} adopted  it lasts: known behaviour from now on")
+        self._write(f"{self._title(event)} adopted  it lasts: known behaviour from now on")
 
     def warned(self, warning: str) -> None:
         """Show what somebody must know, on standard error and as one line, quiet or not."""
@@ -131,10 +137,18 @@ class Terminal:
         if not self.quiet:
             self.warned(note)
 
-    def summary(self, summary: Summary) -> None:
+    def summary(self, summary: Summary | KeyedSummary) -> None:
         """Show what the run came to."""
-        for line in summary_lines(summary):
+        if isinstance(summary, KeyedSummary):
+            lines = keyed_lines(summary)
+        else:
+            lines = summary_lines(summary)
+        for line in lines:
             self._write(line)
+
+    def _title(self, event: Event) -> str:
+        feed = "" if self._key is None else f"{one_line(event[self._key])}  "
+        return f"{feed}event {event['event']}"
 
     def _write(self, line: str) -> None:
         if self.quiet:
@@ -169,6 +183,22 @@ def carriers(event: Event, *, shares: bool) -> str:
     shown = [f"{name} {100 * part[name]:.0f} %" if shares else name for name in names]
     more = len(event["channels"]) - len(names)
     return ", ".join(shown) + (f" and {more} more" if more > 0 else "")
+
+
+def keyed_lines(summary: KeyedSummary) -> list[str]:
+    """Return the summary of a run over many feeds, one figure a line."""
+    learning = f", {summary.learning:,} still in their baseline" if summary.learning else ""
+    rate = summary.samples / max(summary.seconds, 1e-9)
+    rows = [
+        ("feeds", f"{summary.feeds:,}{learning}"),
+        ("samples", f"{summary.samples:,}"),
+        ("events", f"{summary.events:,}, {summary.repeats:,} of them repeating an earlier one, "
+                   f"{summary.adopted:,} adopted as known behaviour"),
+        ("speed", f"{rate:,.0f} samples per second"),
+    ]  # fmt: skip
+    if summary.malformed:
+        rows.insert(2, ("malformed", f"{summary.malformed:,} rows passed over"))
+    return ["", *(f"{name:<15}{text}" for name, text in rows)]
 
 
 def summary_lines(summary: Summary) -> list[str]:
