@@ -18,7 +18,7 @@ for name in ("OPENBLAS_CORETYPE", "OPENBLAS_L2_SIZE"):
 
 from bench import harness, report  # noqa: E402 - numpy reads those variables when it loads
 
-QUESTIONS = ("grow", "window", "principal", "snapshot", "detect", "feeds", "daemon")
+QUESTIONS = ("grow", "window", "principal", "snapshot", "detect", "feeds", "daemon", "fleet")
 ON_REQUEST = ("window_soak", "principal_soak")
 """Long ones, that run only when they are named."""
 

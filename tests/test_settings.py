@@ -30,6 +30,7 @@ GIVEN: list[tuple[str, Any, str, Any]] = [
     ("channels", ("a,b", '"c, d"'), 'channels = ["a", "b", "c, d"]', ("a", "b", "c, d")),
     ("channels", ("a",), 'channels = "a"', ("a",)),
     ("time", "when", 'time = "when"', "when"),
+    ("key", "pump", 'key = "pump"', "pump"),
     ("format", "json", 'format = "json"', "json"),
     ("follow", True, "follow = true", True),
     ("strict", True, "strict = true", True),

@@ -19,6 +19,7 @@ from streambasis.fleet import Fleet
 from streambasis.monitor import Event
 from streambasis.state import State
 from streambasis.watch.records import Records
+from streambasis.watch.vitals import Vitals
 
 COMMIT_SHARE = 0.1
 """Largest part of the time that commits may take: they write every feed that has gone on."""
@@ -87,6 +88,8 @@ class KeyedRun:
         Samples, and seconds, after which what was taken is committed.
     adopt_after : int
         An event still open after so many samples of its feed is adopted; 0 never adopts.
+    vitals : Vitals
+        Readings, brought up to date after each batch; those of one basis stay as they are.
     """
 
     def __init__(
@@ -99,11 +102,13 @@ class KeyedRun:
         records: Callable[[int, int], Records] | None,
         every: tuple[int, float],
         adopt_after: int,
+        vitals: Vitals,
     ) -> None:
         if keys.column in EVENT_KEYS:
             raise SettingError(f"key={keys.column!r}: a key of that name is in every event")
         self._feed, self._keys, self._fleet, self._hearer = feed, keys, fleet, hearer
         self._every, self._adopt_after = every, adopt_after
+        self._vitals = vitals
         self._opened: dict[str, int] = {}
         self._open: dict[str, dict[int, int]] = {}
         self._counts: dict[str, int] = {}
@@ -144,6 +149,7 @@ class KeyedRun:
             place = batch.place
             self._samples += len(batch)
             self._hearer.advance(self._samples)
+            self._read_vitals()
             if self._due():
                 self._commit(place())
             if asked.is_set():
@@ -163,6 +169,14 @@ class KeyedRun:
             seconds=time.perf_counter() - start,
             **self._counters,
         )
+
+    def _read_vitals(self) -> None:
+        vitals = self._vitals
+        vitals.samples, vitals.malformed = self._samples, self._malformed
+        vitals.events = self._counters["events"]
+        vitals.open_events = sum(len(events) for events in self._open.values())
+        vitals.batches += 1
+        vitals.taken_at = time.time()
 
     def _due(self) -> bool:
         samples, then = self._committed_at
@@ -189,6 +203,7 @@ class KeyedRun:
         self._fleet.commit(position, {"run": State("KeyedRun", facts, {"counts": counts})})
         if position is not None:
             self._feed.commit(position)
+        self._vitals.committed_at = time.time()
         now = time.monotonic()
         self._committed_at, self._cost = (self._samples, now), now - start
 
@@ -240,6 +255,7 @@ class KeyedRun:
         table = pa.table({self._keys.column: column, **columns})
         at = None if times is None else times.view("datetime64[ns]")
         decisions = self._fleet.push_many(table, at=at)
+        self._vitals.novel += pc.sum(decisions["novel"]).as_py() or 0
         found, counts = np.unique(codes, return_counts=True)
         for code, count in zip(found.tolist(), counts.tolist(), strict=True):
             key = self._keys.names[code]

@@ -271,6 +271,8 @@ class _Service:
     def _watch_keyed(self, key: str, options: FeedOptions, asked: threading.Event) -> KeyedSummary:
         """Run a monitor for each value of a column, from the home's last commit if there is one."""
         settings, keys = self._settings, Keys(key)
+        if settings.parquet:
+            raise SettingError("parquet: decisions of many feeds are kept as Arrow IPC files only")
         options = replace(options, keys=keys)
         with ExitStack() as held:
             home = settings.home
@@ -296,6 +298,7 @@ class _Service:
                 records=records,
                 every=settings.snapshot_every,
                 adopt_after=settings.adopt_after,
+                vitals=self._vitals,
             )
             self.readiness.ready()
             with self.terminal:
