@@ -1,74 +1,20 @@
-"""How well the novelty monitor detects: limits, power, attribution, recurrence, and its speed."""
+"""How well the novelty monitor detects: limits, power, open data, events, and its speed."""
 
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from bench.detect_events import attribution, hard_cases, recurrence
+from bench.detect_open import open_data
 from bench.harness import Table, interleaved
+from bench.plants import BASELINE, NOISES, Plant, sources_of
 from streambasis import NoveltyMonitor
 
 RATES = (1e-2, 1e-3, 1e-4)
-BASELINE = 5000
-
-
-def white(rng: np.random.Generator, m: int, n: int) -> NDArray[np.float64]:
-    """Return normal noise of unit variance."""
-    return rng.standard_normal((m, n))
-
-
-def laplace(rng: np.random.Generator, m: int, n: int) -> NDArray[np.float64]:
-    """Return Laplace noise of unit variance."""
-    return rng.laplace(scale=0.5**0.5, size=(m, n))
-
-
-def student(rng: np.random.Generator, m: int, n: int) -> NDArray[np.float64]:
-    """Return Student t noise with 5 degrees of freedom, scaled to unit variance."""
-    return rng.standard_t(5, size=(m, n)) * 0.6**0.5
-
-
-def autoregressive(rng: np.random.Generator, m: int, n: int) -> NDArray[np.float64]:
-    """Return normal AR(1) noise of unit variance, coefficient 0.7."""
-    from scipy.signal import lfilter
-
-    start = rng.standard_normal((1, n)) * 0.7
-    shocks = rng.standard_normal((m, n)) * 0.51**0.5
-    return np.asarray(lfilter([1.0], [1.0, -0.7], shocks, axis=0, zi=start)[0])
-
-
-NOISES: dict[str, Callable[[np.random.Generator, int, int], NDArray[np.float64]]] = {
-    "Gaussian": white,
-    "Laplace": laplace,
-    "Student t, 5": student,
-    "AR(1), 0.7": autoregressive,
-}
-
-
-class Plant:
-    """Channels that share sources, each with noise of its own size."""
-
-    def __init__(self, seed: int, n: int, sources: int, noise: str = "Gaussian") -> None:
-        self.rng = np.random.default_rng([seed, n, sources])
-        self.n, self.sources = n, sources
-        self.noise = NOISES[noise]
-        self.sizes = np.exp(self.rng.uniform(np.log(0.3), np.log(3.0), n))
-        self.loads = 1.5 * self.rng.standard_normal((sources, n))
-
-    def run(self, m: int) -> NDArray[np.float64]:
-        """Return ``m`` samples of ordinary running."""
-        out = self.noise(self.rng, m, self.n)
-        out *= self.sizes
-        out += self.rng.standard_normal((m, self.sources)) @ self.loads
-        return out
-
-
-def sources_of(n: int) -> int:
-    """Return how many sources a plant of so many channels has here."""
-    return max(2, min(8, n // 8 + 1))
 
 
 def false_alarms(quick: bool) -> Table:
@@ -146,146 +92,6 @@ def power(quick: bool) -> Table:
     return table
 
 
-def open_data(quick: bool) -> Table:
-    """Compare areas under the ROC curve with the residual of a batch PCA."""
-    from sklearn.datasets import load_digits, load_wine
-    from sklearn.decomposition import PCA
-    from sklearn.metrics import roc_auc_score
-    from sklearn.preprocessing import StandardScaler
-
-    table = Table(
-        "Open data: area under the ROC curve, one class against the others",
-        ["data", "class", "baseline", "channels", "rank", "monitor", "PCA residual",
-         "PCA residual, standardized"],
-    )  # fmt: skip
-    for name, data in (("digits", load_digits()), ("wine", load_wine())):
-        for own in (0,) if quick else (0, 1, 2):
-            rows = np.flatnonzero(data.target == own)
-            baseline = rows[::2] if len(rows) > 64 else rows[np.arange(len(rows)) % 3 > 0]
-            if len(baseline) < 32:
-                continue
-            rest = np.setdiff1d(np.arange(len(data.target)), baseline)
-            monitor = NoveltyMonitor(data.data.shape[1], baseline=len(baseline))
-            monitor.push_many(data.data[baseline])
-            scores = [monitor.push_many(data.data[rest])["spe"].to_numpy()]
-            for spread in (False, True):
-                scaler = StandardScaler(with_std=spread).fit(data.data[baseline])
-                pca = PCA(max(monitor.rank, 1)).fit(scaler.transform(data.data[baseline]))
-                z = scaler.transform(data.data[rest])
-                z = z - pca.inverse_transform(pca.transform(z))
-                scores.append(np.einsum("ij,ij->i", z, z))
-            areas = [round(float(roc_auc_score(data.target[rest] != own, s)), 4) for s in scores]
-            table.add(name, own, len(baseline), data.data.shape[1], monitor.rank, *areas)
-    table.notes.append(
-        "digits (Alpaydin & Kaynak 1998) and wine (Forina et al. 1988) as shipped with "
-        "scikit-learn; both PCA residuals have the monitor's rank. Digits are pixels of one unit, "
-        "which the unscaled residual takes for granted and no monitor of mixed channels can."
-    )
-    return table
-
-
-def with_fault(
-    plant: Plant, feed: NDArray[np.float64], fault: NDArray[np.float64], start: int, stop: int
-) -> NDArray[np.float64]:
-    """Return a feed with a fault, given in noise units, added to some of its samples."""
-    out = feed.copy()
-    out[start:stop] += fault * plant.sizes
-    return out
-
-
-def trained(plant: Plant, **settings: Any) -> tuple[NoveltyMonitor, NDArray[np.float64]]:
-    """Return a monitor with its baseline, and the projection on its residual space."""
-    monitor = NoveltyMonitor(plant.n, baseline=BASELINE, **settings)
-    monitor.push_many(plant.run(BASELINE))
-    vectors = monitor.basis.vectors / monitor.scale
-    return monitor, np.eye(plant.n) - vectors.T @ vectors
-
-
-def visible(
-    plant: Plant, monitor: NoveltyMonitor, outside: NDArray[np.float64],
-    shape: NDArray[np.float64], times: float, limit: float,
-) -> NDArray[np.float64]:  # fmt: skip
-    """Scale a fault, in noise units, so that it alone makes so many times the limit."""
-    seen = outside @ (shape * plant.sizes / monitor.scale)
-    return np.asarray(shape * np.sqrt(times * limit) / np.linalg.norm(seen))
-
-
-def attribution(quick: bool) -> Table:
-    """Count the events whose top channels are those of the fault."""
-    from streambasis.state import State
-
-    table = Table(
-        "Attribution: events whose top channels are the faulty ones, of 30 channels, 3 times the "
-        "limit",
-        ["faulty channels", "events", "event contributions", "single samples",
-         "single, squared residuals", "named exactly"],
-    )  # fmt: skip
-    rounds = 20 if quick else 60
-    plant = Plant(3, 30, 4)
-    monitor, outside = trained(plant)
-    start: State = monitor.to_state()
-    limit = float(monitor.push_many(plant.run(1))["limit"][0].as_py())
-    for count in (1, 2, 3):
-        hits = np.zeros(4)
-        for _ in range(rounds):
-            monitor = NoveltyMonitor.from_state(start)
-            channels = plant.rng.choice(plant.n, count, replace=False)
-            shape = np.zeros(plant.n)
-            shape[channels] = plant.rng.choice([-1.0, 1.0], count)
-            fault = visible(plant, monitor, outside, shape, 3.0, limit)
-            feed = with_fault(plant, plant.run(400), fault, 100, 160)
-            monitor.push_many(feed)
-            event = monitor.events[0]
-            true = {str(c) for c in channels}
-            top = list(event["contributions"])[:count]
-            single = list(monitor.contributions(feed[130]))[:count]
-            plain = np.abs(monitor.basis.residual(feed[130]) / monitor.scale)
-            hits += [
-                set(top) == true,
-                set(single) == true,
-                {str(c) for c in np.argsort(-plain)[:count]} == true,
-                set(event["channels"]) == true,
-            ]
-        table.add(count, rounds, *(round(float(h), 3) for h in hits / rounds))
-    table.notes.append("wanted: 0.95 for event contributions")
-    return table
-
-
-def recurrence(quick: bool) -> Table:
-    """Count the faults recognised when they come back, and the different ones taken for them."""
-    table = Table(
-        "Recurrence: the same fault at other strengths, and different faults, directions at least "
-        "60 degrees apart",
-        ["channels", "strength (of the limit)", "pairs", "recognised", "confused"],
-    )
-    rounds = 20 if quick else 60
-    for n in (16, 64):
-        plant = Plant(4, n, 4)
-        monitor, outside = trained(plant)
-        start = monitor.to_state()
-        limit = float(monitor.push_many(plant.run(1))["limit"][0].as_py())
-        for times in (1.5, 3.0, 10.0):
-            same = other = 0
-            for _ in range(rounds):
-                monitor = NoveltyMonitor.from_state(start)
-                shapes = [plant.rng.standard_normal(n)]
-                while len(shapes) < 2:
-                    shape = plant.rng.standard_normal(n)
-                    a, b = (outside @ (s * plant.sizes / monitor.scale) for s in (*shapes, shape))
-                    if abs(a @ b) <= 0.5 * np.linalg.norm(a) * np.linalg.norm(b):
-                        shapes.append(shape)
-                first, second = shapes
-                for shape, strength in ((first, 3.0), (first, times), (second, times)):
-                    fault = visible(plant, monitor, outside, shape, strength, limit)
-                    monitor.push_many(with_fault(plant, plant.run(400), fault, 100, 160))
-                found = [e["repeats"] for e in monitor.events]
-                same += found[1] == 0
-                other += any(f is not None for f in found[2:])
-            table.add(n, times, rounds, round(same / rounds, 3), round(other / rounds, 3))
-    table.notes.append("wanted: 0.95 recognised, 0.02 confused")
-    return table
-
-
 def speed(quick: bool) -> Table:
     """Time the whole monitor against the bare scoring and a batch-updated PCA."""
     from sklearn.decomposition import IncrementalPCA
@@ -332,7 +138,10 @@ def speed(quick: bool) -> Table:
 def run(quick: bool = False) -> list[Table]:
     """Answer all questions about detection."""
     tables = []
-    for question in (false_alarms, power, open_data, attribution, recurrence, speed):
+    questions = (
+        false_alarms, power, open_data, attribution, recurrence, hard_cases, speed,
+    )  # fmt: skip
+    for question in questions:
         start = time.perf_counter()
         table = question(quick)
         table.notes.append(f"{time.perf_counter() - start:.0f} s")

@@ -255,6 +255,11 @@ def test_slow_drift_is_followed_without_an_event() -> None:
     assert monitor.rank == 2
     assert table["novel"].to_numpy().mean() < 1e-3
     assert monitor.drift == pytest.approx(0.6, abs=0.1)
+    # what is left of a ramp is as old as the memory, 1,000 / log 2 samples
+    channel, far = next(iter(monitor.moved.items()))
+    assert channel == "c4"
+    assert far == pytest.approx(15.0 * (1.0 - 1443 / 20_000), rel=0.1)
+    assert from_bytes(to_bytes(monitor)).moved == monitor.moved
     still = NoveltyMonitor(NAMES, baseline=BASELINE)
     still.push_many(feed)
     assert still.events != []

@@ -96,7 +96,7 @@ class Model:
         self.basis.flush()
         self.limit.start(learnt.spe, learnt.roots)
         self.refresh([])
-        self.first_vectors = self.vectors
+        self.first_vectors, self.first_mean = self.vectors, self.mean
 
     def _set_up(self, names: tuple[str, ...], settings: Settings) -> None:
         """Make everything that the scaling and the settings determine."""
@@ -131,7 +131,7 @@ class Model:
     def nbytes(self) -> int:
         """Bytes of what is held."""
         arrays = [self._rows, self._held, self._runs, self.behaviour, self.first_vectors]
-        arrays += [self.vectors, self.mean, self.projection.directions]
+        arrays += [self.vectors, self.mean, self.first_mean, self.projection.directions]
         own: int = sum(array.nbytes for array in arrays)
         return own + self.basis.nbytes + self.known.nbytes
 
@@ -372,9 +372,18 @@ class Model:
         arrays = {name: owned(getattr(self.scaling, name)) for name in given}
         # vectors, energies and mean may be older than the basis, which folds what waited for its
         # block when it is saved: the samples of this block are judged by these to its end
-        held = ("adopted", "behaviour", "first_vectors", "vectors", "energies", "mean")
+        held = (
+            "adopted",
+            "behaviour",
+            "first_vectors",
+            "vectors",
+            "energies",
+            "mean",
+            "first_mean",
+        )
         arrays |= {name: owned(getattr(self, name)) for name in held}
         arrays |= {"held": owned(self._held), "runs": owned(self._runs)}
+        arrays["first_mean"] = owned(self.first_mean)
         parts = {
             "basis": self.basis.to_state(),
             "limit": self.limit.to_state(),
@@ -412,6 +421,9 @@ class Model:
         model.vectors = state.take("vectors", np.float64, (None, n))
         model.energies = state.take("energies", np.float64, (len(model.vectors),))
         model.mean = state.take("mean", np.float64, (n,), finite=True)
+        model.first_mean = model.mean
+        if "first_mean" in state.arrays:  # older snapshots begin to count at the load
+            model.first_mean = state.take("first_mean", np.float64, (n,), finite=True)
         model._held = state.take("held", np.float64, (n,))
         model._runs = state.take("runs", np.int64, (n,))
         model._stand_out()

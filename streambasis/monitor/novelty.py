@@ -200,12 +200,29 @@ class NoveltyMonitor:
 
     @property
     def drift(self) -> float:
-        """Largest principal angle between the baseline's subspace and today's, in radians."""
+        """Largest principal angle between the baseline's subspace and today's, in radians.
+
+        A level that creeps turns no subspace: see :attr:`moved`.
+        """
         with self._lock:
             if self._judge is None or self._judge.model.rank == 0:
                 return 0.0
             model = self._judge.model
             return _largest_angle(model.first_vectors, model.vectors)
+
+    @property
+    def moved(self) -> dict[str, float]:
+        """How far the mean of each channel has moved since the baseline, farthest first.
+
+        In standard deviations of the channel's noise. A change so slow that the basis follows it
+        makes no event; it is told here, and by :attr:`drift` where it turns the subspace.
+        """
+        with self._lock:
+            if self._judge is None:
+                return dict.fromkeys(self.channels, 0.0)
+            model = self._judge.model
+            far = model.mean - model.first_mean
+        return {self.channels[i]: float(far[i]) for i in np.argsort(-np.abs(far), kind="stable")}
 
     @property
     def basis(self) -> PrincipalBasis:
