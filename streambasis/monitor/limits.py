@@ -300,7 +300,7 @@ class SpeLimit:
             "false_alarm": self.false_alarm,
             "memory": None if math.isinf(self.memory) else self.memory,
             "value": self.value,
-            "count": self.count,
+            "taken": self.count,
             "threshold": self._threshold,
             "fitted": self._fitted,
             "mean": self.mean,
@@ -317,11 +317,12 @@ class SpeLimit:
         facts = state.facts
         memory = math.inf if facts["memory"] is None else facts["memory"]
         limit = cls(facts["method"], facts["false_alarm"], memory)
-        limit.value, limit.count = facts["value"], facts["count"]
+        older = "count" in facts
+        limit.value, limit.count = facts["value"], facts["count" if older else "taken"]
         limit._threshold, limit._fitted = facts["threshold"], facts["fitted"]
         limit.mean, limit._squares = facts["mean"], facts["squares"]
-        # older snapshots took every stretch for calm
-        limit.calm = Calm(*facts.get("calm", [0.0, math.inf, 0.0, math.inf]))
+        if not older:  # in older snapshots every stretch counted as calm
+            limit.calm = Calm(*facts["calm"])
         limit._excesses = state.take("excesses", np.float64, (None,), finite=True)
         limit._roots = state.take("roots", np.float64, (None,), finite=True)
         return limit

@@ -363,7 +363,7 @@ class Model:
     def to_state(self) -> State:
         """Hand over everything needed to go on."""
         facts = {
-            "rank": self.scaling.rank,
+            "shared": self.scaling.rank,
             "firsts": self.scaling.firsts,
             "t2_limit": self.t2_limit,
             "t2_count": self._t2_count,
@@ -396,14 +396,15 @@ class Model:
         """Build a model that goes on where the state was taken; standing events are to follow."""
         model = cls.__new__(cls)
         facts, parts, n = state.facts, state.parts, len(names)
+        # in older snapshots every first movement was news; levels count from the load on
+        older = "rank" in facts
         model.scaling = Scaling(
             state.take("centre", np.float64, (n,), finite=True),
             state.take("scale", np.float64, (n,), finite=True),
-            facts["rank"],
+            facts["rank" if older else "shared"],
             state.take("constant", np.bool_, (n,)),
             state.take("nearly", np.bool_, (n,)),
-            # older snapshots were made when every first movement was news
-            facts.get("firsts", False),
+            False if older else facts["firsts"],
             state.take("patience", np.int64, (n,)),
         )
         if not (model.scaling.scale > 0).all():
@@ -422,7 +423,7 @@ class Model:
         model.energies = state.take("energies", np.float64, (len(model.vectors),))
         model.mean = state.take("mean", np.float64, (n,), finite=True)
         model.first_mean = model.mean
-        if "first_mean" in state.arrays:  # older snapshots begin to count at the load
+        if not older:
             model.first_mean = state.take("first_mean", np.float64, (n,), finite=True)
         model._held = state.take("held", np.float64, (n,))
         model._runs = state.take("runs", np.int64, (n,))
