@@ -12,25 +12,10 @@ from numpy.typing import NDArray
 
 from streambasis import NoveltyMonitor, from_bytes, to_bytes
 from streambasis.errors import SampleError, SettingError
+from tests.promises import DECISION_COLUMNS, EVENT_KEYS
 
 NAMES = [f"c{i}" for i in range(12)]
 BASELINE = 1000
-COLUMNS = {
-    "sample": pa.int64(),
-    "time": pa.timestamp("ns"),
-    "spe": pa.float64(),
-    "t2": pa.float64(),
-    "limit": pa.float64(),
-    "t2_limit": pa.float64(),
-    "novel": pa.bool_(),
-    "extreme": pa.bool_(),
-    "rank": pa.int32(),
-    "event": pa.int64(),
-}
-EVENT_KEYS = [
-    "event", "start", "end", "start_time", "end_time", "peak", "channels", "contributions",
-    "repeats", "cosine", "label",
-]  # fmt: skip
 
 
 def units(seed: int) -> NDArray[np.float64]:
@@ -71,7 +56,7 @@ def test_columns_are_those_of_the_design() -> None:
     """A batch answers with the decision columns, in order and of their types; unknown is null."""
     feed = plant(0, BASELINE + 10)
     _, table = run(feed, [BASELINE + 10])
-    assert dict(zip(table.schema.names, table.schema.types, strict=True)) == COLUMNS
+    assert dict(zip(table.schema.names, table.schema.types, strict=True)) == DECISION_COLUMNS
     assert table["spe"].null_count == table["limit"].null_count == BASELINE
     assert table["time"].null_count == table["event"].null_count == BASELINE + 10
 

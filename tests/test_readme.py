@@ -15,6 +15,7 @@ import pytest
 
 from streambasis import cli
 from streambasis.cli import CAUTION
+from tests.promises import EVENT_KEYS
 
 ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text()
@@ -81,8 +82,7 @@ def test_extras_and_event_keys_are_documented() -> None:
             assert f"[{extra}]" in README, extra
     truth = json.loads((ROOT / "examples" / "pump_station.truth.json").read_text())
     assert truth["faults"]
-    for key in ("start", "end", "start_time", "end_time", "peak", "channels", "contributions",
-                "repeats", "cosine", "label"):  # fmt: skip
+    for key in EVENT_KEYS:
         assert f"`{key}`" in README, key
 
 

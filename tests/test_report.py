@@ -38,6 +38,7 @@ from streambasis.snapshot import read_state
 from streambasis.state import State
 from streambasis.watch.segment import Segment
 from tests.homes import START, make_home, names_of
+from tests.promises import DECISION_COLUMNS
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
 MADE = dt.datetime(2026, 3, 9, 8, 7, 6, tzinfo=dt.UTC)
@@ -463,7 +464,7 @@ def test_what_is_no_home_is_one_line_and_an_exit_code(
     for folder in ("garbage", "other", "words"):
         Path(folder, "decisions").mkdir(parents=True)
     Path("garbage/decisions/000000000000.arrow").write_bytes(b"nothing that Arrow wrote")
-    word = {key: ["x"] for key in cli_columns()} | {"sample": [0]}
+    word = {key: ["x"] for key in DECISION_COLUMNS} | {"sample": [0]}
     for folder, table in (("other", pa.table({"a": [1]})), ("words", pa.table(word))):
         with pa.ipc.new_file(f"{folder}/decisions/000000000000.arrow", table.schema) as file:
             file.write_table(table)
@@ -473,11 +474,6 @@ def test_what_is_no_home_is_one_line_and_an_exit_code(
     assert message in shown.err
     assert len(shown.err.splitlines()) == 1
     assert not Path("report.html").exists()
-
-
-def cli_columns() -> list[str]:
-    """Return the names of the decision columns but the first."""
-    return ["time", "spe", "t2", "limit", "t2_limit", "novel", "extreme", "rank", "event"]
 
 
 def test_without_the_extra_the_command_says_what_to_install(

@@ -20,26 +20,9 @@ from streambasis.watch.home import Home
 from streambasis.watch.loop import Run
 from streambasis.watch.reporting import Summary
 from streambasis.watch.terminal import Terminal, carriers, summary_lines, when
+from tests.promises import DECISION_COLUMNS, EVENT_KEYS
 
 SHIPPED = Path(__file__).parent.parent / "examples" / "pump_station.csv"
-
-# DESIGN of the files that a run keeps: names, order and types are a promise to their readers
-DECISION_COLUMNS = {
-    "sample": pa.int64(),
-    "time": pa.timestamp("ns"),
-    "spe": pa.float64(),
-    "t2": pa.float64(),
-    "limit": pa.float64(),
-    "t2_limit": pa.float64(),
-    "novel": pa.bool_(),
-    "extreme": pa.bool_(),
-    "rank": pa.int32(),
-    "event": pa.int64(),
-}
-EVENT_KEYS = [
-    "event", "start", "end", "start_time", "end_time", "peak", "channels", "contributions",
-    "repeats", "cosine", "label",
-]  # fmt: skip
 
 
 class Listener:
