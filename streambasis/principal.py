@@ -201,7 +201,8 @@ class PrincipalBasis(Saveable):
 
         Notes
         -----
-        4·n·rank flops, and a fold every ``block`` samples.
+        4·n·rank flops, and a fold every ``block`` samples, which takes as long as some hundred
+        pushes; smaller blocks make shorter folds, and cost more in all.
         """
         with self._lock:
             if not (
@@ -269,9 +270,10 @@ class PrincipalBasis(Saveable):
 
     def _entered(self, samples: NDArray[Any]) -> NDArray[Any]:
         entered = self._inner.enter(samples)
-        if _squares_are_finite(entered):
+        euclidean = self._inner.kind == "euclidean"
+        if (euclidean and not self._core.core.centred) or _squares_are_finite(entered):
             return entered
-        if self._inner.kind != "euclidean" and not np.isfinite(entered).all():
+        if not euclidean and not np.isfinite(entered).all():
             raise SampleError(
                 f"sample {self.count} or later: a value in the inner product is beyond "
                 f"{self.dtype}; nothing was taken"
