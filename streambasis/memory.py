@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import mmap
+import threading
 from typing import Any
 
 import numpy as np
@@ -51,3 +52,24 @@ def mapped_zeros(shape: tuple[int, ...], dtype: DTypeLike) -> NDArray[Any]:
     # private: a forked process gets a copy, as of any other memory
     pages = mmap.mmap(-1, size, flags=mmap.MAP_PRIVATE | mmap.MAP_ANONYMOUS)
     return np.frombuffer(pages, kind).reshape(shape)
+
+
+_own = threading.local()
+
+
+def scratch(shape: tuple[int, ...]) -> NDArray[np.float64]:
+    """Return room for float64 that lasts to the next call in this thread.
+
+    Fresh memory costs as much in page faults as what is done with it, and a workspace in each of
+    thousands of objects would be most of their memory. A thread keeps as much as it has asked for
+    at most.
+
+    Parameters
+    ----------
+    shape : tuple of int
+    """
+    size = math.prod(shape)
+    held: NDArray[np.float64] | None = getattr(_own, "room", None)
+    if held is None or held.size < size:
+        held = _own.room = aligned_zeros(size, np.float64)
+    return held[:size].reshape(shape)

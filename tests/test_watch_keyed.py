@@ -132,7 +132,7 @@ def test_kills_change_nothing(expected: Path, source: Path, tmp_path: Path) -> N
                "--home", str(home), "--quiet", "--snapshot-every", "700"]  # fmt: skip
     chance = random.Random(1)
     index, kills = home / "fleet.arrow", 0
-    for _ in range(6):
+    for _ in range(2):
         process = subprocess.Popen(command)
         seen = index.stat().st_mtime_ns if index.exists() else 0
         while process.poll() is None:

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from streambasis.basis import StreamBasis
 from streambasis.errors import SampleError, SnapshotError
 from streambasis.kernels.monitor import standardize, take_off
+from streambasis.memory import scratch
 from streambasis.monitor.contributions import shares
 from streambasis.monitor.learning import Learnt
 from streambasis.monitor.limits import SpeLimit, t2_limit
@@ -124,13 +125,11 @@ class Model:
         # values and lengths of the runs that channels are in
         self._held, self._runs = np.full(n, np.nan), np.zeros(n, np.int64)
         self._reach, self._freeze = np.full(n, REACH), np.zeros(n)
-        # workspace of a fold: a fresh array of this size costs more in page faults than its use
-        self._rows = np.zeros((settings.block, n))
 
     @property
     def nbytes(self) -> int:
         """Bytes of what is held."""
-        arrays = [self._rows, self._held, self._runs, self.behaviour, self.first_vectors]
+        arrays = [self._held, self._runs, self.behaviour, self.first_vectors]
         arrays += [self.vectors, self.mean, self.first_mean, self.projection.directions]
         own: int = sum(array.nbytes for array in arrays)
         return own + self.basis.nbytes + self.known.nbytes
@@ -301,7 +300,7 @@ class Model:
     def fold(self, z: NDArray[np.float64]) -> None:
         """Take samples in noise units, fit to be folded, into the basis."""
         if len(z):
-            rows = np.add(z, self._entered_centre, out=self._rows[: len(z)])
+            rows = np.add(z, self._entered_centre, out=scratch(z.shape))
             self.basis.take_entered(rows)
             self.basis.flush()
 
