@@ -109,3 +109,13 @@ def by_rotations(core: NDArray[Any]) -> tuple[NDArray[np.float64], NDArray[Any]]
     singular = np.linalg.norm(turned, axis=1)
     order = np.argsort(-singular, kind="stable")[: min(core.shape)]
     return singular[order], rows[order].conj()
+
+
+def definite_eigen(matrix: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
+    """Return eigenvalues and eigenvectors, as columns, of a positive semidefinite matrix."""
+    try:
+        values, columns = np.linalg.eigh(matrix)
+    except np.linalg.LinAlgError:
+        values, rows = by_rotations(matrix.astype(np.result_type(matrix.dtype, np.float64)))
+        columns = rows.conj().T
+    return values, columns

@@ -7,6 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from streambasis.core_svd import definite_eigen
 from streambasis.inner import Inner
 
 LEAST_SINE = 0.1
@@ -77,7 +78,7 @@ class Gaps:
             lines = np.ascontiguousarray(np.linalg.qr(self._inner.enter(lines).T)[0].T)
         hidden = directions @ lines.conj().T
         kept = directions - hidden @ lines
-        squared_sines, axes = np.linalg.eigh(np.eye(len(kept)) - hidden @ hidden.conj().T)
+        squared_sines, axes = definite_eigen(np.eye(len(kept)) - hidden @ hidden.conj().T)
         if (squared_sines < LEAST_SINE**2).any():
             return None
         deviations = rows - mean
