@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import os
+import subprocess
 import tempfile
 import threading
 import time
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pyarrow as pa
@@ -19,6 +21,8 @@ RATE = 2000
 SETTLED = 0.25
 """Part of the soak after which memory, files and threads count as settled."""
 LOOK_SECONDS = 1.0
+END_SECONDS = 15.0
+"""Without a sample for so long after the last was published, something is lost."""
 
 
 class Observer:
@@ -55,8 +59,10 @@ class Observer:
         if samples >= self._samples:
             self._stop.set()
 
-    def outages(self, every: float) -> threading.Thread:
-        """Start to take the broker away every so many seconds."""
+    def outages(
+        self, every: float, publisher: subprocess.Popen[str], vitals: Any
+    ) -> threading.Thread:
+        """Start to take the broker away every so many seconds, and end where nothing comes."""
 
         def go() -> None:
             for away in self._away:
@@ -66,6 +72,13 @@ class Observer:
                 time.sleep(away)
                 self._broker.start()
                 self.restarts += 1
+            publisher.wait()
+            samples = -1
+            while vitals.samples > samples:
+                samples = vitals.samples
+                if self._stop.wait(END_SECONDS):
+                    return
+            self._stop.set()
 
         thread = threading.Thread(target=go)
         thread.start()
@@ -102,7 +115,7 @@ def soak(seconds: float) -> Table:
         ):
             home.begin({})
             monitor = NoveltyMonitor(feed.columns.channels)
-            outages = observer.outages(seconds / (len(away) + 1))
+            outages = observer.outages(seconds / (len(away) + 1), publisher, vitals)
             Run(feed, monitor, observer, home=home, adopt_after=1000, vitals=vitals)(stop)
             connections = feed.counts["connections"]
             outages.join()
