@@ -16,11 +16,12 @@ from streambasis import Fleet
 from streambasis.fleet import spark
 
 CHANNELS = tuple(f"c{i:02}" for i in range(16))
-BASELINE = 200
+BASELINE = 1000
+"""Samples of the one baseline that all feeds begin with, so that none has to be learnt."""
 ROWS = 100
 """Samples of a feed in one micro-batch: 10 Hz for 10 s."""
-STARTING, MEASURED = 4, 3
-"""Micro-batches until all baselines are there and both sides are warm, and those that count."""
+STARTING, MEASURED = 2, 3
+"""Micro-batches until both sides are warm, and those that count."""
 CORES = 2
 SETTINGS = {
     "spark.ui.enabled": "false",
@@ -30,14 +31,24 @@ SETTINGS = {
 }
 
 
-def table(feeds: int, number: int, mixing: np.ndarray) -> pa.Table:
+def samples(count: int, seed: int) -> np.ndarray:
+    """Return four hidden sources on all channels, and noise."""
+    mixing = np.random.default_rng(0).normal(size=(4, len(CHANNELS)))
+    rng = np.random.default_rng(seed)
+    return rng.normal(size=(count, 4)) @ mixing + 0.3 * rng.normal(size=(count, len(CHANNELS)))
+
+
+def table(feeds: int, number: int) -> pa.Table:
     """Return the rows of one micro-batch, those of a feed together."""
-    rng = np.random.default_rng(number)
-    rows = rng.normal(size=(feeds * ROWS, len(mixing))) @ mixing
-    rows += 0.3 * rng.normal(size=rows.shape)
+    rows = samples(feeds * ROWS, number + 1)
     seconds = np.tile((number * ROWS + np.arange(ROWS)) * 0.1, feeds)
     columns = {name: rows[:, i] for i, name in enumerate(CHANNELS)}
     return pa.table({"feed": np.repeat(np.arange(feeds), ROWS), "time": seconds, **columns})
+
+
+def config() -> dict[str, Any]:
+    """Return the settings of every monitor."""
+    return {"channels": CHANNELS, "baseline": samples(BASELINE, 0)}
 
 
 def spark_seconds(session: Any, folder: Path) -> tuple[float, float]:
@@ -47,9 +58,7 @@ def spark_seconds(session: Any, folder: Path) -> tuple[float, float]:
         .option("maxFilesPerTrigger", 1)
         .parquet(str(folder))
     )
-    watched = spark.watch_stream(
-        given, key="feed", time="time", channels=CHANNELS, config={"baseline": BASELINE}
-    )
+    watched = spark.watch_stream(given, key="feed", time="time", channels=CHANNELS, config=config())
     with tempfile.TemporaryDirectory() as checkpoint:
         query = (
             watched.output.writeStream.format("noop")
@@ -67,7 +76,7 @@ def spark_seconds(session: Any, folder: Path) -> tuple[float, float]:
 
 def process_seconds(folder: Path) -> float:
     """Return the median seconds that a Fleet on as many threads takes for the same, read too."""
-    fleet = Fleet({"channels": CHANNELS, "baseline": BASELINE}, key="feed", threads=CORES)
+    fleet = Fleet(config(), key="feed", threads=CORES)
     taken = []
     for path in sorted(folder.iterdir()):
         start = time.perf_counter()
@@ -85,17 +94,16 @@ def run(quick: bool) -> list[Table]:
         ["feeds", "Spark samples/s", "Spark s per micro-batch", "Fleet samples/s",
          "Fleet : Spark", "KB of state per feed"],
     )  # fmt: skip
-    mixing = np.random.default_rng(0).normal(size=(4, len(CHANNELS)))
     session = spark.session("bench", master=f"local[{CORES}]", settings=SETTINGS)
     for feeds in (10, 100) if quick else (10, 100, 1000):
         with tempfile.TemporaryDirectory() as name:
             folder = Path(name)
             for number in range(STARTING + MEASURED):
-                pq.write_table(table(feeds, number, mixing), folder / f"{number}.parquet")
+                pq.write_table(table(feeds, number), folder / f"{number}.parquet")
             seconds, held = spark_seconds(session, folder)
             alone = process_seconds(folder)
-        samples = feeds * ROWS
-        out.add(feeds, samples / seconds, seconds, samples / alone, seconds / alone,
+        rows = feeds * ROWS
+        out.add(feeds, rows / seconds, seconds, rows / alone, seconds / alone,
                 held / feeds / 1000)  # fmt: skip
     session.stop()
     out.notes.append(
