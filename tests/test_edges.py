@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 
 from streambasis import NoveltyMonitor, StreamBasis
+from streambasis.audit import ORTHOGONALITY_LIMIT
 from streambasis.kernels.projection import ROUNDING_FLOOR
 from streambasis.ranks import Spectrum, optimal_threshold, rank_by_noise
 
@@ -121,6 +122,42 @@ def test_the_newest_sample_with_a_good_share_takes_over() -> None:
     for sample in ([1.0, 0.0], [0.0, 1.0], [0.0625, 1.0], [0.03, 1.0], [0.001, 1.0], [0.0, 1.0]):
         basis.push(sample)
     assert 3 in basis.pivots
+
+
+@pytest.mark.parametrize("dtype", ["float64", "complex128"])
+@pytest.mark.parametrize("kept", [4, 6, 7])
+def test_a_slide_that_drops_one_direction_and_adds_one_keeps_the_span(
+    dtype: str, kept: int
+) -> None:
+    """In a window of independent samples every slide replaces; the span is that of the window."""
+    rng = np.random.default_rng(kept)
+    samples = rng.standard_normal((4 * kept, 9)).astype(dtype)
+    if dtype == "complex128":
+        samples += 1j * rng.standard_normal(samples.shape)
+    basis = StreamBasis(9, window=kept, dtype=dtype)
+    for end, sample in enumerate(samples, 1):
+        decision = basis.push(sample)
+        assert (decision.grew, decision.dropped) == (True, end > kept)
+        held = samples[max(0, end - kept) : end]
+        assert np.abs(basis.residual(held)).max() < 100 * EPSILON
+    assert basis.retract(int(basis.members[0])) == 1
+    assert np.abs(basis.residual(held[1:])).max() < 100 * EPSILON
+    assert np.linalg.norm(basis.residual(held[0])) > 0.1
+    assert basis.audit().orthogonality < ORTHOGONALITY_LIMIT
+
+
+@pytest.mark.parametrize("way", ["criterion", "never", "always"])
+def test_a_renewal_keeps_span_order_and_samples(way: str) -> None:
+    """After renew() the pivot samples are still L times the directions, now orthonormal again."""
+    samples = np.vander(np.linspace(0.0, 1.0, 12), 7, increasing=True).T
+    basis = StreamBasis(12, rtol=1e-12, reorthogonalize=way)
+    decisions = [basis.push(sample) for sample in samples]
+    assert [d.passes for d in decisions][-1] == {"criterion": 2, "never": 1, "always": 2}[way]
+    basis.renew()
+    assert basis.audit().renewals == 1
+    assert basis.audit().orthogonality < ORTHOGONALITY_LIMIT
+    assert np.abs(basis.triangular @ basis.vectors - samples).max() < 100 * EPSILON
+    np.testing.assert_array_equal(basis.pivots, np.arange(7))
 
 
 @pytest.fixture(scope="module")
