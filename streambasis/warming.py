@@ -10,6 +10,7 @@ from numpy.typing import DTypeLike
 
 from streambasis.basis import StreamBasis
 from streambasis.errors import SettingError
+from streambasis.kernels.plain import to_rows
 from streambasis.monitor import NoveltyMonitor
 from streambasis.principal import PrincipalBasis
 from streambasis.principal_settings import WHOLE
@@ -92,3 +93,6 @@ def _run_monitor() -> None:
     rng = np.random.default_rng(0)
     monitor.push_many(rng.standard_normal((BASELINE + 40, 4)))
     monitor.push(np.full(4, 50.0))
+    # a fleet turns columns into rows before its monitors see them
+    column = np.zeros(1)
+    to_rows(np.array([column.__array_interface__["data"][0]]), 1, 0, 1, np.zeros((1, 1)))

@@ -29,8 +29,10 @@ from streambasis.times import nanoseconds
 
 SHARES = 8
 LEAST_SHARE = 1024
+STEP = 256
 """Into how many shares the work of a thread is cut, so that all end at about the same time; and
-rows of a share at least, so that threads do not wait for each other more than they work."""
+rows of a share at least, so that threads do not wait for each other more than they work; and
+rows that a monitor is handed at most where the kernel has left off."""
 
 
 class Fleet:
@@ -232,8 +234,9 @@ class Fleet:
 
         Notes
         -----
-        A call costs each feed in it about 50 microseconds beside its samples: rows of a feed that
-        come together are cheaper than rows that come one by one.
+        A call costs some 7 microseconds for each feed in it and 0.3 for each sample: rows of a
+        feed that come together are cheaper than rows that come one by one. Every 2,048 samples
+        (fewer with a short half-life) a feed learns from them, which takes most of a millisecond.
         """
         with self._lock:
             self._ready()
@@ -344,6 +347,8 @@ class Fleet:
         self, key: Key, monitor: NoveltyMonitor, rows: Rows, columns: Columns, start: int, stop: int
     ) -> int:
         """Let a monitor do what the kernel cannot; return how many rows that judges."""
+        # often one row alone is not for the kernel: the others need not be copied again and again
+        stop = min(stop, start + STEP)
         where = rows.where(start, stop)
         part = Columns(0, columns.time[where], stop - start)
         try:

@@ -33,6 +33,9 @@ BUFFERED = ("z", "spe", "number", "time", "loose", "fold", "pool")
 COUNTED = ("ring", "counters", "last", "quiet", "taken")
 """The arrays that hold a row of the buffer each, and those of the walk."""
 
+LOOKED_AT = 64
+"""Samples behind one with gaps that are looked at for more such, to be judged together."""
+
 _IN_PLACE = np.zeros(0, np.int64)
 
 
@@ -188,6 +191,7 @@ class Judge:
         count = min(len(samples), self.settings.block - self._fill)
         if not self.open:
             # those with gaps that follow one another, or the one that is beyond its limit
+            count = min(count, LOOKED_AT)
             whole = ~np.isnan(samples[:count]).any(axis=1)
             count = max(int(whole.argmax()) if whole.any() else count, 1)
         start = self.settings.window + self._fill
