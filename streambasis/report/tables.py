@@ -85,7 +85,7 @@ def contributions(shown: Shares) -> Figure:
         for (i, j), value in np.ndenumerate(shown.values):
             if value >= 0.01:
                 _write(axes, j, i, f"{100 * value:.0f}", value)
-    _bar(figure, axes, image, "contribution (% of the event)")
+    _bar(figure, axes, image, "contribution\n(% of the event)")
     return figure
 
 
