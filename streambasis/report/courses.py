@@ -238,7 +238,7 @@ def energies(run: KeptRun, course: Course) -> Figure:
     for k in shown:
         values = progress.energies[:, k]
         _readings(axes, run, course, values, tones[k], LINES[k % len(LINES)])
-        named.append((float(values[np.isfinite(values)][-1]), f"direction {k + 1}", tones[k]))
+        named.append((float(values[np.isfinite(values)][-1]), f"direction {k}", tones[k]))
     if np.isfinite(progress.noise).any():
         _readings(axes, run, course, progress.noise, MUTED, (0, (1, 1)))
         last = float(progress.noise[np.isfinite(progress.noise)][-1])
