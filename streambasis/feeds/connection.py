@@ -195,7 +195,7 @@ class Connection:
     def _on_connect_fail(self, client: paho.Client, userdata: Any) -> None:
         del client, userdata
         with self._change:
-            self._trouble = "no connection to the broker"
+            self._trouble = f"nothing answers at {self._address.host}:{self._address.port}"
 
     def _on_subscribe(
         self, client: paho.Client, userdata: Any, mid: int, reasons: list[Any], properties: Any
