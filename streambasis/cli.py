@@ -24,7 +24,7 @@ EXIT_CODES = (
     (BUG, "an error inside streambasis; --debug shows where"),
     (USAGE, "an argument or a setting that cannot be used"),
     (FEED, "the feed or kept run cannot be read, does not fit, or is shorter than the baseline"),
-    (OUTPUT, "a file cannot be written, or --metrics cannot be served"),
+    (OUTPUT, "a file or the folder of --home cannot be used, or --metrics cannot be served"),
     (EXTRA, "a package that the command needs is not installed"),
     (SNAPSHOT, "a snapshot is missing or damaged, or does not fit the one it is compared with"),
     (PIPE, "whoever read the output went away"),
@@ -32,12 +32,12 @@ EXIT_CODES = (
 
 SUMMARIES = {
     "watch": "Watch a feed and report what it has not shown before.",
-    "check": "Check a file of settings without running.",
     "report": "Draw what a run has kept, on one page or as pictures.",
     "show": "Show what a snapshot holds.",
+    "check": "Check a file of settings without running.",
     "compare": "Show how far two snapshots are apart, and on which channels.",
 }
-"""The commands, each with its one line of help."""
+"""The commands, each with its one line of help, in the order in which one meets them."""
 
 
 def main(arguments: Sequence[str] | None = None) -> int:

@@ -15,6 +15,7 @@ from typing import Any, TypeVar
 
 import click
 from click.core import ParameterSource
+from click.shell_completion import shell_complete
 
 from streambasis._version import __version__
 from streambasis.cli import (
@@ -50,15 +51,42 @@ _Command = TypeVar("_Command", bound=Callable[..., Any])
 _debug = click.option(
     "--debug", is_flag=True, expose_value=False, help="Show a traceback with an error."
 )
+_COMPLETE = "_STREAMBASIS_COMPLETE"
 _LIVE = ", ".join(spelled(name) for name, option in OPTIONS.items() if option.live)
 _THREADS = ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 _CONTEXT = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
 
 
+class _InOrder(click.Group):
+    """Commands in the order in which one meets them, not that of the alphabet."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        """Return the names of the commands."""
+        del ctx
+        return list(SUMMARIES)
+
+
 @click.group(
+    cls=_InOrder,
     context_settings=_CONTEXT,
     help="Know what a multi-channel feed has shown before, and see at once what is new.",
-    epilog=f"{CAUTION}\n\nExample: streambasis watch feed.csv\n\n{_CODES}",
+    epilog=f"""\b
+Example:
+  streambasis watch feed.csv                    events, and a summary at the end
+  streambasis watch feed.csv --home run1        the same, and keep everything in run1
+  streambasis report run1 --out run1.html       the pictures of it on one page
+  streambasis show run1                         the basis that was learned, audited
+  streambasis check press.toml                  what a file of settings would run
+  streambasis watch --config press.toml         run it, as a service
+
+\b
+The first 2,000 samples must show ordinary running (--baseline). If there are fewer, or if too much
+or too little is reported, look at --baseline, --channels and --false-alarm: streambasis watch
+--help. README.md explains decisions, events and pictures, and how to use it in a program.
+
+{_CODES}
+
+{CAUTION}""",
 )
 @_debug
 @click.version_option(__version__, message="streambasis %(version)s")
@@ -75,6 +103,9 @@ def _settings(command: _Command) -> _Command:
         default = getattr(defaults, name)
         spelling = f"--{spelled(name)}"
         how: dict[str, Any] = {"metavar": option.metavar, "multiple": option.many}
+        if option.metavar in ("FILE", "DIR"):
+            # a shell completes it; what it must be is checked by the settings
+            how["type"] = click.Path(file_okay=option.metavar == "FILE")
         if option.switch:
             spelling, how = f"{spelling}/--no-{spelled(name)}", {"default": default}
         elif default is not None:
@@ -127,7 +158,7 @@ In the folder of --home:
 
 {CAUTION}""",
 )
-@click.argument("feed", required=False)
+@click.argument("feed", required=False, type=click.Path(allow_dash=True))
 @click.option(
     "--config", type=click.Path(path_type=Path), metavar="FILE.toml", help="Settings from a file."
 )
@@ -194,10 +225,11 @@ def check(file: Path) -> None:
     "show",
     short_help=SUMMARIES["show"],
     help="""Show what the snapshot in FILE holds: channels, samples, rank, energies, noise floor,
-    events, and an audit of its directions. The file is verified first.""",
+    events, and an audit of its directions. The file is verified first. Of a folder of --home it is
+    state.arrow.""",
     epilog=f"""\b
 Example:
-  streambasis show run1/state.arrow
+  streambasis show run1
   streambasis show run1/state.arrow --json | jq .rank
 
 {_CODES}
@@ -211,14 +243,15 @@ def show(file: Path, as_json: bool) -> None:
     """Show a snapshot."""
     from streambasis.watch.show import show as write
 
-    write(file, sys.stdout, as_json=as_json)
+    write(_snapshot(file), sys.stdout, as_json=as_json)
 
 
 @streambasis.command(
     "compare",
     short_help=SUMMARIES["compare"],
     help="""Show how far the snapshots A and B are apart: the principal angles between their
-    subspaces, and the channels on which they differ most. The channels must be the same.""",
+    subspaces, and the channels on which they differ most. The channels must be the same. Of a
+    folder of --home it is state.arrow.""",
     epilog=f"""\b
 Example:
   streambasis compare monday.arrow friday.arrow
@@ -236,7 +269,12 @@ def compare(a: Path, b: Path, as_json: bool) -> None:
     """Compare two snapshots."""
     from streambasis.watch.comparison import compare as write
 
-    write(a, b, sys.stdout, as_json=as_json)
+    write(_snapshot(a), _snapshot(b), sys.stdout, as_json=as_json)
+
+
+def _snapshot(path: Path) -> Path:
+    """Return the snapshot that is meant: of the home of a run the one in it."""
+    return path / "state.arrow" if path.is_dir() else path
 
 
 @streambasis.command(
@@ -288,14 +326,20 @@ def report(home: Path, out: Path | None, png: Path | None) -> None:
 
 def run(arguments: Sequence[str]) -> int:
     """Run a command line and return its exit code; an error is one line on standard error."""
+    completing = os.environ.get(_COMPLETE)
+    if completing:
+        return shell_complete(streambasis, {}, streambasis.name or "", _COMPLETE, completing)
     try:
         with streambasis.make_context("streambasis", list(arguments)) as context:
             streambasis.invoke(context)
     except click.exceptions.Exit as stop:
         return stop.exit_code
-    except click.ClickException as error:
-        error.show()
-        return USAGE
+    except click.exceptions.NoArgsIsHelpError as error:
+        click.echo(error.format_message())
+        return OK
+    except click.UsageError as error:
+        path = error.ctx.command_path if error.ctx else "streambasis"
+        return _failed(error, f"{error.format_message()} (see '{path} --help')", USAGE, arguments)
     except (KeyboardInterrupt, click.Abort):
         click.echo("streambasis: interrupted", err=True)
         return OK

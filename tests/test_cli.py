@@ -114,11 +114,56 @@ def test_without_the_extra_the_command_says_what_to_install(
         assert "pip install 'streambasis[watch]'" in shown.out + shown.err
 
 
-def test_unknown_options_and_commands_are_usage_errors() -> None:
-    """What click refuses has the documented exit code of usage errors."""
-    assert run("watch", SHIPPED, "--no-such-option").returncode == cli.USAGE
-    assert run("wach").returncode == cli.USAGE
-    assert run("watch", SHIPPED, "--baseline", "0").returncode == cli.USAGE
+@pytest.mark.parametrize(
+    ("arguments", "message"),
+    [
+        (["watch", "feed.csv", "--no-such-option"], "No such option '--no-such-option'"),
+        (["watch", "feed.csv", "other.csv"], "unexpected extra argument (other.csv)"),
+        (["watch", "feed.csv", "--baseline", "0"], "--baseline: 0 is not a whole number"),
+        (["watch", "feed.csv", "--snapshot-every", "0"], "--snapshot-every: '0' is not a number"),
+        (["wach"], "Did you mean 'watch'?"),
+        (["show"], "Missing argument 'FILE'"),
+        (["report", "run1"], "nothing to write"),
+    ],
+)
+def test_what_cannot_be_used_is_one_line(
+    capsys: pytest.CaptureFixture[str], arguments: list[str], message: str
+) -> None:
+    """A wrong command, option or value is named on one line, with the exit code of such errors."""
+    assert cli.main(arguments) == cli.USAGE
+    shown = capsys.readouterr()
+    assert shown.out == ""
+    assert message in shown.err
+    assert shown.err.startswith("streambasis: ")
+    assert len(shown.err.splitlines()) == 1
+
+
+def test_the_command_alone_shows_its_help(capsys: pytest.CaptureFixture[str]) -> None:
+    """Without arguments the help appears on standard output: commands in the order of use."""
+    assert cli.main([]) == cli.OK
+    shown = capsys.readouterr()
+    assert shown.err == ""
+    places = [shown.out.index(f"\n  {name} ") for name in cli.SUMMARIES]
+    assert places == sorted(places)
+
+
+@pytest.mark.parametrize(
+    ("words", "completed"),
+    [
+        ("streambasis wa", "plain,watch"),
+        ("streambasis watch --fal", "plain,--false-alarm"),
+        ("streambasis watch fe", "file,fe"),
+        ("streambasis watch --home ru", "dir,ru"),
+    ],
+)
+def test_a_shell_completes(words: str, completed: str) -> None:
+    """Commands, options, files and folders are completed as click does it."""
+    asked = {
+        "_STREAMBASIS_COMPLETE": "bash_complete",
+        "COMP_WORDS": words,
+        "COMP_CWORD": str(words.count(" ")),
+    }
+    assert run(env=os.environ | asked).stdout.split() == [completed]
 
 
 REFUSED = [

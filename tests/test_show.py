@@ -113,6 +113,22 @@ def test_show_tells_the_window(
     assert (shown["window"], shown["span_seconds"], shown["window_samples"]) == (8, 60.0, 8)
 
 
+def test_of_a_home_its_snapshot_is_shown(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """``show`` and ``compare`` take the folder of a run for the snapshot in it."""
+    basis = streambasis.StreamBasis(NAMES)
+    basis.push(np.ones(len(NAMES)))
+    save(basis, tmp_path / "state.arrow")
+    assert ask(capsys, "show", tmp_path) == ask(capsys, "show", tmp_path / "state.arrow")
+    code, out, _ = ask(capsys, "compare", tmp_path, tmp_path / "state.arrow")
+    assert code == cli.OK
+    assert "no difference beyond rounding" in out
+    code, _, err = ask(capsys, "show", tmp_path.parent)
+    assert code == cli.SNAPSHOT
+    assert "state.arrow: snapshot cannot be read" in err
+
+
 def test_show_tells_how_a_monitor_is_doing(
     tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:

@@ -13,7 +13,7 @@ from streambasis.errors import FeedError, HomeError, SnapshotError
 from streambasis.feeds import Broker
 from streambasis.feeds.broker import address_of
 from streambasis.snapshot import read_state
-from streambasis.watch.home import refuse_another
+from streambasis.watch.home import NO_WAY_ON, refuse_another
 from streambasis.watch.options import FEED, spelled
 from streambasis.watch.service import (
     about,
@@ -111,7 +111,7 @@ def _check_run(settings: Settings, home: Path, channels: Sequence[str] | None) -
     try:
         state = read_state(file)
     except SnapshotError as error:
-        raise HomeError(f"{error}; the run cannot go on from it") from None
+        raise HomeError(f"{error}; {NO_WAY_ON}") from None
     refuse_another(home, state.facts.get("about", {}), about(settings, channels))
 
 

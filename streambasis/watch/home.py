@@ -33,6 +33,9 @@ from streambasis.watch.segment import SEGMENT_ROWS, Segment
 KIND = "Run"
 """What ``state.arrow`` says it holds."""
 
+NO_WAY_ON = "the run cannot go on from it; restore it from a copy, or start in a new folder"
+"""What there is to do about a ``state.arrow`` that cannot be used."""
+
 FORMATS = ("arrow", "parquet")
 """Formats of the files of decisions, and the endings of their names."""
 
@@ -142,7 +145,7 @@ class Home:
             self._segment = Segment.from_state(state.parts["decisions"])
             counted = int(state.facts["events_bytes"]), int(state.facts.get("malformed_bytes", 0))
         except SnapshotError as error:
-            raise HomeError(f"{error}; the run cannot go on from it") from error
+            raise HomeError(f"{error}; {NO_WAY_ON}") from error
         kept = state.facts.get("decisions", "arrow")
         if kept != self._format:
             raise HomeError(

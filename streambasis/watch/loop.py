@@ -198,8 +198,9 @@ class Run:
         """Close and keep what a run is to leave, and say what it came to."""
         monitor, samples = self._monitor, self._monitor.count
         if not monitor.baseline_done and not asked.is_set():
+            count = f"{samples} sample{'s' * (samples != 1)}"
             raise FeedError(
-                f"{self._feed.name}: {samples} samples, fewer than the baseline of "
+                f"{self._feed.name}: {count}, fewer than the baseline of "
                 f"{monitor.baseline}; lower --baseline or give a longer feed"
             )
         if self._home is None or not asked.is_set():

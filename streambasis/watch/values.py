@@ -61,6 +61,9 @@ def number(typed: str) -> object:
 
 def shown(value: object) -> str:
     """Return a value for a message: never long, never an array or a table in full."""
+    if isinstance(value, tuple) and len(value) == 1:
+        # what was typed once of an option that may be typed again
+        return shown(value[0])
     if isinstance(value, dict):
         return "a table"
     if isinstance(value, list | tuple):
