@@ -119,6 +119,11 @@ class PrincipalBasis(Saveable):
         """Names of the channels."""
         return self._channels.names
 
+    def __repr__(self) -> str:
+        return (
+            f"PrincipalBasis({len(self.channels)} channels, rank {self.rank}, {self.count} samples)"
+        )
+
     @property
     def block(self) -> int:
         """Most samples folded in at a time."""

@@ -6,7 +6,9 @@ Promise: a C-contiguous array of the right dtype is used as it is, without a cop
 from __future__ import annotations
 
 import math
+import reprlib
 from collections.abc import Iterable, Iterator
+from numbers import Number
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -162,6 +164,15 @@ def many_samples(
     return array
 
 
+def _culprit(values: Any) -> str:
+    """Say which value is the first that is no number, and where it stands, if there is one."""
+    for place, value in np.ndenumerate(np.asarray(values, dtype=object)):
+        if not isinstance(value, Number):
+            position = f" at position {', '.join(map(str, place))}" if place else ""
+            return f"; {reprlib.repr(value)}{position} is none"
+    return ""
+
+
 def _numbers(values: Any, dtype: np.dtype[Any], what: str) -> NDArray[Any]:
     try:
         array = np.asarray(values)
@@ -170,7 +181,9 @@ def _numbers(values: Any, dtype: np.dtype[Any], what: str) -> NDArray[Any]:
     if array.dtype == dtype and array.flags.c_contiguous and array.flags.aligned:
         return array
     if array.size and array.dtype.kind not in "biufc":
-        raise SampleTypeError(f"{what}: values of type {array.dtype}, expected numbers ({dtype})")
+        raise SampleTypeError(
+            f"{what}: values of type {array.dtype}, expected numbers ({dtype}){_culprit(values)}"
+        )
     if array.dtype.kind == "c" and dtype.kind != "c":
         raise SampleTypeError(
             f"{what}: complex values for a {dtype} basis; make it with dtype='complex128'"
@@ -280,6 +293,8 @@ def arrow_columns(
             or pa.types.is_floating(kind)
             or pa.types.is_boolean(kind)
             or pa.types.is_decimal(kind)
+            # a column in which nothing was ever measured
+            or (missing and pa.types.is_null(kind))
         ):
             raise SampleTypeError(
                 f"column {names[position]!r}: values of type {kind}, expected numbers"

@@ -425,3 +425,11 @@ def test_setting_out_of_range_is_named(settings: dict[str, Any], name: str) -> N
     """A setting outside its range is refused with its name."""
     with pytest.raises(SettingError, match=name):
         NoveltyMonitor(NAMES, **settings)
+
+
+def test_a_monitor_says_at_a_prompt_how_far_it_is() -> None:
+    """Its text tells channels, stage and samples."""
+    monitor = NoveltyMonitor(NAMES, baseline=100)
+    assert repr(monitor) == "NoveltyMonitor(12 channels, baseline of 100, 0 samples)"
+    monitor.push_many(np.random.default_rng(3).standard_normal((101, 12)))
+    assert repr(monitor) == f"NoveltyMonitor(12 channels, rank {monitor.rank}, 101 samples)"

@@ -161,3 +161,10 @@ def test_a_feed_without_noise_keeps_every_direction(channels: int) -> None:
             np.testing.assert_allclose(basis.energies, energies[:9], rtol=1e-10)
             assert sine(basis.vectors, vectors[:9]) < 1e-10
             assert basis.noise < 1e-25
+
+
+def test_a_basis_says_at_a_prompt_how_far_it_is() -> None:
+    """Its text tells channels, rank and samples."""
+    basis = PrincipalBasis(4, rank=1, block=2)
+    basis.push_many(np.eye(4)[:2])
+    assert repr(basis) == "PrincipalBasis(4 channels, rank 1, 2 samples)"

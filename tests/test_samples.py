@@ -77,6 +77,8 @@ def test_a_fitting_array_is_used_as_it_is() -> None:
         ([1.0, 1j], SampleTypeError, "complex"),
         (["1", "2"], SampleTypeError, "sample 7"),
         ([None, 1.0], SampleTypeError, "sample 7"),
+        ([1.0, "two"], SampleTypeError, "'two' at position 1 is none"),
+        ({"a": 1.0}, SampleTypeError, "{'a': 1.0} is none"),
         ([1.0, [2.0]], SampleError, "sample 7"),
         (np.array([1, 2], "M8[s]"), SampleTypeError, "datetime64"),
         (3.0, SampleError, "sample 7: shape ()"),
@@ -122,6 +124,11 @@ def test_missing_values_where_they_are_asked_for() -> None:
     out = many_samples(table, channels, DOUBLE, missing=True)
     np.testing.assert_array_equal(out, [[1, 2], [np.nan, 3]])
     assert np.isnan(one_sample([np.nan, 1], channels, DOUBLE, missing=True)[0])
+    never = pa.table({"a": pa.nulls(2), "b": [2, 3]})
+    out = many_samples(never, channels, DOUBLE, missing=True)
+    np.testing.assert_array_equal(out, [[np.nan, 2], [np.nan, 3]])
+    with pytest.raises(SampleTypeError, match="column 'a': values of type null"):
+        many_samples(never, channels, DOUBLE)
     with pytest.raises(SampleError, match="not finite"):
         one_sample([np.nan, np.inf], channels, DOUBLE, missing=True)
 

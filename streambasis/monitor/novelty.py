@@ -163,6 +163,10 @@ class NoveltyMonitor:
         """Names of the channels."""
         return self._channels.names
 
+    def __repr__(self) -> str:
+        stage = f"rank {self.rank}" if self.baseline_done else f"baseline of {self.baseline}"
+        return f"NoveltyMonitor({len(self.channels)} channels, {stage}, {self.count} samples)"
+
     @property
     def baseline(self) -> int:
         """Samples of the baseline."""
