@@ -287,7 +287,17 @@ class Growth:
             )
             if start == len(samples):
                 return
-            self.make_room()
+            answer = self.step(samples[start])
+            while answer[5] == kernels.NEEDS_ROOM:
+                self.make_room()
+                answer = self.step(samples[start])
+            floats[:, start], whole[:, start] = answer[1:4], answer[5:8]
+            start += 1
+            if answer[4] and exactness == 0.0 and len(room):
+                coefficients = self.work[samples.shape[1] :]
+                correct_block(samples.dtype)(
+                    self.directions_held, self.rank - 1, room, start, measures, coefficients
+                )
 
     def _projected(self, samples: NDArray[Any], room: NDArray[Any]) -> NDArray[Any]:
         """Fill ``room`` with the parts of the samples in the span; return their coordinates."""
@@ -385,6 +395,13 @@ def measure_interpolated(dtype: np.dtype[Any]) -> Callable[..., Any]:
     """Return the compiled kernel that measures interpolated samples of a dtype."""
     rows = np.zeros((1, 1), dtype)
     return entry(blocks.measure_interpolated, rows, rows, np.zeros((3, 1)))
+
+
+@cache
+def correct_block(dtype: np.dtype[Any]) -> Callable[..., Any]:
+    """Return the compiled kernel that takes a new direction out of a block of a dtype."""
+    rows = np.zeros((1, 1), dtype)
+    return entry(blocks.correct_block, rows, 0, rows, 0, np.zeros((3, 1)), rows[0])
 
 
 @cache

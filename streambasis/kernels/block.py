@@ -15,7 +15,6 @@ from streambasis.kernels.growth import (
     CRITERION,
     DEPENDENT,
     FULL,
-    INDEPENDENT,
     INEXACT,
     NEEDS_ROOM,
     POLICY,
@@ -171,21 +170,22 @@ def decide_block(
     """Decide the samples of a block from row ``start`` on, in order.
 
     A sample whose decision the measures leave no doubt about, and that does not change the basis,
-    is decided by them. Any other goes through :func:`push_growing`: one near its tolerance, one
-    whose squares may have overflown or underflown, and one that grows the basis, whereafter the
-    rests of the following samples are corrected by the new direction. Without measures (no rows of
-    ``rests``) every sample goes that way.
+    is decided by them. Any other goes through :func:`push_growing`: one near its tolerance, and one
+    whose squares may have overflown or underflown. Without measures (no rows of ``rests``) every
+    sample goes that way.
 
     With an ``exactness`` above 0 the rests are distances from interpolated samples, which are
     bounds of the residuals; they decide where they are below that share of the norm, and need no
     correction, since a span that grows comes no farther from a sample.
 
-    Returns the row to go on from: the number of samples, or less where a growth needs room.
+    Returns the row of a sample that grows the basis, or the number of samples. Its growth is left
+    to the caller: compiled into this kernel, :func:`push_growing` rounds otherwise than by itself,
+    and a direction just above its tolerance turns with the last digits, so that from then on a
+    batch would have another basis than single pushes.
     """
     epsilon = epsilon_of(samples)
     # within these no square and no product that matters leaves the range of the type
     largest = 2.0**800 if samples.real.itemsize == 8 else 2.0**120
-    channels = directions.shape[1]
     measured = rests.shape[0] > 0 and integers[POLICY] == CRITERION
     doubted = 0
     for i in range(start, samples.shape[0]):
@@ -217,13 +217,12 @@ def decide_block(
                     reals[INEXACT] = 1.0
                 continue
         doubted += 1
-        record = push_growing(directions, factor, work, integers, reals, samples[i])
+        # without a row to spare, what would grow the basis changes nothing
+        record = push_growing(directions[:rank], factor, work, integers, reals, samples[i])
         if record[5] == NEEDS_ROOM:
             return i
         floats[NORM, i], floats[RESIDUAL, i], floats[TOLERANCE, i] = record[1:4]
         whole[REASON, i], whole[RANK_AFTER, i], whole[PASSES, i] = record[5:8]
-        if measured and exactness == 0.0 and record[5] == INDEPENDENT:
-            correct_block(directions, rank, rests, i + 1, measures, work[channels:])
     if exactness > 0.0 and 4 * doubted > samples.shape[0]:
         # interpolation decides too few to be worth it
         reals[INEXACT] = 1.0
