@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ast
 import json
+import os
 import re
 import shlex
 import subprocess
@@ -13,8 +14,10 @@ from pathlib import Path
 
 import pytest
 
+from bench.report import BEGIN, END
 from streambasis import cli
 from streambasis.cli import CAUTION
+from streambasis.commands import watch
 from tests.promises import EVENT_KEYS
 
 ROOT = Path(__file__).parent.parent
@@ -59,6 +62,36 @@ def test_console_commands_parse(monkeypatch: pytest.MonkeyPatch, tmp_path: Path)
         words = shlex.split(command.partition(" | ")[0])
         assert words[0].rpartition("/")[2] == "streambasis"
         assert cli.main(words[1:]) == cli.OK, command
+
+
+def test_the_line_for_shell_completion_works(tmp_path: Path) -> None:
+    """After the line that README gives, bash knows how to complete the command."""
+    (line,) = [block for block in blocks("sh") if "_COMPLETE" in block]
+    command = tmp_path / "streambasis"
+    command.write_text(f'#!/bin/sh\nexec {shlex.quote(sys.executable)} -m streambasis "$@"\n')
+    command.chmod(0o755)
+    shown = subprocess.run(
+        ["bash", "--norc", "-c", f"{line}\ncomplete -p streambasis"],
+        capture_output=True, text=True, check=False, cwd=ROOT,
+        env=os.environ | {"PATH": f"{tmp_path}:{os.environ['PATH']}", "PYTHONPATH": str(ROOT)},
+    )  # fmt: skip
+    assert shown.returncode == 0, shown.stderr
+    assert "streambasis" in shown.stdout
+
+
+def test_commands_for_a_plant_hold_options_that_exist() -> None:
+    """What cannot run here, for want of the plant, is taken by the command line all the same."""
+    lines = [line for block in blocks("sh") for line in block.splitlines()]
+    commands = [shlex.split(line) for line in lines if line.startswith("streambasis watch ")]
+    assert commands
+    for words in commands:
+        watch.make_context("watch", words[2:])
+
+
+def test_the_bench_finds_its_place() -> None:
+    """README has the two marks between which the bench writes its tables, once each."""
+    assert [README.count(mark) for mark in (BEGIN, END)] == [1, 1]
+    assert README.index(BEGIN) < README.index(END)
 
 
 def test_the_shown_output_is_what_comes_out(capsys: pytest.CaptureFixture[str]) -> None:
