@@ -298,8 +298,14 @@ class StreamBasis(Inspectable, Saveable):
                 fine = np.isfinite(entered).all(axis=1)
                 if not fine.all():
                     raise SampleError(self._beyond(first + int(np.argmin(fine))))
+
+            def alone(row: int) -> NDArray[Any]:
+                # products of other shapes round otherwise, and a direction just above its
+                # tolerance turns with the last digits of the sample that it comes from
+                return np.ascontiguousarray(self._inner.enter(checked[row]))
+
             try:
-                return self._core.push_block(entered, at)
+                return self._core.push_block(entered, at, alone)
             finally:
                 self._bind()
 

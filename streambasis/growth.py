@@ -210,8 +210,16 @@ class Growth:
         self.integers[kernels.RENEWALS] += 1
         self._bind()
 
-    def push_block(self, samples: NDArray[Any], _at: Any = None) -> Decisions:
+    def push_block(
+        self, samples: NDArray[Any], _at: Any, alone: Callable[[int], NDArray[Any]]
+    ) -> Decisions:
         """Take Euclidean samples that are known to be finite, (m, n), as if one after another.
+
+        Parameters
+        ----------
+        samples : ndarray, shape (m, n)
+        alone : callable
+            Returns the sample of a row as :meth:`step` would have been given it.
 
         Notes
         -----
@@ -244,6 +252,8 @@ class Growth:
                     room[: 0 if dense else stop - start],
                     floats[:, start:stop],
                     whole[:, start:stop],
+                    alone,
+                    start,
                 )
                 dense = (self.rank - rank) * SPARSE > stop - start
                 start, rank = stop, self.rank
@@ -267,8 +277,13 @@ class Growth:
         room: NDArray[Any],
         floats: NDArray[Any],
         whole: NDArray[Any],
+        alone: Callable[[int], NDArray[Any]],
+        first: int,
     ) -> None:
-        """Take one block, with its projections if there is room for them."""
+        """Take one block, with its projections if there is room for them.
+
+        Its row 0 is row ``first`` to ``alone``.
+        """
         measures = np.zeros((3, len(room)))
         exactness = 0.0
         if len(room) and self._exact():
@@ -287,10 +302,11 @@ class Growth:
             )
             if start == len(samples):
                 return
-            answer = self.step(samples[start])
+            sample = alone(first + start)
+            answer = self.step(sample)
             while answer[5] == kernels.NEEDS_ROOM:
                 self.make_room()
-                answer = self.step(samples[start])
+                answer = self.step(sample)
             floats[:, start], whole[:, start] = answer[1:4], answer[5:8]
             start += 1
             if answer[4] and exactness == 0.0 and len(room):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -48,8 +49,12 @@ class Window(WindowArrays):
         else:
             self.allot(wanted)
 
-    def push_block(self, samples: NDArray[Any], at: Any = None) -> Decisions:
+    def push_block(
+        self, samples: NDArray[Any], at: Any, alone: Callable[[int], NDArray[Any]]
+    ) -> Decisions:
         """Take Euclidean samples that are known to be finite, (m, n), one after another.
+
+        ``alone(row)`` is the sample of a row as :meth:`step` would have been given it.
 
         While the basis does not change, whole blocks are projected by two matrix products; a
         sample that changes it is pushed by itself. The block grows again as samples are covered.
@@ -76,10 +81,11 @@ class Window(WindowArrays):
                     size *= 2
                     continue
             self._integers[exchange.NOW : exchange.TIMED + 1] = clocks[row]
-            answer = self.step(samples[row])
+            sample = alone(row)
+            answer = self.step(sample)
             while answer[5] == growth.NEEDS_ROOM:
                 self.make_room()
-                answer = self.step(samples[row])
+                answer = self.step(sample)
             records[row] = answer[1:4]
             grew[row], passes[row] = answer[4], answer[7]
             reasons[row] = answer[5], answer[6], answer[8], answer[9]
