@@ -152,7 +152,7 @@ In the folder of --home:
                    channels, contributions, repeats, cosine, label
   malformed.jsonl  rows that hold no sample
   progress.arrow   noise floor, drift and energies over the run, for the report
-  state.arrow      a snapshot of the run, from which it goes on
+  state.arrow      a snapshot of the run, from which it goes on (--key: fleet.arrow and feeds/)
 
 {_CODES}
 
@@ -274,6 +274,11 @@ def compare(a: Path, b: Path, as_json: bool) -> None:
 
 def _snapshot(path: Path) -> Path:
     """Return the snapshot that is meant: of the home of a run the one in it."""
+    if (path / "fleet.arrow").exists():
+        raise SnapshotError(
+            f"{path}: holds many feeds (--key), and a snapshot is of one; save that of a feed from "
+            "a program, as Fleet(..., home=...)[key]"
+        )
     return path / "state.arrow" if path.is_dir() else path
 
 

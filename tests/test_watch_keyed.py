@@ -125,6 +125,13 @@ def test_other_settings_are_refused(expected: Path, source: Path, capsys: Any) -
     assert "false_alarm" in capsys.readouterr().err
 
 
+@pytest.mark.parametrize("command", [["show"], ["report", "--png", "pictures"]])
+def test_commands_for_one_feed_say_so(expected: Path, command: list[str], capsys: Any) -> None:
+    """``show`` and ``report`` refuse a home of many feeds by saying that it is one."""
+    assert run([*command, str(expected)]) != 0
+    assert "holds many feeds (--key)" in capsys.readouterr().err
+
+
 def test_kills_change_nothing(expected: Path, source: Path, tmp_path: Path) -> None:
     """Killed again and again at any moment, the run ends with the files of one left alone."""
     home = tmp_path / "home"

@@ -123,9 +123,10 @@ def choose(
     for name in wanted:
         kind = schema.field(name).type
         if not _numeric(kind):
+            apart = "" if keys is not None else ", or give it as the key that tells feeds apart"
             raise FeedError(
                 f"{source}: column {name!r} is not numeric ({_described(kind)}); leave it out by "
-                "choosing the channels by name"
+                f"choosing the channels by name{apart}"
             )
     return Columns(tuple(wanted), time, _unit(source, schema, time), keys)
 

@@ -78,6 +78,10 @@ def segments_of(home: Path) -> list[Path]:
         raise RecordError(f"{home}: no such folder; give the one that watch --home wrote")
     if not home.is_dir():
         raise RecordError(f"{home}: not a folder; give the one that watch --home wrote")
+    if (home / "fleet.arrow").exists():
+        raise RecordError(
+            f"{home}: holds many feeds (--key), and pictures are of one; watch that by itself"
+        )
     folder = home / "decisions"
     if not folder.is_dir():
         raise RecordError(
