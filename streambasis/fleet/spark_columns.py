@@ -12,7 +12,6 @@ if TYPE_CHECKING:
 
 WHOLE = ("tinyint", "smallint", "int", "bigint")
 NUMBERS = (*WHOLE, "float", "double", "boolean")
-DATES = ("timestamp", "timestamp_ntz")
 
 MARK = "="
 """Before each key in the text that feeds are told apart by; a row without a key has no text."""

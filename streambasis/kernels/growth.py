@@ -22,7 +22,6 @@ COUNT, RANK, CAPACITY, POLICY, UNCOVERED, RENEWALS = range(6)
 HEADER = 6
 # entries of the real header
 RTOL, ATOL, COVERAGE, INEXACT = range(4)
-REALS = 4
 # reasons, in the order of streambasis.decisions.REASONS, and what a caller must see to first
 INDEPENDENT, DEPENDENT, FULL, ZERO = range(4)
 NOT_FINITE, NEEDS_ROOM = -1, -2
