@@ -97,6 +97,30 @@ def test_hidden_channels_get_nothing() -> None:
     assert not shares(np.zeros((1, 5)), vectors, 1).any()
 
 
+def test_an_adopted_channel_is_not_blamed_for_what_comes_after() -> None:
+    """A channel that is a direction but for that direction's error is innocent of the next fault.
+
+    The error of the direction is along the fault, so that channel alone would explain all of it.
+    """
+    fault = np.zeros(6)
+    fault[[1, 2]] = 6.0, 5.0
+    adopted = 0.01 * fault / np.linalg.norm(fault)
+    adopted[5] = np.sqrt(1.0 - adopted @ adopted)
+    left = residual(np.tile(fault, (64, 1)), adopted[None])
+    assert np.argmax(reconstruction_based(left, adopted[None])) == 5
+    found = shares(left, adopted[None], 64)
+    assert found[5] == 0.0
+    assert found == pytest.approx(fault**2 / np.sum(fault**2), abs=0.01)
+
+
+def test_where_no_channel_can_be_told_all_share() -> None:
+    """When but one dimension is left, along all of 200 channels alike, each has the same part."""
+    axes = np.column_stack([np.ones(200), np.eye(200)[:, 1:]])
+    vectors = np.linalg.qr(axes)[0].T[1:]
+    found = shares(residual(9.0 * np.eye(200)[:1], vectors), vectors, 1)
+    assert found == pytest.approx(np.full(200, 1 / 200))
+
+
 def test_fewest_channels_that_make_the_part() -> None:
     """Names stop as soon as 90 % are reached, and nobody without a share is named."""
     assert leading(np.array([0.3, 0.6, 0.1])).tolist() == [1, 0]

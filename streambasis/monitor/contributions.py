@@ -22,6 +22,12 @@ CHANCE = 0.01
 HIDDEN = 1e-8
 """A channel of whose movements the residual shows less than this part cannot be reconstructed."""
 
+FAINT = 1e-2
+"""A channel that is a direction but for less than this part is not selected. What the residual
+shows of it is the error of that direction: n/K over its squared strength in noise units, a few
+thousandths where a weak event of K = 1,000 samples was adopted. Divided by so small a part it would
+take the blame for whatever comes after."""
+
 
 def reconstruction_based(
     residual: NDArray[np.float64], directions: NDArray[np.float64]
@@ -104,13 +110,14 @@ def shares(
     total = float(np.sum(rows * rows))
     if total == 0.0:
         return np.zeros(n)
+    faint = open_part < FAINT
     threshold = noise * chi2_quantile(CHANCE / n, count)
     taken = [directions]
     chosen: list[int] = []
     while len(chosen) < min(MOST_STEPS, n - len(directions)):
-        drops = _drops(np.sum(rows * rows, axis=0), open_part)
+        drops = np.where(faint, 0.0, _drops(np.sum(rows * rows, axis=0), open_part))
         best = int(np.argmax(drops))
-        if chosen and (drops[best] <= threshold or best in chosen):
+        if drops[best] <= (threshold if chosen else 0.0) or best in chosen:
             break
         # the part of the channel's axis that is still free, made orthogonal twice over
         axis = np.zeros(n)
