@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 import threading
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -221,3 +222,5 @@ def test_summary_says_all_that_was_promised() -> None:
         "speed          40,000 samples per second",
         "orthogonality  defect 0.07 (sound below 3)",
     ]
+    again = summary_lines(replace(summary, samples=500, before=19_500))
+    assert again[1] == "samples        20,000 over 2.31 days, 500 of them since it went on"

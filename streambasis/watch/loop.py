@@ -220,6 +220,7 @@ class Run:
             self._adopted,
             time.perf_counter() - start,
             monitor.basis.audit().orthogonality if monitor.baseline_done else 0.0,
+            before,
         )
 
     # what is kept

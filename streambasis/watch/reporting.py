@@ -49,6 +49,8 @@ class Summary:
         Time taken.
     orthogonality : float
         Orthogonality defect of the basis, |VVᴴ - I|₁ / (n·u); the contract is below 3.
+    before : int
+        Samples that the run held when it went on.
     """
 
     samples: int
@@ -62,3 +64,4 @@ class Summary:
     adopted: int
     seconds: float
     orthogonality: float
+    before: int = 0

@@ -206,6 +206,7 @@ def summary_lines(summary: Summary) -> list[str]:
     span = ""
     if summary.first_time is not None and summary.last_time is not None:
         span = f" over {_span(summary.last_time - summary.first_time)}"
+    now = f", {summary.samples:,} of them since it went on" if summary.before else ""
     events = str(summary.events)
     if summary.repeats:
         events += f", {summary.repeats} of them repeating an earlier one"
@@ -213,7 +214,7 @@ def summary_lines(summary: Summary) -> list[str]:
         events += f", {summary.adopted} adopted as known behaviour"
     rate = summary.samples / max(summary.seconds, 1e-9)
     rows = [
-        ("samples", f"{summary.samples:,}{span}"),
+        ("samples", f"{summary.before + summary.samples:,}{span}{now}"),
         ("rank", f"{summary.rank} directions"),
         ("noise floor", f"{summary.noise:.3g} (variance per residual dimension, scaled channels)"),
         ("drift", f"{summary.drift:.3g} rad since the baseline"),
