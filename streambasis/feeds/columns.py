@@ -123,9 +123,11 @@ def choose(
     for name in wanted:
         kind = schema.field(name).type
         if not _numeric(kind):
-            apart = "" if keys is not None else ", or give it as the key that tells feeds apart"
+            what = _described(kind)
+            may_tell = what == "text" and keys is None
+            apart = ", or give it as the key that tells feeds apart" if may_tell else ""
             raise FeedError(
-                f"{source}: column {name!r} is not numeric ({_described(kind)}); leave it out by "
+                f"{source}: column {name!r} is not numeric ({what}); leave it out by "
                 f"choosing the channels by name{apart}"
             )
     return Columns(tuple(wanted), time, _unit(source, schema, time), keys)
