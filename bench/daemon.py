@@ -16,10 +16,10 @@ SOAK_MINUTES = "STREAMBASIS_SOAK_MINUTES"
 
 def run(quick: bool) -> list[Table]:
     """Answer all of it."""
-    minutes = float(os.environ.get(SOAK_MINUTES, 0.25 if quick else 3))
+    minutes = float(os.environ.get(SOAK_MINUTES, 0.15 if quick else 3))
     return [
-        killed(10 if quick else 200),
+        killed(6 if quick else 200),
         throughput(50_000 if quick else 400_000),
-        latency(6.0 if quick else 30.0),
+        latency(4.0 if quick else 30.0),
         soak(60 * minutes),
     ]

@@ -88,6 +88,7 @@ def latency(seconds: float, rate: int = 1000) -> Table:
         notes=[
             "QoS 1 through mosquitto; publisher, broker and daemon on this machine, with commits"
         ],
+        headline=True,
     )
     table.add(len(delays), len(clock.counts), *map(float, np.quantile(delays, QUANTILES)))
     return table

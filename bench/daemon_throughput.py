@@ -65,6 +65,7 @@ def throughput(rows: int) -> Table:
             "asked for: Arrow and Parquet 0.5 of the monitor alone; CSV 0.5 of it or 0.33 of "
             "reading CSV, whichever is lower",
         ],
+        headline=True,
     )
     with tempfile.TemporaryDirectory() as name:
         folder = Path(name)

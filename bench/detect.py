@@ -25,6 +25,7 @@ def false_alarms(quick: bool) -> Table:
         f"False alarms: observed over requested rate, {BASELINE:,} baseline samples, "
         f"{samples:,} further ones",
         ["channels", "noise", *(f"{rate:g}" for rate in RATES), "expected at the least"],
+        headline=True,
     )
     for n in sizes:
         for noise in NOISES:
@@ -53,6 +54,7 @@ def power(quick: bool) -> Table:
         "Power: part of steps detected at one false alarm in 1,000, monitor and oracle",
         ["channels", "noise", "baseline", "rank (true)", "step in noise units", "monitor",
          "oracle", "short by"],
+        headline=True,
     )  # fmt: skip
     sizes = (8, 32) if quick else (8, 16, 32, 64, 128)
     cases = [(n, noise, m) for n in sizes for noise in ("Gaussian", "AR(1), 0.7")
@@ -100,6 +102,7 @@ def speed(quick: bool) -> Table:
         "Speed: 32 channels, rank 8, float64; microseconds per sample",
         ["samples per batch", "monitor", "bare scoring", "IncrementalPCA", "monitor : bare",
          "IncrementalPCA : monitor", "samples per second"],
+        headline=True,
     )  # fmt: skip
     plant = Plant(5, 32, 8)
     baseline = plant.run(BASELINE)

@@ -64,6 +64,7 @@ def threads(feeds: int, repetitions: int) -> Table:
         notes=["The ratio of all the time, and that of the median batch, in which few feeds end a "
                "block of 2,048 samples: learning from a block is done by NumPy, in calls too short "
                "for two threads to gain much. On a machine that others use the ratio says little."],
+        headline=True,
     )  # fmt: skip
     for rows in (1, 16, 64, 256, 1024):
         plant = Plant(32, feeds)
@@ -90,6 +91,7 @@ def growth(counts: tuple[int, ...]) -> Table:
         "Growth with the number of feeds: 16 channels, 16 rows of each per batch, 2 threads",
         ["feeds", "samples/s", "to 100 feeds", "kB per feed (nbytes)", "GB in all",
          "resident kB per feed"],
+        headline=True,
     )  # fmt: skip
     first = 0.0
     for feeds in counts:
@@ -164,6 +166,7 @@ def run(quick: bool) -> list[Table]:
         growth((100, 1000) if quick else (100, 1000, 10_000)),
         parking(100 if quick else 1000),
     ]
-    if importlib.util.find_spec("pyspark") and importlib.util.find_spec("bench.fleet_spark"):
+    # Spark takes a minute to start and to compile in its workers
+    if not quick and importlib.util.find_spec("pyspark"):
         tables += importlib.import_module("bench.fleet_spark").run(quick)
     return tables

@@ -93,6 +93,7 @@ def run(quick: bool) -> list[Table]:
         "in a micro-batch",
         ["feeds", "Spark samples/s", "Spark s per micro-batch", "Fleet samples/s",
          "Fleet : Spark", "KB of state per feed"],
+        headline=True,
     )  # fmt: skip
     session = spark.session("bench", master=f"local[{CORES}]", settings=SETTINGS)
     for feeds in (10, 100) if quick else (10, 100, 1000):

@@ -61,6 +61,7 @@ def against_incremental(quick: bool) -> Table:
         "Scoring and folding every sample, against IncrementalPCA.partial_fit (no scores)",
         ["n", "k", "block", "ours µs/sample", "theirs µs/sample", "ratio", "angle : batch",
          "theirs : batch"],
+        headline=True,
     )  # fmt: skip
     repetitions, seconds = (7, 0.01) if quick else (11, 0.1)
     for channels, rank in SIZES:
@@ -134,6 +135,7 @@ def singly(quick: bool) -> Table:
             "products",
             "bound",
         ],
+        headline=True,
     )
     for channels, rank in SIZES:
         rng = np.random.default_rng(channels)

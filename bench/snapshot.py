@@ -104,6 +104,7 @@ def speed(folder: Path, megabytes: int, repetitions: int) -> Table:
     table = Table(
         f"A basis of {rows} directions on {CHANNELS} channels, {megabytes} MiB",
         ["operation", "median s", "min s", "max s", "ratio", "wanted"],
+        headline=True,
     )
     wanted: dict[str, tuple[str, str]] = {
         "read and hash": ("read and hash", "1"),
