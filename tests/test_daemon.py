@@ -194,8 +194,14 @@ def test_a_terminal_that_is_closed_ends_the_run_well(tmp_path: Path) -> None:
     parent, child = pty.openpty()
     command = [sys.executable, "-m", "streambasis", "watch", str(feed), "--follow", "--quiet"]
     command += ["--home", str(home), "--baseline", str(BASELINE), "--snapshot-every", "200ms"]
-    with subprocess.Popen(command, stdout=child, stderr=child, cwd=ROOT) as process:
-        os.close(child)
+    # a run of the tests that outlives its own terminal would hand that on
+    earlier = signal.signal(signal.SIGHUP, signal.SIG_DFL)
+    try:
+        process = subprocess.Popen(command, stdout=child, stderr=child, cwd=ROOT)
+    finally:
+        signal.signal(signal.SIGHUP, earlier)
+    os.close(child)
+    try:
         deadline = time.monotonic() + PATIENCE
         state = home / "state.arrow"
         while not (state.exists() and read_state(state).parts["core"].facts["count"] == FIRST):
@@ -203,6 +209,9 @@ def test_a_terminal_that_is_closed_ends_the_run_well(tmp_path: Path) -> None:
             time.sleep(0.05)
         process.send_signal(signal.SIGHUP)
         assert process.wait(PATIENCE) == cli.OK
+    finally:
+        process.kill()
+        process.wait()
     os.close(parent)
 
 
