@@ -197,6 +197,21 @@ def test_a_message_published_twice_counts_once(
         assert feed.counts["duplicates"] == 20
 
 
+def test_what_comes_again_long_after_it_was_acknowledged_is_known(
+    shared: Mosquitto, topic: str
+) -> None:
+    """A broker that was restarted may send again what was acknowledged long before."""
+    url = waiting(shared, topic, objects(0, 900))
+    with opened(url, broker=settings(topic, queue=64)) as feed:
+        for start in range(0, 2700, 900):
+            assert read(feed, 900) == list(range(start, start + 900))
+            publish(shared, topic, objects(start + 900, start + 1800))
+        assert read(feed, 900) == list(range(2700, 3600))
+        publish(shared, topic, [*objects(100, 200), *objects(3600, 3601)])
+        assert read(feed, 1) == [3600]
+        assert feed.counts["duplicates"] == 100
+
+
 def test_without_time_or_sequence_every_message_counts(shared: Mosquitto, topic: str) -> None:
     """Equal values are equal values, not a duplicate."""
     url = waiting(shared, topic, ['{"a": 7}'] * 30)

@@ -35,6 +35,11 @@ twice what it may, or any number in a session that somebody began without a limi
 
 LEAST_REMEMBERED = 1024
 
+KNOWN = 1 << 15
+"""Messages remembered while the process lives, at least: a broker that was restarted was seen to
+send again what had been acknowledged 1,700 messages before. The position holds fewer, since it is
+written with every commit."""
+
 MOST_LOOKED_AT = 100
 """Messages that are looked at for one that shows the channels."""
 
@@ -65,7 +70,7 @@ class MqttFeed(PieceFeed):
     what tells the newest messages apart. Acknowledgements go out in the order of the messages, so
     what can come again is what has not been acknowledged, or has been a moment ago; that, and four
     times as many as the broker may send before the first of them is acknowledged, are remembered
-    (see REMEMBERED).
+    (see REMEMBERED), and more than that while the process lives (see KNOWN).
     """
 
     kind = "messages"
@@ -229,7 +234,7 @@ class MqttFeed(PieceFeed):
             self._receipts[self._serial] = [message.receipt]
         if identity is not None:
             self._known[identity] = self._serial
-            while len(self._known) > self._remembered:
+            while len(self._known) > max(KNOWN, self._remembered):
                 del self._known[next(iter(self._known))]
 
     def _is_known(self, content: Content, message: Message) -> bool:
