@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 
 from bench.harness import Table
+from bench.hearing import Silent
 
 CHANNELS = 8
 EVERY = (512, 1e9)
@@ -44,20 +45,11 @@ def rows_of(rows: int) -> list[bytes]:
 HEADER = ",".join(f"c{i}" for i in range(CHANNELS)).encode() + b"\n"
 
 
-class Follower:
+class Follower(Silent):
     """What a process reports to: says that it is at work, and ends a feed that has no end."""
 
     def __init__(self, asked: threading.Event, at_work: Any, last: int | None, pace: float) -> None:
         self._asked, self._at_work, self._last, self._pace = asked, at_work, last, pace
-
-    def opened(self, event: object) -> None:
-        """Hear an opening."""
-
-    def closed(self, event: object) -> None:
-        """Hear a closing."""
-
-    def adopted(self, event: object) -> None:
-        """Hear an adoption."""
 
     def warned(self, warning: str) -> None:
         """Hear of a malformed row."""

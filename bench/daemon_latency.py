@@ -11,6 +11,7 @@ import numpy as np
 import pyarrow as pa
 
 from bench.harness import Table
+from bench.hearing import Silent
 from bench.messages import Broker
 
 CHANNELS = 32
@@ -18,26 +19,13 @@ BASELINE = 1000
 QUANTILES = (0.5, 0.9, 0.99, 0.999, 1.0)
 
 
-class Clock:
+class Clock(Silent):
     """Writes down when which samples were decided."""
 
     def __init__(self, stop: threading.Event, samples: int) -> None:
         self._stop, self._samples = stop, samples
         self.counts: list[int] = []
         self.times: list[float] = []
-
-    def opened(self, event: object) -> None:
-        """Hear an opening."""
-
-    def closed(self, event: object) -> None:
-        """Hear a closing."""
-
-    def adopted(self, event: object) -> None:
-        """Hear an adoption."""
-
-    def warned(self, warning: str) -> None:
-        """Show what should not happen here."""
-        print(warning)
 
     def advance(self, samples: int) -> None:
         """Write down that so many samples are decided now."""

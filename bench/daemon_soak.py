@@ -14,6 +14,7 @@ import numpy as np
 import pyarrow as pa
 
 from bench.harness import Table
+from bench.hearing import Silent
 from bench.messages import Broker
 
 CHANNELS = 32
@@ -25,7 +26,7 @@ END_SECONDS = 15.0
 """Without a sample for so long after the last was published, something is lost."""
 
 
-class Observer:
+class Observer(Silent):
     """Looks at this process once a second, and makes the broker go away now and then."""
 
     def __init__(self, stop: threading.Event, samples: int, broker: Broker, away: list[float]):
@@ -35,15 +36,6 @@ class Observer:
         self.looks: list[tuple[float, float, int, int]] = []
         self.restarts = 0
         self.warnings: list[str] = []
-
-    def opened(self, event: object) -> None:
-        """Hear an opening."""
-
-    def closed(self, event: object) -> None:
-        """Hear a closing."""
-
-    def adopted(self, event: object) -> None:
-        """Hear an adoption."""
 
     def warned(self, warning: str) -> None:
         """Keep what should not happen here."""

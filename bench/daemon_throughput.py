@@ -14,28 +14,9 @@ import pyarrow.csv
 import pyarrow.parquet
 
 from bench.harness import Table, interleaved
+from bench.hearing import Silent
 
 CHANNELS = 32
-
-
-class Silent:
-    """Hears a run and says nothing."""
-
-    def opened(self, event: object) -> None:
-        """Hear an opening."""
-
-    def closed(self, event: object) -> None:
-        """Hear a closing."""
-
-    def adopted(self, event: object) -> None:
-        """Hear an adoption."""
-
-    def warned(self, warning: str) -> None:
-        """Show what should not happen here."""
-        print(warning)
-
-    def advance(self, samples: int) -> None:
-        """Hear the progress."""
 
 
 def feed_of(rows: int) -> tuple[pa.Table, np.ndarray]:
